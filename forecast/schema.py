@@ -1,0 +1,266 @@
+"""Every variable bendcast makes: name, CF standard name, units, long name, dimensions.
+
+One table used by every stage, so that a quantity is named and described once. Names follow the
+CF standard name table where it has one (https://cfconventions.org, version 90 and later); the
+others are the trade's own words.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+__all__ = [
+    "CEILINGS_M",
+    "DUCT_KINDS",
+    "LAYER_CLASSES",
+    "QUALITY_FLAGS",
+    "SIGHTLINE_STATES",
+    "VARIABLES",
+    "Variable",
+    "attributes",
+    "describe",
+]
+
+#: Ceilings (m above ground) under which the outlook asks for a duct.
+CEILINGS_M = (300.0, 1000.0, 3000.0)
+
+#: Layer class by refractivity gradient; the value is the code stored in `layer_class`.
+LAYER_CLASSES = {"sub_refractive": 0, "normal": 1, "super_refractive": 2, "trapping": 3}
+
+#: Duct kinds, ITU-R P.453 meaning; the value is the code stored in `duct_kind`.
+DUCT_KINDS = {"surface_duct": 1, "elevated_surface_duct": 2, "elevated_duct": 3}
+
+#: Sightline states; the value is the code stored in `sightline_state`.
+SIGHTLINE_STATES = {"shut": 0, "grazing": 1, "open": 2}
+
+#: Quality bits of the Profiles dataset; a level may carry several.
+QUALITY_FLAGS = {
+    "height_not_monotonic": 1 << 0,
+    "duplicate_level": 1 << 1,
+    "spike": 1 << 2,
+    "temperature_out_of_range": 1 << 3,
+    "humidity_out_of_range": 1 << 4,
+    "frozen_sensor": 1 << 5,
+    "supersaturation": 1 << 6,
+    "hydrostatic_mismatch": 1 << 7,
+    "gap_near_ground": 1 << 8,
+    "descending_branch": 1 << 9,
+    "first_level_not_at_station": 1 << 10,
+    "value_missing": 1 << 11,
+    "height_from_hypsometry": 1 << 12,
+    "interpolated": 1 << 13,
+}
+
+PROFILE = ("profile",)
+LEVEL = ("profile", "level")
+DUCT = ("profile", "duct")
+SIGHT = ("profile", "sightline")
+CEILING = ("profile", "ceiling")
+BAND = ("profile", "height_bin")
+
+
+@dataclass(frozen=True)
+class Variable:
+    """One row of the table."""
+
+    name: str
+    long_name: str
+    units: str | None = "1"
+    dims: tuple[str, ...] = ()
+    standard_name: str | None = None
+    extra: dict[str, Any] = field(default_factory=dict)
+
+
+def _codes(table: dict[str, int]) -> dict[str, Any]:
+    return {"flag_values": tuple(table.values()), "flag_meanings": " ".join(table)}
+
+
+_ROWS = [
+    # --- coordinates of a profile -------------------------------------------------------------
+    Variable("time", "valid time of the profile (launch time of an ascent)", None, PROFILE, "time"),
+    Variable(
+        "latitude", "latitude of the profile's lowest level", "degrees_north", PROFILE, "latitude"
+    ),
+    Variable(
+        "longitude", "longitude of the profile's lowest level", "degrees_east", PROFILE, "longitude"
+    ),
+    Variable("station", "station or grid point of the profile", None, PROFILE, "platform_name"),
+    Variable("lead_time", "time since the model run started", None, PROFILE, "forecast_period"),
+    Variable("source_kind", "ascent or model", None, PROFILE),
+    Variable("source_file", "file the profile was read from", None, PROFILE),
+    Variable("member", "ensemble member", "1", PROFILE, "realization"),
+    Variable("site", "site of the settings the profile serves", None, PROFILE),
+    Variable("surface_altitude", "altitude of the ground", "m", PROFILE, "surface_altitude"),
+    # --- Profiles -----------------------------------------------------------------------------
+    Variable("height", "height above ground or sea surface", "m", LEVEL, "height"),
+    Variable("altitude", "altitude above mean sea level", "m", LEVEL, "altitude"),
+    Variable("air_pressure", "air pressure", "Pa", LEVEL, "air_pressure"),
+    Variable("air_temperature", "air temperature", "K", LEVEL, "air_temperature"),
+    Variable("specific_humidity", "specific humidity", "kg kg-1", LEVEL, "specific_humidity"),
+    Variable("eastward_wind", "eastward wind", "m s-1", LEVEL, "eastward_wind"),
+    Variable("northward_wind", "northward wind", "m s-1", LEVEL, "northward_wind"),
+    Variable(
+        "quality",
+        "quality control flags",
+        None,
+        LEVEL,
+        "quality_flag",
+        {"flag_masks": tuple(QUALITY_FLAGS.values()), "flag_meanings": " ".join(QUALITY_FLAGS)},
+    ),
+    Variable(
+        "sea_surface_temperature",
+        "sea surface temperature",
+        "K",
+        PROFILE,
+        "sea_surface_temperature",
+    ),
+    Variable("surface_temperature", "skin temperature", "K", PROFILE, "surface_temperature"),
+    Variable("surface_air_pressure", "air pressure at the ground", "Pa", PROFILE,
+             "surface_air_pressure"),
+    Variable("air_temperature_2m", "air temperature at 2 m", "K", PROFILE, "air_temperature"),
+    Variable("specific_humidity_2m", "specific humidity at 2 m", "kg kg-1", PROFILE,
+             "specific_humidity"),
+    Variable("eastward_wind_10m", "eastward wind at 10 m", "m s-1", PROFILE, "eastward_wind"),
+    Variable("northward_wind_10m", "northward wind at 10 m", "m s-1", PROFILE, "northward_wind"),
+    Variable("boundary_layer_height", "boundary layer height", "m", PROFILE,
+             "atmosphere_boundary_layer_thickness"),
+    Variable("visibility", "horizontal visibility", "m", PROFILE, "visibility_in_air"),
+    # --- Refraction ---------------------------------------------------------------------------
+    Variable("earth_radius", "Euler radius of the Earth at the profile", "m", PROFILE),
+    Variable("refractivity", "refractivity N, (n - 1) 1e6", "1", LEVEL),
+    Variable("modified_refractivity", "modified refractivity M = N + 1e6 z / a", "1", LEVEL),
+    Variable(
+        "refractivity_gradient",
+        "gradient of N from this level to the next valid one",
+        "km-1",
+        LEVEL,
+    ),
+    Variable(
+        "ray_curvature",
+        "curvature of a level ray from this level to the next, positive towards the Earth",
+        "m-1",
+        LEVEL,
+    ),
+    Variable(
+        "effective_earth_radius_factor",
+        "effective Earth radius factor k from this level to the next",
+        "1",
+        LEVEL,
+    ),
+    Variable(
+        "layer_class",
+        "refraction class of the layer from this level to the next",
+        None,
+        LEVEL,
+        extra=_codes(LAYER_CLASSES),
+    ),
+    # --- Ducts --------------------------------------------------------------------------------
+    Variable("duct_count", "number of ducts", "1", PROFILE),
+    Variable("duct_kind", "kind of duct (ITU-R P.453)", None, DUCT, extra=_codes(DUCT_KINDS)),
+    Variable("duct_base", "height of the duct's base above ground", "m", DUCT),
+    Variable("duct_top", "height of the duct's top above ground", "m", DUCT),
+    Variable("duct_thickness", "thickness of the duct", "m", DUCT),
+    Variable("duct_strength", "M deficit: largest M in the duct less M at its top", "1", DUCT),
+    Variable("trapping_base", "height of the bottom of the trapping layer", "m", DUCT),
+    Variable("height_of_maximum", "height of the largest M in the duct", "m", DUCT),
+    Variable("grazing_angle", "critical grazing angle of the duct", "rad", DUCT),
+    Variable(
+        "longest_trapped_wavelength",
+        "longest wavelength trapped in the first mode (phase integral)",
+        "m",
+        DUCT,
+    ),
+    Variable("enclosed", "1 where the duct lies wholly inside another's extent", "1", DUCT),
+    # --- Sightlines ---------------------------------------------------------------------------
+    Variable("sightline_name", "name of the sightline", None, ("sightline",)),
+    Variable("observer_height", "height of the observer above the surface", "m", ("sightline",)),
+    Variable("target_height", "height of the target's top above the surface", "m", ("sightline",)),
+    Variable("target_base_height", "height of the target's lowest part that counts", "m",
+             ("sightline",)),
+    Variable("distance", "geodesic distance from observer to target", "m", ("sightline",)),
+    Variable("azimuth", "azimuth of the target seen from the observer", "degree", ("sightline",)),
+    Variable("sightline_state", "state of the sightline", None, SIGHT,
+             extra=_codes(SIGHTLINE_STATES)),
+    Variable("hidden_height", "lowest height visible at the target's distance", "m", SIGHT),
+    Variable("visible_extent", "height of the target's visible part", "m", SIGHT),
+    Variable("apparent_elevation",
+             "elevation angle at which the highest visible part of the target appears",
+             "rad", SIGHT),
+    Variable("hidden_height_straight", "hidden height with straight rays (no air)", "m",
+             ("sightline",)),
+    Variable("hidden_height_standard", "hidden height in the standard atmosphere", "m",
+             ("sightline",)),
+    Variable("apparent_elevation_straight", "elevation of the target's top with straight rays",
+             "rad", ("sightline",)),
+    Variable("apparent_elevation_standard",
+             "elevation of the target's top in the standard atmosphere", "rad", ("sightline",)),
+    # --- Outlook ------------------------------------------------------------------------------
+    Variable("ceiling", "ceiling under which a duct is asked for, above ground", "m", ("ceiling",)),
+    Variable("height_bin", "height above ground", "m", ("height_bin",), "height"),
+    Variable("member_count", "number of members behind the probabilities", "1", PROFILE),
+    Variable("duct_probability", "probability of a duct wholly under the ceiling", "1", CEILING),
+    Variable("duct_probability_lower", "lower bound (5 %) of the duct probability", "1", CEILING),
+    Variable("duct_probability_upper", "upper bound (95 %) of the duct probability", "1", CEILING),
+    Variable("duct_likelihood", "share of members with this height inside a duct", "1", BAND),
+    Variable("sightline_probability", "probability that the sightline is open", "1", SIGHT),
+    Variable("sightline_probability_lower", "lower bound (5 %) of the sightline probability", "1",
+             SIGHT),
+    Variable("sightline_probability_upper", "upper bound (95 %) of the sightline probability", "1",
+             SIGHT),
+    Variable("hidden_height_lower", "5 % quantile of the hidden height over members", "m", SIGHT),
+    Variable("hidden_height_upper", "95 % quantile of the hidden height over members", "m", SIGHT),
+    Variable("lowest_level", "height of the profile's lowest level above ground", "m", PROFILE),
+    Variable("near_ground_resolution", "mean level spacing in the lowest 300 m", "m", PROFILE),
+]
+
+#: The table by name.
+VARIABLES: dict[str, Variable] = {row.name: row for row in _ROWS}
+
+
+def attributes(name: str) -> dict[str, Any]:
+    """CF attributes of a variable of the table.
+
+    Parameters
+    ----------
+    name : str
+        A name in `VARIABLES`.
+
+    Returns
+    -------
+    dict
+        ``long_name`` and, where they apply, ``standard_name``, ``units``, flag attributes.
+    """
+    row = VARIABLES[name]
+    attrs: dict[str, Any] = {"long_name": row.long_name}
+    if row.standard_name:
+        attrs["standard_name"] = row.standard_name
+    if row.units is not None:
+        attrs["units"] = row.units
+    attrs.update(row.extra)
+    return attrs
+
+
+def describe(dataset: xr.Dataset, names: Iterable[str] | None = None) -> xr.Dataset:
+    """Write the table's attributes onto a dataset's variables, in place.
+
+    Parameters
+    ----------
+    dataset : xarray.Dataset
+        Any stage's dataset.
+    names : iterable of str, optional
+        Variables to describe; by default all that the table knows.
+
+    Returns
+    -------
+    xarray.Dataset
+        The same dataset.
+    """
+    for name in names if names is not None else list(dataset.variables):
+        if name in VARIABLES and name in dataset.variables:
+            dataset[name].attrs = attributes(str(name))
+    return dataset
