@@ -1,0 +1,1 @@
+"""Tests of bendcast; the tree mirrors the package."""
