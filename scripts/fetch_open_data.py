@@ -115,7 +115,7 @@ PACKAGES = {
             "78894c001d3e171d92f0d0bb827d5fb3d9a1c89c63551d95cd4f7fec2a2162da",
             False,
             "MIT",
-            ("tests/data/*", "tests/benchmark_data/*", "benchmark_data/*"),
+            ("tests/data/*", "tests/benchmark_data/*"),
         ),
         Package(
             "earthkit-data",
