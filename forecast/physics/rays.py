@@ -30,6 +30,7 @@ __all__ = ["EXTENSIONS", "Medium", "RayEnds", "build_medium", "trace_rays"]
 #: section 2.1; optical: dry air at 288 K with 6.5 K/km lapse (closed form, n − 1 ~ p/T).
 EXTENSIONS = {"radio": (STANDARD_GRADIENT, 7350.0), "optical": (-26.7, 10400.0)}
 
+_SNAP = 1e-9  # m; a launch this near a node is on it, where μ is known without interpolation
 _TOP_STEPS = np.array([250.0, 500.0, 1e3, 2e3, 4e3, 8e3, 16e3, 32e3, 64e3, 128e3])
 
 
@@ -59,9 +60,7 @@ class RayEnds(NamedTuple):
     blocked_at: np.ndarray
 
 
-def build_medium(
-    height: Any, refractivity: Any, earth_radius: Any, wave: str = "radio"
-) -> Medium:
+def build_medium(height: Any, refractivity: Any, earth_radius: Any, wave: str = "radio") -> Medium:
     """Prepare columns of refractivity for tracing.
 
     Parameters
@@ -171,7 +170,7 @@ def _build(z, n, radius, gradient, scale, steps, out_z, out_mu, count):  # pragm
 
 @njit(cache=True, nogil=True)
 def locate(z, mu, count, start):  # pragma: no cover - compiled
-    """Layer that holds conformal height `start`, and μ there."""
+    """Layer that holds conformal height `start`; the start, snapped to a node; and μ there."""
     low, high = 0, count - 1
     while high - low > 1:
         middle = (low + high) // 2
@@ -179,79 +178,130 @@ def locate(z, mu, count, start):  # pragma: no cover - compiled
             low = middle
         else:
             high = middle
+    if start - z[low] < _SNAP:
+        return low, z[low], mu[low]
+    if z[low + 1] - start < _SNAP and low + 2 < count:
+        return low + 1, z[low + 1], mu[low + 1]
     fraction = (start - z[low]) / (z[low + 1] - z[low])
-    return low, mu[low] + fraction * (mu[low + 1] - mu[low])
+    value = mu[low] + fraction * (mu[low + 1] - mu[low])
+    lower, upper = min(mu[low], mu[low + 1]), max(mu[low], mu[low + 1])
+    return low, start, min(max(value, lower), upper)
 
 
-@njit(cache=True, nogil=True)
+@njit(cache=True, nogil=True, error_model="numpy")
 def advance(
-    z, mu, count, layer, start, mu_start, energy, upward, distance, reflect, ceiling
+    z, mu, count, layer, start, mu_start, energy, upward, distance, reflect, with_slope
 ):  # pragma: no cover - compiled
     """Follow one ray; the workhorse of rays and sightlines.
 
-    ``energy`` is (1 + μ_start) sin²θ, which keeps full precision near level launches; ``ceiling``
-    ends a ray that climbs past that conformal height (np.inf: never).
+    ``energy`` is (1 + μ_start) sin²θ, which keeps full precision near level launches. A level
+    launch gets an energy of 1e-30 (1e-15 rad): bent like any other, and no slope is ever 0.
 
-    Returns Z at the end, slope w there, x reached, turning points, reflections.
+    Returns Z at the end, slope w there, x reached (less than the distance: blocked at the
+    surface), turning points, reflections and, if ``with_slope``, the derivative of the end by
+    the energy: of Z for a ray that arrived, of x·|w| at the surface for a blocked one.
     """
+    energy = max(energy, 1e-30)
     c2 = 1.0 + mu_start - energy
     inv_c = 1.0 / np.sqrt(c2)
-    w = np.sqrt(energy) * inv_c
-    if not upward:
-        w = -w
+    half_c = 0.5 / c2
+    root = np.sqrt(energy)  # C|w| at `here`
+    w = root * inv_c if upward else -root * inv_c
     i = layer
     here = start
     x = 0.0
+    x_slope = 0.0  # dx/d(energy) at `here`
     turns = 0
     bounces = 0
-    inside = True  # still on the launch layer, between its nodes
+    inside = True  # still in the launch layer, between its nodes
+    hop = 0.0  # length of the last hop, if the ray turned at this node just before
+    hop_slope = 0.0
     while True:
-        beta = (mu[i + 1] - mu[i]) / (z[i + 1] - z[i]) / (2.0 * c2)
-        rise = w > 0.0 or (w == 0.0 and beta > 0.0)
-        if w == 0.0 and beta == 0.0:
-            return here, w, distance, turns, bounces
+        beta = (mu[i + 1] - mu[i]) / (z[i + 1] - z[i]) * half_c
+        rise = w > 0.0
         node = i + 1 if rise else i
         left = distance - x
         disc = (mu[node] - mu_start) + energy
-        if disc > 0.0:
-            w1 = np.sqrt(disc) * inv_c
-            if not rise:
-                w1 = -w1
-            # A node reached with w = w1 = 0 cannot occur: beta would be 0.
+        crosses = disc > 0.0
+        if crosses:
+            root1 = np.sqrt(disc)
+            w1 = root1 * inv_c if rise else -root1 * inv_c
             dx = 2.0 * (z[node] - here) / (w + w1) if z[node] != here else 0.0
-            if dx >= left:
-                return here + left * (w + 0.5 * beta * left), w + beta * left, distance, turns, bounces
-            x += dx
+        else:
+            dx = -2.0 * w / beta
+        if dx >= left:
+            if not crosses and -w / beta < left:
+                turns += 1
+            end = here + left * (w + 0.5 * beta * left)
+            slope = 0.0
+            if with_slope:
+                w_slope = w * (0.5 / (root * root) + half_c)
+                slope = left * (w_slope + beta * half_c * left) - (w + beta * left) * x_slope
+            return end, w + beta * left, distance, turns, bounces, slope
+        x += dx
+        if crosses:
+            if with_slope:
+                x_slope -= dx * (half_c + 0.5 / (root * root1))
             here = z[node]
             w = w1
+            root = root1
             inside = False
+            hop = 0.0
             if rise:
-                if here > ceiling:
-                    return here, w, x, turns, bounces
                 i += 1
                 if i == count - 1:  # left the air for good: straight on in (x, Z)
-                    return here + w * (distance - x), w, distance, turns, bounces
+                    left = distance - x
+                    slope = left * w * (0.5 / (root * root) + half_c) - w * x_slope
+                    return here + w * left, w, distance, turns, bounces, slope
             elif i > 0:
                 i -= 1
             elif reflect:
                 w = -w
                 bounces += 1
             else:
-                return here, w, x, turns, bounces
+                slope = _blocked_slope(w, root, half_c, distance - x, x_slope)
+                return here, w, x, turns, bounces, slope
+            continue
+        dx_slope = dx * (0.5 / (root * root) - half_c) if with_slope else 0.0
+        x_slope += dx_slope
+        w = -w
+        turns += 1
+        if inside:
+            continue
+        if not rise:
+            i += 1
+        elif i > 0:
+            i -= 1
+        elif not reflect:
+            slope = _blocked_slope(w, root, half_c, distance - x, x_slope)
+            return here, w, x, turns, bounces, slope
         else:
-            dx = -2.0 * w / beta
-            if dx >= left:
-                if -w / beta < left:
-                    turns += 1
-                return here + left * (w + 0.5 * beta * left), w + beta * left, distance, turns, bounces
-            x += dx
+            # Skipping along the surface: whole hops are all alike, so take them at once.
             w = -w
-            turns += 1
-            if not inside:
-                i += -1 if rise else 1
+            more = np.floor((distance - x) / dx)
+            x += more * dx
+            x_slope += more * dx_slope
+            turns += int(more)
+            bounces += 1 + int(more)
+            continue
+        if hop > 0.0:
+            # Swinging about one node, both ways by the same slope: take whole swings at once.
+            more = np.floor((distance - x) / (hop + dx))
+            x += more * (hop + dx)
+            x_slope += more * (hop_slope + dx_slope)
+            turns += 2 * int(more)
+        hop = dx
+        hop_slope = dx_slope
 
 
-@njit(cache=True, nogil=True, parallel=True)
+@njit(cache=True, nogil=True, error_model="numpy")
+def _blocked_slope(w, root, half_c, missing, x_slope):  # pragma: no cover - compiled
+    """Derivative of −missing·|w| by the energy, where the ray met the surface."""
+    w_slope = abs(w) * (0.5 / (root * root) + half_c)
+    return abs(w) * x_slope - missing * w_slope
+
+
+@njit(cache=True, nogil=True, parallel=True, error_model="numpy")
 def _trace_all(
     z, mu, count, radius, height, elevation, distance, reflect, floats, counts
 ):  # pragma: no cover - compiled
@@ -262,15 +312,15 @@ def _trace_all(
         if count[c] < 2 or not (height[c, r] >= 0.0):
             continue
         start = radius[c] * np.log1p(height[c, r] / radius[c])
-        layer, mu_start = locate(z[c], mu[c], count[c], start)
+        layer, start, mu_start = locate(z[c], mu[c], count[c], start)
         energy = (1.0 + mu_start) * np.sin(elevation[c, r]) ** 2
-        end, w, x, turns, bounces = advance(
+        end, w, x, turns, bounces, _ = advance(
             z[c], mu[c], count[c], layer, start, mu_start, energy,
-            elevation[c, r] > 0.0, distance[c, r], reflect, np.inf,
+            elevation[c, r] > 0.0, distance[c, r], reflect, False,
         )  # fmt: skip
         floats[0, c, r] = radius[c] * np.expm1(end / radius[c])
         floats[1, c, r] = np.arctan(w)
         if x < distance[c, r]:
             floats[2, c, r] = x
-        counts[0, c, r] = turns
-        counts[1, c, r] = bounces
+        counts[0, c, r] = min(turns, 2**31 - 1)
+        counts[1, c, r] = min(bounces, 2**31 - 1)

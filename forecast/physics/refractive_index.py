@@ -152,7 +152,9 @@ def optical_refractivity(
     dry_molar_mass = 1e-3 * (28.9635 + 12.011 * (co2 - 400e-6))
     water_molar_mass = 0.018015
     dry_standard_density = (
-        101325.0 * dry_molar_mass / (_compressibility(288.15, 101325.0, 0.0) * gas_constant * 288.15)
+        101325.0
+        * dry_molar_mass
+        / (_compressibility(288.15, 101325.0, 0.0) * gas_constant * 288.15)
     )
     vapour_standard_density = (
         1333.0 * water_molar_mass / (_compressibility(293.15, 1333.0, 1.0) * gas_constant * 293.15)
