@@ -21,7 +21,7 @@ _FACE = {
     "SettingsError": "forecast.errors",
 }
 
-__all__ = ["__version__", *_FACE]  # noqa: PLE0604
+__all__ = ["__version__", *_FACE]
 
 
 def __getattr__(name: str) -> Any:

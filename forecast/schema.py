@@ -120,15 +120,22 @@ _ROWS = [
         "sea_surface_temperature",
     ),
     Variable("surface_temperature", "skin temperature", "K", PROFILE, "surface_temperature"),
-    Variable("surface_air_pressure", "air pressure at the ground", "Pa", PROFILE,
-             "surface_air_pressure"),
+    Variable(
+        "surface_air_pressure", "air pressure at the ground", "Pa", PROFILE, "surface_air_pressure"
+    ),
     Variable("air_temperature_2m", "air temperature at 2 m", "K", PROFILE, "air_temperature"),
-    Variable("specific_humidity_2m", "specific humidity at 2 m", "kg kg-1", PROFILE,
-             "specific_humidity"),
+    Variable(
+        "specific_humidity_2m", "specific humidity at 2 m", "kg kg-1", PROFILE, "specific_humidity"
+    ),
     Variable("eastward_wind_10m", "eastward wind at 10 m", "m s-1", PROFILE, "eastward_wind"),
     Variable("northward_wind_10m", "northward wind at 10 m", "m s-1", PROFILE, "northward_wind"),
-    Variable("boundary_layer_height", "boundary layer height", "m", PROFILE,
-             "atmosphere_boundary_layer_thickness"),
+    Variable(
+        "boundary_layer_height",
+        "boundary layer height",
+        "m",
+        PROFILE,
+        "atmosphere_boundary_layer_thickness",
+    ),
     Variable("visibility", "horizontal visibility", "m", PROFILE, "visibility_in_air"),
     # --- Refraction ---------------------------------------------------------------------------
     Variable("earth_radius", "Euler radius of the Earth at the profile", "m", PROFILE),
@@ -180,25 +187,40 @@ _ROWS = [
     Variable("sightline_name", "name of the sightline", None, ("sightline",)),
     Variable("observer_height", "height of the observer above the surface", "m", ("sightline",)),
     Variable("target_height", "height of the target's top above the surface", "m", ("sightline",)),
-    Variable("target_base_height", "height of the target's lowest part that counts", "m",
-             ("sightline",)),
+    Variable(
+        "target_base_height", "height of the target's lowest part that counts", "m", ("sightline",)
+    ),
     Variable("distance", "geodesic distance from observer to target", "m", ("sightline",)),
     Variable("azimuth", "azimuth of the target seen from the observer", "degree", ("sightline",)),
-    Variable("sightline_state", "state of the sightline", None, SIGHT,
-             extra=_codes(SIGHTLINE_STATES)),
+    Variable(
+        "sightline_state", "state of the sightline", None, SIGHT, extra=_codes(SIGHTLINE_STATES)
+    ),
     Variable("hidden_height", "lowest height visible at the target's distance", "m", SIGHT),
     Variable("visible_extent", "height of the target's visible part", "m", SIGHT),
-    Variable("apparent_elevation",
-             "elevation angle at which the highest visible part of the target appears",
-             "rad", SIGHT),
-    Variable("hidden_height_straight", "hidden height with straight rays (no air)", "m",
-             ("sightline",)),
-    Variable("hidden_height_standard", "hidden height in the standard atmosphere", "m",
-             ("sightline",)),
-    Variable("apparent_elevation_straight", "elevation of the target's top with straight rays",
-             "rad", ("sightline",)),
-    Variable("apparent_elevation_standard",
-             "elevation of the target's top in the standard atmosphere", "rad", ("sightline",)),
+    Variable(
+        "apparent_elevation",
+        "elevation angle at which the highest visible part of the target appears",
+        "rad",
+        SIGHT,
+    ),
+    Variable(
+        "hidden_height_straight", "hidden height with straight rays (no air)", "m", ("sightline",)
+    ),
+    Variable(
+        "hidden_height_standard", "hidden height in the standard atmosphere", "m", ("sightline",)
+    ),
+    Variable(
+        "apparent_elevation_straight",
+        "elevation of the target's highest visible part with straight rays",
+        "rad",
+        ("sightline",),
+    ),
+    Variable(
+        "apparent_elevation_standard",
+        "elevation of the target's highest visible part in the standard atmosphere",
+        "rad",
+        ("sightline",),
+    ),
     # --- Outlook ------------------------------------------------------------------------------
     Variable("ceiling", "ceiling under which a duct is asked for, above ground", "m", ("ceiling",)),
     Variable("height_bin", "height above ground", "m", ("height_bin",), "height"),
@@ -208,13 +230,19 @@ _ROWS = [
     Variable("duct_probability_upper", "upper bound (95 %) of the duct probability", "1", CEILING),
     Variable("duct_likelihood", "share of members with this height inside a duct", "1", BAND),
     Variable("sightline_probability", "probability that the sightline is open", "1", SIGHT),
-    Variable("sightline_probability_lower", "lower bound (5 %) of the sightline probability", "1",
-             SIGHT),
-    Variable("sightline_probability_upper", "upper bound (95 %) of the sightline probability", "1",
-             SIGHT),
+    Variable(
+        "sightline_probability_lower", "lower bound (5 %) of the sightline probability", "1", SIGHT
+    ),
+    Variable(
+        "sightline_probability_upper", "upper bound (95 %) of the sightline probability", "1", SIGHT
+    ),
     Variable("hidden_height_lower", "5 % quantile of the hidden height over members", "m", SIGHT),
     Variable("hidden_height_upper", "95 % quantile of the hidden height over members", "m", SIGHT),
     Variable("lowest_level", "height of the profile's lowest level above ground", "m", PROFILE),
+    Variable(
+        "near_ground_warming", "largest warming above the lowest level within 300 m", "K", PROFILE
+    ),
+    Variable("near_ground_warming_depth", "depth over which the air warms so", "m", PROFILE),
     Variable("near_ground_resolution", "mean level spacing in the lowest 300 m", "m", PROFILE),
 ]
 

@@ -17,7 +17,7 @@ from numba import njit, prange
 from forecast.physics.ducts import DuctTable, count_trapping_layers, duct_table
 from forecast.physics.refractive_index import refractivity_from_state
 
-__all__ = ["ColumnBatch", "analyse_columns"]
+__all__ = ["ColumnBatch", "analyse_columns", "analyse_refractivity"]
 
 _BLOCK = 64
 _state = njit(cache=True, nogil=True, inline="always")(refractivity_from_state)
@@ -63,15 +63,48 @@ def analyse_columns(
     if p.ndim != 2 or any(a.shape != p.shape or a.dtype != p.dtype for a in arrays):
         found = ", ".join(f"{a.shape} {a.dtype}" for a in arrays)
         raise ValueError(f"analyse_columns: four (column, level) arrays of one type; got {found}")
+    return _run(p, t, q, z, earth_radius, False)
+
+
+def analyse_refractivity(refractivity: Any, height: Any, earth_radius: Any) -> ColumnBatch:
+    """M, gradients, k and ducts of columns whose refractivity is known (light, or given N).
+
+    Parameters
+    ----------
+    refractivity, height : ndarray
+        N-units and m above ground, shape (column, level), of one float type.
+    earth_radius : array_like
+        Local Earth radius, m; scalar or (column,).
+
+    Returns
+    -------
+    ColumnBatch
+        As `analyse_columns`.
+
+    Raises
+    ------
+    ValueError
+        If shapes or types differ.
+    """
+    n, z = np.asarray(refractivity), np.asarray(height)
+    if n.ndim != 2 or n.shape != z.shape or n.dtype != z.dtype:
+        raise ValueError(
+            f"analyse_refractivity: N {n.shape} {n.dtype} and height {z.shape} {z.dtype} must be "
+            "(column, level) of one type"
+        )
+    return _run(n, n, n, z, earth_radius, True)
+
+
+def _run(p: Any, t: Any, q: Any, z: Any, earth_radius: Any, given: bool) -> ColumnBatch:
     radius = np.array(np.broadcast_to(np.asarray(earth_radius, dtype=float), p.shape[:1]))
     out = [np.empty_like(p) for _ in range(4)]
     count = np.empty(p.shape[0], dtype=np.int32)
-    _analyse(p, t, q, z, radius, *out, count)
+    _analyse(p, t, q, z, radius, given, *out, count)
     return ColumnBatch(*out, duct_table(z, out[1], count))
 
 
 @njit(cache=True, nogil=True, parallel=True, error_model="numpy")
-def _analyse(p, t, q, z, radius, out_n, out_m, out_g, out_k, count):  # pragma: no cover
+def _analyse(p, t, q, z, radius, given, out_n, out_m, out_g, out_k, count):  # pragma: no cover
     columns, levels = p.shape
     blocks = (columns + _BLOCK - 1) // _BLOCK
     for b in prange(blocks):
@@ -87,7 +120,9 @@ def _analyse(p, t, q, z, radius, out_n, out_m, out_g, out_k, count):  # pragma: 
             for j in range(width):
                 c = first + j
                 zi = np.float64(z[c, i])
-                n = _state(np.float64(p[c, i]), np.float64(t[c, i]), np.float64(q[c, i]))
+                n = np.float64(p[c, i])
+                if not given:  # else N came in the place of the pressure
+                    n = _state(n, np.float64(t[c, i]), np.float64(q[c, i]))
                 out_g[c, i] = np.nan
                 out_k[c, i] = np.nan
                 if not (np.isfinite(n) and zi > last_z[j] and zi < np.inf):
