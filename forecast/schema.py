@@ -15,6 +15,7 @@ if TYPE_CHECKING:
     import xarray as xr
 
 __all__ = [
+    "CAUTION",
     "CEILINGS_M",
     "DUCT_KINDS",
     "LAYER_CLASSES",
@@ -25,6 +26,12 @@ __all__ = [
     "attributes",
     "describe",
 ]
+
+#: The caution that every product carries.
+CAUTION = (
+    "Not for navigation or safety of life. Never point optics near the Sun. Lasers, masts and "
+    "transmitters fall under local codes and licensed practice."
+)
 
 #: Ceilings (m above ground) under which the outlook asks for a duct.
 CEILINGS_M = (300.0, 1000.0, 3000.0)

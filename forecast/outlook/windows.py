@@ -1,0 +1,245 @@
+"""Which spans of time are worth going for, and the physical reason in a sentence of numbers."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from datetime import UTC, datetime
+from typing import TYPE_CHECKING
+
+import numpy as np
+import xarray as xr
+
+from forecast.physics.moisture import CELSIUS_OFFSET
+from forecast.schema import DUCT_KINDS
+
+if TYPE_CHECKING:
+    from forecast.settings import Settings
+
+__all__ = ["Window", "find_windows"]
+
+_GAP = 1.5  # a pause longer than this many usual steps ends a window
+_KIND_WORDS = {code: name.replace("_", " ") for name, code in DUCT_KINDS.items()}
+_LOW_LAYER = 65.0  # m, the lowest layer for which Rec. ITU-R P.453 gives gradient statistics
+
+
+@dataclass(frozen=True)
+class Window:
+    """A span of valid times over the threshold.
+
+    Attributes
+    ----------
+    site : str
+        Site.
+    kind : str
+        ``sightline`` or ``duct``.
+    subject : str
+        The sightline's name, or "duct under 300 m" and so on.
+    start, end, best_time : datetime
+        First, last and likeliest valid time, UTC.
+    probability, lower, upper : float
+        At the likeliest valid time, with the 90 % interval.
+    valid_times : int
+        Valid times in the window.
+    reason : str
+        Why, from the numbers of the likeliest valid time.
+    """
+
+    site: str
+    kind: str
+    subject: str
+    start: datetime
+    end: datetime
+    best_time: datetime
+    probability: float
+    lower: float
+    upper: float
+    valid_times: int
+    reason: str
+
+
+def find_windows(outlook: xr.Dataset, settings: Settings) -> list[Window]:
+    """Runs of valid times whose probability reaches the threshold, best first.
+
+    Parameters
+    ----------
+    outlook : xarray.Dataset
+        From `forecast.make_outlook`.
+    settings : forecast.settings.Settings
+        Holds ``window_threshold``.
+
+    Returns
+    -------
+    list of Window
+        Sightlines first, then ducts; within each by probability, its lower bound and time. A duct
+        window inside one of a lower ceiling adds nothing and is left out.
+    """
+    windows: list[Window] = []
+    site = outlook["site"].values.astype(str)
+    for name in dict.fromkeys(site):
+        rows = np.flatnonzero(site == name)
+        for s in range(outlook.sizes.get("sightline", 0)):
+            if str(outlook["sightline_site"].values[s]) == name:
+                subject = str(outlook["sightline_name"].values[s])
+                for run in _runs(outlook, rows, "sightline", s, settings.window_threshold):
+                    windows.append(_window(outlook, run, "sightline", s, subject))
+        lower: list[tuple[datetime, datetime]] = []
+        for c, ceiling in enumerate(outlook["ceiling"].values):
+            for run in _runs(outlook, rows, "duct", c, settings.window_threshold):
+                window = _window(outlook, run, "duct", c, f"duct under {_height(ceiling)}")
+                if not any(a <= window.start and window.end <= b for a, b in lower):
+                    windows.append(window)
+            lower += [(w.start, w.end) for w in windows if w.site == name and w.kind == "duct"]
+    order = {"sightline": 0, "duct": 1}
+    windows.sort(
+        key=lambda w: (order[w.kind], -w.probability, -w.lower, w.start, w.site, w.subject)
+    )
+    return windows
+
+
+def _runs(
+    outlook: xr.Dataset, rows: np.ndarray, kind: str, item: int, threshold: float
+) -> list[np.ndarray]:
+    """Rows of one site in which the probability stays at or above the threshold."""
+    chance = outlook[f"{kind}_probability"].values[rows, item]
+    time = outlook["time"].values[rows].astype("datetime64[s]").astype(np.int64)
+    if rows.size == 0:
+        return []
+    step = np.diff(time).astype(float)
+    # Against both neighbours: ascents every 6 h and hourly model times may share a site.
+    usual = np.maximum(np.append(step[1:], -np.inf), np.insert(step[:-1], 0, -np.inf))
+    pause = (step > _GAP * usual) & np.isfinite(usual)
+    likely = np.nan_to_num(chance, nan=-1.0) >= threshold
+    breaks = np.flatnonzero((np.diff(likely.astype(int)) != 0) | pause) + 1
+    return [
+        rows[part]
+        for part in np.split(np.arange(rows.size), breaks)
+        if part.size and likely[part[0]]
+    ]
+
+
+def _window(outlook: xr.Dataset, run: np.ndarray, kind: str, item: int, subject: str) -> Window:
+    chance = outlook[f"{kind}_probability"].values[run, item]
+    lower = outlook[f"{kind}_probability_lower"].values[run, item]
+    upper = outlook[f"{kind}_probability_upper"].values[run, item]
+    best = int(np.lexsort((np.arange(run.size), -lower, -chance))[0])
+    row = int(run[best])
+    times = [_utc(outlook["time"].values[i]) for i in (run[0], run[-1], row)]
+    if kind == "sightline":
+        reason = _sightline_reason(outlook, row, item)
+    else:
+        reason = _duct_reason(outlook, row, float(outlook["ceiling"].values[item]))
+    return Window(
+        str(outlook["site"].values[row]),
+        kind,
+        subject,
+        times[0],
+        times[1],
+        times[2],
+        float(chance[best]),
+        float(lower[best]),
+        float(upper[best]),
+        int(run.size),
+        reason,
+    )
+
+
+def _utc(time: np.datetime64) -> datetime:
+    return datetime.fromtimestamp(int(time.astype("datetime64[s]").astype(np.int64)), UTC)
+
+
+def _height(metres: float) -> str:
+    return f"{metres:.0f} m" if metres < 1000.0 else f"{metres / 1000.0:g} km"
+
+
+def _sightline_reason(outlook: xr.Dataset, row: int, item: int) -> str:
+    """Why a sightline is likely open: hidden height now and usually, then the bending."""
+    hidden = float(outlook["hidden_height"].values[row, item])
+    low = float(outlook["hidden_height_lower"].values[row, item])
+    high = float(outlook["hidden_height_upper"].values[row, item])
+    standard = float(outlook["hidden_height_standard"].values[item])
+    straight = float(outlook["hidden_height_straight"].values[item])
+    top = float(outlook["target_height"].values[item])
+    parts = [
+        f"The lowest {hidden:.0f} m are hidden (90 % of members {low:.0f} to {high:.0f} m) against "
+        f"{standard:.0f} m in standard air and {straight:.0f} m with straight rays; "
+        f"the target reaches {top:.0f} m."
+    ]
+    if str(outlook["sightline_wave"].values[item]) == "optical":
+        parts.append(_warming(outlook, row))
+    parts.append(_lowest_layer(outlook, row))
+    parts.append(_duct_sentence(outlook, row, np.inf))
+    parts.append(_limits(outlook, row))
+    return " ".join(part for part in parts if part)
+
+
+def _duct_reason(outlook: xr.Dataset, row: int, ceiling: float) -> str:
+    duct = _duct_sentence(outlook, row, ceiling)
+    if not duct:
+        duct = (
+            "The profile itself has no duct of the strength asked for here; it lies so near to one "
+            "that most members do."
+        )
+    return " ".join([duct, _lowest_layer(outlook, row), _limits(outlook, row)]).strip()
+
+
+def _warming(outlook: xr.Dataset, row: int) -> str:
+    warming = float(outlook["near_ground_warming"].values[row])
+    depth = float(outlook["near_ground_warming_depth"].values[row])
+    if not warming > 0.1 or not depth > 0.0:
+        return ""
+    lowest = float(outlook["air_temperature"].values[row, 0]) - CELSIUS_OFFSET
+    return f"Air warms by {warming:.1f} K in the lowest {depth:.0f} m (from {lowest:.1f} °C)."
+
+
+def _lowest_layer(outlook: xr.Dataset, row: int) -> str:
+    """Mean radio gradient and k of the lowest 65 m, as P.453 counts them."""
+    z = outlook["height"].values[row]
+    n = outlook["refractivity"].values[row]
+    good = np.isfinite(z) & np.isfinite(n)
+    if good.sum() < 2 or z[good][-1] < z[good][0] + _LOW_LAYER:
+        return ""
+    z, n = z[good], n[good]
+    fall = (np.interp(z[0] + _LOW_LAYER, z, n) - n[0]) / _LOW_LAYER  # N per m
+    bend = 1.0 + 1e-6 * fall * float(outlook["earth_radius"].values[row])
+    k = (
+        "more than 10, or rays bend as much as the Earth or more"
+        if bend < 0.1
+        else f"{1 / bend:.2f}"
+    )
+    return (
+        f"For radio, N falls by {-1e3 * fall:.0f} per km in the lowest {_LOW_LAYER:.0f} m (k {k})."
+        if fall < 0.0
+        else f"For radio, N rises by {1e3 * fall:.0f} per km in the lowest {_LOW_LAYER:.0f} m."
+    )
+
+
+def _duct_sentence(outlook: xr.Dataset, row: int, ceiling: float) -> str:
+    """Name the strongest radio duct of the profile that lies under the ceiling."""
+    strength = outlook["duct_strength"].values[row]
+    top = outlook["duct_top"].values[row]
+    counts = (strength >= float(outlook.attrs["minimum_duct_strength"])) & (top <= ceiling)
+    if not counts.any():
+        return ""
+    d = int(np.argmax(np.where(counts, strength, -np.inf)))
+    kind = _KIND_WORDS[int(outlook["duct_kind"].values[row, d])]
+    base = float(outlook["duct_base"].values[row, d])
+    wavelength = float(outlook["longest_trapped_wavelength"].values[row, d])
+    frequency = 299792458.0 / wavelength / 1e9
+    held = f"{frequency:.1f} GHz" if frequency >= 1.0 else f"{1e3 * frequency:.0f} MHz"
+    return (
+        f"{kind.capitalize()} from {base:.0f} to {top[d]:.0f} m, {strength[d]:.0f} M-units strong, "
+        f"holds radio waves above about {held}."
+    )
+
+
+def _limits(outlook: xr.Dataset, row: int) -> str:
+    """Say what the data cannot resolve."""
+    lowest = float(outlook["lowest_level"].values[row])
+    spacing = float(outlook["near_ground_resolution"].values[row])
+    kind = "Ascent" if str(outlook["source_kind"].values[row]) == "ascent" else "Model profile"
+    lead = outlook["lead_time"].values[row].astype("timedelta64[s]").astype(float) / 3600.0
+    ahead = f", {lead:.0f} h ahead" if lead > 0 else ""
+    return (
+        f"{kind}{ahead}: lowest level at {lowest:.0f} m, then one every {spacing:.0f} m; "
+        "thinner layers go unseen."
+    )
