@@ -164,22 +164,29 @@ def _sightline_reason(outlook: xr.Dataset, row: int, item: int) -> str:
         f"{standard:.0f} m in standard air and {straight:.0f} m with straight rays; "
         f"the target reaches {top:.0f} m."
     ]
+    if top > straight:
+        parts.append("It stands above the horizon even without refraction.")
+    elif top > standard:
+        parts.append("It is open in standard air too.")
     if str(outlook["sightline_wave"].values[item]) == "optical":
         parts.append(_warming(outlook, row))
     parts.append(_lowest_layer(outlook, row))
-    parts.append(_duct_sentence(outlook, row, np.inf))
+    # Only a duct that the path can enter explains anything.
+    reach = max(top, float(outlook["observer_height"].values[item]))
+    parts.append(_duct_sentence(outlook, row, base_under=reach))
     parts.append(_limits(outlook, row))
     return " ".join(part for part in parts if part)
 
 
 def _duct_reason(outlook: xr.Dataset, row: int, ceiling: float) -> str:
-    duct = _duct_sentence(outlook, row, ceiling)
+    duct = _duct_sentence(outlook, row, top_under=ceiling)
     if not duct:
         duct = (
             "The profile itself has no duct of the strength asked for here; it lies so near to one "
             "that most members do."
         )
-    return " ".join([duct, _lowest_layer(outlook, row), _limits(outlook, row)]).strip()
+    parts = [duct, _lowest_layer(outlook, row), _limits(outlook, row)]
+    return " ".join(part for part in parts if part)
 
 
 def _warming(outlook: xr.Dataset, row: int) -> str:
@@ -199,25 +206,27 @@ def _lowest_layer(outlook: xr.Dataset, row: int) -> str:
     if good.sum() < 2 or z[good][-1] < z[good][0] + _LOW_LAYER:
         return ""
     z, n = z[good], n[good]
-    fall = (np.interp(z[0] + _LOW_LAYER, z, n) - n[0]) / _LOW_LAYER  # N per m
-    bend = 1.0 + 1e-6 * fall * float(outlook["earth_radius"].values[row])
-    k = (
-        "more than 10, or rays bend as much as the Earth or more"
-        if bend < 0.1
-        else f"{1 / bend:.2f}"
-    )
-    return (
-        f"For radio, N falls by {-1e3 * fall:.0f} per km in the lowest {_LOW_LAYER:.0f} m (k {k})."
-        if fall < 0.0
-        else f"For radio, N rises by {1e3 * fall:.0f} per km in the lowest {_LOW_LAYER:.0f} m."
-    )
+    slope = (np.interp(z[0] + _LOW_LAYER, z, n) - n[0]) / _LOW_LAYER  # N per m
+    if slope >= 0.0:
+        return f"For radio, N rises by {1e3 * slope:.0f} per km in the lowest {_LOW_LAYER:.0f} m."
+    bend = 1.0 + 1e-6 * slope * float(outlook["earth_radius"].values[row])
+    if bend <= 0.0:
+        k = "level rays bend more than the Earth"
+    else:
+        k = f"k {1.0 / bend:.2f}" if bend > 0.1 else "k above 10"
+    fall = f"N falls by {-1e3 * slope:.0f} per km in the lowest {_LOW_LAYER:.0f} m"
+    return f"For radio, {fall} ({k})."
 
 
-def _duct_sentence(outlook: xr.Dataset, row: int, ceiling: float) -> str:
-    """Name the strongest radio duct of the profile that lies under the ceiling."""
+def _duct_sentence(
+    outlook: xr.Dataset, row: int, *, top_under: float = np.inf, base_under: float = np.inf
+) -> str:
+    """Name the strongest radio duct of the profile whose top and base lie under the bounds."""
     strength = outlook["duct_strength"].values[row]
     top = outlook["duct_top"].values[row]
-    counts = (strength >= float(outlook.attrs["minimum_duct_strength"])) & (top <= ceiling)
+    least = float(outlook.attrs["minimum_duct_strength"])
+    counts = (strength >= least) & (top <= top_under)
+    counts &= outlook["duct_base"].values[row] <= base_under
     if not counts.any():
         return ""
     d = int(np.argmax(np.where(counts, strength, -np.inf)))
