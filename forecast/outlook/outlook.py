@@ -408,9 +408,15 @@ def _member_columns(
         ]
         sizes = [draws.error_sizes(k, ld) for k, ld in zip(kind, lead, strict=True)]
         batch = draws.perturb(
-            *(state[name][index] for name in _STATE),
-            sizes, identity, settings.members, settings.seed,
-        )  # fmt: skip
+            state["height"][index],
+            state["air_pressure"][index],
+            state["air_temperature"][index],
+            state["specific_humidity"][index],
+            sizes,
+            identity,
+            settings.members,
+            settings.seed,
+        )
         for name in _STATE:
             a = getattr(batch, name)
             parts[name].append(a.reshape(-1, a.shape[-1]))

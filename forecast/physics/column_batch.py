@@ -97,10 +97,10 @@ def analyse_refractivity(refractivity: Any, height: Any, earth_radius: Any) -> C
 
 def _run(p: Any, t: Any, q: Any, z: Any, earth_radius: Any, given: bool) -> ColumnBatch:
     radius = np.array(np.broadcast_to(np.asarray(earth_radius, dtype=float), p.shape[:1]))
-    out = [np.empty_like(p) for _ in range(4)]
+    n, m, gradient, k = (np.empty_like(p) for _ in range(4))
     count = np.empty(p.shape[0], dtype=np.int32)
-    _analyse(p, t, q, z, radius, given, *out, count)
-    return ColumnBatch(*out, duct_table(z, out[1], count))
+    _analyse(p, t, q, z, radius, given, n, m, gradient, k, count)
+    return ColumnBatch(n, m, gradient, k, duct_table(z, m, count))
 
 
 @njit(cache=True, nogil=True, parallel=True, error_model="numpy")

@@ -84,7 +84,7 @@ def refract(profiles: xr.Dataset, wave: str = "radio", wavelength: float = 550e-
         "earth_radius": ("profile", radius),
     }
     coords = {name: c for name, c in profiles.coords.items() if c.dims == ("profile",)}
-    attrs = {"wave": wave}
+    attrs: dict[str, Any] = {"wave": wave}
     if wave == "optical":
         attrs["wavelength"] = wavelength
     return describe(xr.Dataset(data, coords=coords, attrs=attrs))

@@ -35,7 +35,7 @@ _FIELDS = 8  # base, top, strength, trapping base, height of maximum, angle, wav
 class DuctTable(NamedTuple):
     """Ducts of a batch of columns; arrays (column, duct), NaN (kind −1, enclosed 0) where none."""
 
-    count: np.ndarray
+    count: np.ndarray  # type: ignore[assignment]  # not tuple.count
     kind: np.ndarray
     base: np.ndarray
     top: np.ndarray

@@ -43,7 +43,7 @@ class Medium(NamedTuple):
 
     z: np.ndarray
     mu: np.ndarray
-    count: np.ndarray
+    count: np.ndarray  # type: ignore[assignment]  # not tuple.count
     radius: np.ndarray
 
 
