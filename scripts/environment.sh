@@ -30,7 +30,7 @@ ready_environment() {
     for made in "$extras" dev test; do # dev holds test, and each holds the plain package
         [ "$extras" = dev ] && made=dev
         if [ "$(cat "$venv/installed-$made" 2>/dev/null)" = "$wanted" ] &&
-            "$env_python" -c 'import forecast' </dev/null 2>/dev/null; then
+            "$env_python" -I -c 'import forecast' </dev/null 2>/dev/null; then
             echo "== environment: $venv (already complete)"
             return
         fi

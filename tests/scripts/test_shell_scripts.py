@@ -31,7 +31,7 @@ def test_a_complete_environment_is_used_as_it_is(script: str, tmp_path: Path) ->
     # Stands in for every program of the environment and ends the script with a code of its own.
     for name in ("python", "bendcast"):
         program = venv / "bin" / name
-        program.write_text('#!/bin/sh\n[ "$2" = "import forecast" ] || exit 71\n')
+        program.write_text('#!/bin/sh\n[ "$3" = "import forecast" ] || exit 71\n')
         program.chmod(0o755)
     sums = subprocess.run(
         ["cksum"], input=(ROOT / "pyproject.toml").read_bytes(), capture_output=True, check=True
