@@ -2,8 +2,8 @@
 
 Radio: Rec. ITU-R P.453-14, Annex 1, the three-term form with dry-air pressure; the coefficients
 of Rüeger (2002) ("best average", from memory) are selectable as a second opinion. Light: Ciddor
-(1996), Applied Optics 35, 1566–1573, phase index, with the saturation vapour pressure replaced by
-the vapour that the profile really holds.
+(1996), Applied Optics 35, 1566–1573, phase and group index, with the saturation vapour pressure
+replaced by the vapour that the profile really holds; Birch & Downs (1993, 1994) as a check.
 
 The radio formula is written once, as scalar arithmetic, and serves numpy arrays here and compiled
 kernels elsewhere.
@@ -25,6 +25,7 @@ __all__ = [
     "OPTICAL_WAVELENGTHS",
     "RADIO_COEFFICIENTS",
     "optical_refractivity",
+    "optical_refractivity_birch_downs",
     "radio_refractivity",
     "refractivity_from_state",
 ]
@@ -98,8 +99,9 @@ def optical_refractivity(
     specific_humidity: Any,
     wavelength: float = 550e-9,
     co2: float = 450e-6,
+    group: bool = False,
 ) -> Any:
-    """Optical phase refractivity (n − 1) 1e6 of moist air after Ciddor (1996).
+    """Optical refractivity (n − 1) 1e6 of moist air after Ciddor (1996).
 
     Parameters
     ----------
@@ -113,6 +115,9 @@ def optical_refractivity(
         Vacuum wavelength, m, 300e-9…1700e-9.
     co2 : float
         Mole fraction of carbon dioxide.
+    group : bool
+        The group index ``n − λ dn/dλ`` (Ciddor & Hill 1999, Appl. Opt. 38, 1663–1667) in place
+        of the phase index: for pulses and modulated light.
 
     Returns
     -------
@@ -128,12 +133,7 @@ def optical_refractivity(
     ----------
     Ciddor, P. E. (1996), Appl. Opt. 35, 1566–1573, eqs. 1–5 and appendices A, B.
     """
-    low, high = OPTICAL_WAVELENGTHS
-    if not low <= wavelength <= high:
-        raise ValueError(
-            f"optical_refractivity: wavelength {wavelength * 1e9:.0f} nm; Ciddor's equations "
-            f"hold for {low * 1e9:.0f} to {high * 1e9:.0f} nm"
-        )
+    _check_wavelength("optical_refractivity", wavelength)
     p = np.asarray(pressure, dtype=float)
     t_k = np.asarray(temperature, dtype=float)
     q = np.asarray(specific_humidity, dtype=float)
@@ -142,10 +142,17 @@ def optical_refractivity(
     vapour_fraction = vapour_pressure_from_specific_humidity(q, 1.0)
 
     sigma2 = (1e-6 / wavelength) ** 2  # (µm^-1)^2
-    dry_standard = 1e-8 * (5792105.0 / (238.0185 - sigma2) + 167917.0 / (57.362 - sigma2))
+    dry_standard = 1e-8 * (
+        5792105.0 * _term(238.0185, sigma2, group) + 167917.0 * _term(57.362, sigma2, group)
+    )
     dry_standard *= 1.0 + 0.534e-6 * (co2 * 1e6 - 450.0)
+    # n as a power series in σ: n − λ dn/dλ = n + σ dn/dσ multiplies each σ^2j by 2j + 1.
+    weight = (1.0, 3.0, 5.0, 7.0) if group else (1.0, 1.0, 1.0, 1.0)
     vapour_standard = 1.022e-8 * (
-        295.235 + 2.6422 * sigma2 - 0.032380 * sigma2**2 + 0.004028 * sigma2**3
+        weight[0] * 295.235
+        + weight[1] * 2.6422 * sigma2
+        - weight[2] * 0.032380 * sigma2**2
+        + weight[3] * 0.004028 * sigma2**3
     )
 
     gas_constant = 8.314510
@@ -166,6 +173,61 @@ def optical_refractivity(
         dry_density / dry_standard_density * dry_standard
         + vapour_density / vapour_standard_density * vapour_standard
     )
+
+
+def optical_refractivity_birch_downs(
+    pressure: Any, temperature: Any, specific_humidity: Any, wavelength: float = 550e-9
+) -> Any:
+    """Optical phase refractivity (n − 1) 1e6 after Birch & Downs: the second opinion.
+
+    Parameters
+    ----------
+    pressure, temperature, specific_humidity, wavelength
+        As in `optical_refractivity`; the equations are meant for laboratory air, 5…30 °C, 450
+        µmol/mol CO2. Vapour enters by its partial pressure, with the temperature dependence of
+        the water term that the NIST documentation adds.
+
+    Returns
+    -------
+    ndarray or float
+        (n − 1) 1e6.
+
+    Raises
+    ------
+    ValueError
+        If the wavelength lies outside 300…1700 nm.
+
+    References
+    ----------
+    Birch, K. P. and Downs, M. J. (1993), Metrologia 30, 155–162; (1994) 31, 315–316; water term:
+    Stone & Zimmermann, NIST Engineering Metrology Toolbox (from its documentation).
+    """
+    _check_wavelength("optical_refractivity_birch_downs", wavelength)
+    p = np.asarray(pressure, dtype=float)
+    t_k = np.asarray(temperature, dtype=float)
+    t_c = t_k - CELSIUS_OFFSET
+    e = vapour_pressure_from_specific_humidity(specific_humidity, p)
+    sigma2 = (1e-6 / wavelength) ** 2
+    standard = 1e-8 * (8342.54 + 2406147.0 / (130.0 - sigma2) + 15998.0 / (38.9 - sigma2))
+    density = p / 96095.43 * (1.0 + 1e-8 * (0.601 - 0.00972 * t_c) * p) / (1.0 + 0.0036610 * t_c)
+    water = 292.75 / t_k * (3.7345 - 0.0401 * sigma2) * 1e-10 * e
+    return 1e6 * (standard * density - water)
+
+
+def _check_wavelength(function: str, wavelength: float) -> None:
+    low, high = OPTICAL_WAVELENGTHS
+    if not low <= wavelength <= high:
+        raise ValueError(
+            f"{function}: wavelength {wavelength * 1e9:.0f} nm; the equations hold for "
+            f"{low * 1e9:.0f} to {high * 1e9:.0f} nm"
+        )
+
+
+def _term(resonance: float, sigma2: float, group: bool) -> float:
+    """Dispersion term 1/(k − σ²), or (k + σ²)/(k − σ²)² for the group index."""
+    if group:
+        return (resonance + sigma2) / (resonance - sigma2) ** 2
+    return 1.0 / (resonance - sigma2)
 
 
 def _compressibility(t_k: Any, p: Any, vapour_fraction: Any) -> Any:
