@@ -1,0 +1,1 @@
+"""From files to the Profiles dataset: recognise, read, check, assemble."""
