@@ -74,6 +74,7 @@ class Settings:
     window_threshold: float = 0.5
     minimum_duct_strength: float = 2.0
     chart_top: float = 3000.0
+    timezone: str = "UTC"
     names: dict[str, str] = field(default_factory=dict)
     base: Path = Path()
     digest: str = ""

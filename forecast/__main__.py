@@ -1,0 +1,5 @@
+"""``python -m forecast`` is the ``bendcast`` command."""
+
+from forecast.cli import main
+
+raise SystemExit(main())

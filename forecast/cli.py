@@ -1,0 +1,330 @@
+"""The ``bendcast`` command: what was asked for, in which words it is answered, exit codes.
+
+Nothing is computed here, and nothing heavy is imported before a command needs it.
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import sys
+from typing import TYPE_CHECKING
+
+from forecast import __version__
+
+if TYPE_CHECKING:
+    from pathlib import Path
+
+    from forecast.progress import Reporter
+    from forecast.settings import Settings
+
+__all__ = ["main"]
+
+_EPILOG = """\
+examples:
+  bendcast inspect ascents/*.nc              what would be taken for what, and what is refused
+  bendcast chart ascents/*.nc -o charts      chart and netCDF without settings
+  bendcast check coast.toml                  are the settings right
+  bendcast nightly coast.toml                the scheduled run
+
+exit codes:
+  0  all done                       4  nothing usable
+  1  unexpected error               5  settings wrong
+  2  wrong usage                    6  output could not be written
+  3  done, some inputs set aside    130  interrupted
+
+Not for navigation or safety of life. Never point optics near the Sun.
+"""
+
+EXIT_UNEXPECTED = 1
+EXIT_SETTINGS_WRONG = 5
+EXIT_INTERRUPTED = 130
+
+
+def main(argv: list[str] | None = None) -> int:
+    """Run the command.
+
+    Parameters
+    ----------
+    argv : list of str, optional
+        Arguments; those of the process by default.
+
+    Returns
+    -------
+    int
+        Exit code, as ``bendcast --help`` lists them.
+    """
+    arguments = _parser().parse_args(argv)
+    try:
+        code = arguments.run(arguments)
+        sys.stdout.flush()
+        return code
+    except BrokenPipeError:
+        # The reader of a pipe has gone; nothing is left to say to it.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return 0
+    except KeyboardInterrupt:
+        print("interrupted", file=sys.stderr)
+        return EXIT_INTERRUPTED
+    except Exception as error:
+        if arguments.debug:
+            raise
+        return _explain(error)
+
+
+def _explain(error: Exception) -> int:
+    """One clear message for an error, and its exit code."""
+    from forecast.errors import InputError, SettingsError
+    from forecast.nightly import EXIT_NOTHING_USABLE, EXIT_OUTPUT_FAILED, OutputError
+
+    if isinstance(error, SettingsError):
+        print(error, file=sys.stderr)
+        return EXIT_SETTINGS_WRONG
+    if isinstance(error, InputError):
+        print(f"bendcast: {error}", file=sys.stderr)
+        return EXIT_NOTHING_USABLE
+    if isinstance(error, OutputError):
+        print(f"bendcast: {error}", file=sys.stderr)
+        return EXIT_OUTPUT_FAILED
+    print(
+        f"bendcast: unexpected {type(error).__name__}: {error}\n"
+        "This is a defect of bendcast; --debug shows where.",
+        file=sys.stderr,
+    )
+    return EXIT_UNEXPECTED
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = argparse.ArgumentParser(
+        prog="bendcast",
+        description="When the low atmosphere bends light or radio waves past the horizon: outlooks "
+        "from open soundings.",
+        epilog=_EPILOG,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    parser.add_argument("--version", action="version", version=f"bendcast {__version__}")
+    shared = argparse.ArgumentParser(add_help=False)
+    shared.add_argument("-q", "--quiet", action="store_true", help="errors only")
+    shared.add_argument("-v", "--verbose", action="store_true", help="name every set-aside input")
+    shared.add_argument("--debug", action="store_true", help="show where an error arose")
+    commands = parser.add_subparsers(dest="command", required=True, metavar="COMMAND")
+
+    def command(name: str, text: str) -> argparse.ArgumentParser:
+        return commands.add_parser(name, help=text, description=text, parents=[shared])
+
+    nightly = command("nightly", "the scheduled run: from soundings to charts, tables and the page")
+    nightly.add_argument("settings", metavar="SETTINGS.toml")
+    nightly.add_argument(
+        "-o", "--output", metavar="DIR", help="folder instead of the settings' own"
+    )
+    nightly.add_argument("--dry-run", action="store_true", help="print the plan and stop")
+    nightly.set_defaults(run=_nightly)
+
+    inspect = command("inspect", "say what would be taken for what, and what would be refused")
+    inspect.add_argument("files", nargs="+", metavar="FILE")
+    inspect.add_argument("--json", action="store_true", help="machine-readable")
+    _naming(inspect)
+    inspect.set_defaults(run=_inspect)
+
+    chart = command("chart", "chart and netCDF of some soundings, without settings")
+    chart.add_argument("files", nargs="+", metavar="FILE")
+    chart.add_argument("-o", "--output", metavar="DIR", default=".", help="folder (default: here)")
+    chart.add_argument("--top", type=float, default=3000.0, metavar="M", help="chart top, m (3000)")
+    chart.add_argument("--timezone", default="UTC", metavar="ZONE", help="for local time (UTC)")
+    chart.add_argument(
+        "--point", metavar="LAT,LON", help="where to take profiles from gridded model data"
+    )
+    chart.add_argument("--members", type=int, default=64, metavar="N", help="members (64)")
+    _naming(chart)
+    chart.set_defaults(run=_chart)
+
+    check = command("check", "validate settings and say which inputs they find")
+    check.add_argument("settings", metavar="SETTINGS.toml")
+    check.set_defaults(run=_check)
+    return parser
+
+
+def _naming(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument(
+        "--name",
+        action="append",
+        default=[],
+        metavar="ROLE=VARIABLE",
+        help="which variable fills a role, such as air_temperature='tdry [degC]'; repeatable",
+    )
+    parser.add_argument(
+        "--settings", metavar="SETTINGS.toml", help="take the mapping of names from here"
+    )
+
+
+def _names(arguments: argparse.Namespace) -> dict[str, str]:
+    from forecast.errors import SettingsError
+    from forecast.settings import load_settings
+
+    names = dict(load_settings(arguments.settings).names) if arguments.settings else {}
+    for entry in arguments.name:
+        role, found, variable = entry.partition("=")
+        if not found or not role.strip() or not variable.strip():
+            raise SettingsError("--name", [f"found {entry!r}; expected ROLE=VARIABLE"])
+        names[role.strip()] = variable.strip()
+    return names
+
+
+def _reporter(arguments: argparse.Namespace) -> Reporter:
+    from forecast.progress import Reporter
+
+    return Reporter(arguments.quiet, arguments.verbose)
+
+
+def _nightly(arguments: argparse.Namespace) -> int:
+    from pathlib import Path
+
+    from forecast.nightly import EXIT_NOTHING_USABLE, plan_run, run_nightly
+    from forecast.settings import load_settings
+
+    settings = load_settings(arguments.settings)
+    plan = plan_run(settings, Path(arguments.output) if arguments.output else None)
+    if arguments.dry_run:
+        print(f"{settings.title}: output to {plan.output}")
+        for number, step in enumerate(plan.steps, 1):
+            print(f"{number}. {step}")
+        _print_inputs(plan.inputs, plan.warnings, settings.base)
+        return 0
+    with _reporter(arguments) as reporter:
+        result = run_nightly(plan, reporter)
+        for warning in result.warnings:
+            reporter.line(f"note: {warning}")
+        for item in result.set_aside:
+            reporter.line(f"set aside: {item['file']}: {item['reason']}")
+        if result.exit_code == EXIT_NOTHING_USABLE:
+            print(
+                f"bendcast: nothing usable among {len(plan.inputs)} inputs; earlier products in "
+                f"{plan.output} are left as they were",
+                file=sys.stderr,
+            )
+            return result.exit_code
+    print(
+        f"{settings.title}: {result.profiles} profiles, {len(result.windows)} windows, "
+        f"{len(result.set_aside)} inputs set aside"
+    )
+    print(f"page: {plan.output / 'index.html'}")
+    return result.exit_code
+
+
+def _print_inputs(inputs: list, warnings: list[str], base: Path) -> None:
+    for item in inputs:
+        print(f"  {item.site}: {os.path.relpath(item.path, base)}")
+    for warning in warnings:
+        print(f"  note: {warning}")
+
+
+def _inspect(arguments: argparse.Namespace) -> int:
+    from forecast.ingest import inspect_files
+    from forecast.nightly import EXIT_NOTHING_USABLE, EXIT_SOME_SET_ASIDE
+
+    reports = inspect_files(arguments.files, names=_names(arguments) or None)
+    if arguments.json:
+        import json
+
+        print(json.dumps([r.to_dict() for r in reports], indent=2, ensure_ascii=False))
+    else:
+        print("\n\n".join(r.to_text() for r in reports))
+    refused = sum(bool(r.refused) for r in reports)
+    if refused == len(reports):
+        return EXIT_NOTHING_USABLE
+    return EXIT_SOME_SET_ASIDE if refused else 0
+
+
+def _check(arguments: argparse.Namespace) -> int:
+    from forecast.nightly import plan_run
+    from forecast.settings import load_settings
+
+    settings = load_settings(arguments.settings)
+    plan = plan_run(settings)
+    print(f"{settings.title}: settings are right")
+    for site in settings.sites:
+        count = sum(item.site == site.name for item in plan.inputs)
+        print(
+            f"  site {site.name}: {site.latitude:.4f}, {site.longitude:.4f}, {site.timezone}; "
+            f"{count} inputs"
+        )
+    for line in settings.sightlines:
+        print(
+            f"  sightline {line.name}: {line.wave}, {line.observer_height:g} m to "
+            f"{line.target_height:g} m, {line.distance / 1e3:.1f} km from {line.site}"
+        )
+    print(f"  output: {plan.output}")
+    for warning in plan.warnings:
+        print(f"  note: {warning}")
+    return 0
+
+
+def _chart(arguments: argparse.Namespace) -> int:
+    from pathlib import Path
+
+    from forecast.ingest import read_files
+    from forecast.nightly import EXIT_NOTHING_USABLE, EXIT_SOME_SET_ASIDE, chart_files
+
+    settings = _chart_settings(arguments)
+    points = None
+    if arguments.point:
+        latitude, longitude = _point(arguments.point)
+        points = [(f"{latitude:g}, {longitude:g}", latitude, longitude)]
+    with _reporter(arguments) as reporter:
+        reading = read_files(
+            arguments.files,
+            names=_names(arguments) or None,
+            points=points,
+            progress=lambda done, total, label: reporter(done, total, "read profiles"),
+        )
+        for note in reading.notes:
+            reporter.line(f"note: {note}")
+        for item in reading.set_aside:
+            print(f"set aside: {item.file}: {item.reason}", file=sys.stderr)
+        if reading.profiles is None:
+            print("bendcast: nothing usable among the files given", file=sys.stderr)
+            return EXIT_NOTHING_USABLE
+        products = chart_files(reading.profiles, settings, Path(arguments.output), reporter)
+    for path in products:
+        print(path)
+    return EXIT_SOME_SET_ASIDE if reading.set_aside else 0
+
+
+def _point(text: str) -> tuple[float, float]:
+    from forecast.errors import SettingsError
+
+    try:
+        latitude, longitude = (float(part) for part in text.split(","))
+    except ValueError:
+        raise SettingsError("--point", [f"found {text!r}; expected LAT,LON in degrees"]) from None
+    if not (abs(latitude) <= 90.0 and -180.0 <= longitude <= 360.0):
+        raise SettingsError("--point", [f"found {text!r}; expected -90..90, -180..360 degrees"])
+    return latitude, longitude
+
+
+def _chart_settings(arguments: argparse.Namespace) -> Settings:
+    from pathlib import Path
+    from zoneinfo import ZoneInfo
+
+    from forecast.errors import SettingsError
+    from forecast.settings import Settings
+
+    faults = []
+    try:
+        ZoneInfo(arguments.timezone)
+    except (KeyError, ValueError, OSError):
+        faults.append(f"--timezone: found {arguments.timezone!r}; expected an IANA time zone")
+    if not 100.0 <= arguments.top <= 15000.0:
+        faults.append(f"--top: found {arguments.top:g}; expected 100 to 15000 m")
+    if not 8 <= arguments.members <= 4096:
+        faults.append(f"--members: found {arguments.members}; expected 8 to 4096")
+    if faults:
+        raise SettingsError("command line", faults)
+    return Settings(
+        title="Soundings",
+        output=Path(arguments.output),
+        sites=(),
+        members=arguments.members,
+        chart_top=arguments.top,
+        timezone=arguments.timezone,
+    )

@@ -1,0 +1,342 @@
+"""The scheduled run: the one place that strings the stages together.
+
+Settings → inputs → profiles → outlook → products. A bad input is set aside with its reason and
+the rest goes on. How products are put in place is told in `forecast.products`.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import platform
+import time
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import asdict, dataclass, field
+from datetime import UTC, datetime
+from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from forecast import __version__
+from forecast.errors import BendcastError, printable
+from forecast.inputs import InputFile, find_inputs, fingerprint, join_profiles, match_to_site
+from forecast.products import (
+    RECORD,
+    Progress,
+    make_charts,
+    make_products,
+    publish,
+    staging_folder,
+)
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+    from forecast.settings import Settings, Site
+
+__all__ = [
+    "EXIT_ALL_DONE",
+    "EXIT_NOTHING_USABLE",
+    "EXIT_OUTPUT_FAILED",
+    "EXIT_SOME_SET_ASIDE",
+    "OutputError",
+    "Plan",
+    "RunResult",
+    "chart_files",
+    "plan_run",
+    "run_nightly",
+]
+
+EXIT_ALL_DONE = 0
+EXIT_SOME_SET_ASIDE = 3
+EXIT_NOTHING_USABLE = 4
+EXIT_OUTPUT_FAILED = 6
+
+#: Steps of a run, in order.
+STEPS = ("find inputs", "read profiles", "outlook", "products", "publish, the page last")
+
+_PACKAGES = ("numpy", "scipy", "numba", "xarray", "netCDF4", "matplotlib", "pyproj", "jinja2")
+
+
+class OutputError(BendcastError, OSError):
+    """The products cannot be written."""
+
+
+@dataclass(frozen=True)
+class Plan:
+    """What a run will do."""
+
+    settings: Settings
+    inputs: list[InputFile]
+    warnings: list[str]
+    output: Path
+    steps: tuple[str, ...] = STEPS
+
+
+@dataclass
+class RunResult:
+    """What a run did."""
+
+    exit_code: int
+    output: Path
+    products: list[str] = field(default_factory=list)
+    set_aside: list[dict[str, str]] = field(default_factory=list)
+    warnings: list[str] = field(default_factory=list)
+    windows: list[Any] = field(default_factory=list)
+    profiles: int = 0
+
+
+@dataclass
+class _Record:
+    """What run.json tells, gathered along the way."""
+
+    inputs: list[dict[str, Any]] = field(default_factory=list)
+    set_aside: list[dict[str, str]] = field(default_factory=list)
+    warnings: list[str] = field(default_factory=list)
+    seconds: dict[str, float] = field(default_factory=dict)
+
+    @contextmanager
+    def timed(self, step: str) -> Iterator[None]:
+        """Note how long a step takes."""
+        start = time.monotonic()
+        yield
+        self.seconds[step] = time.monotonic() - start
+
+
+def plan_run(settings: Settings, output: Path | None = None) -> Plan:
+    """Find the inputs and say what a run would do, without doing it.
+
+    Parameters
+    ----------
+    settings : forecast.settings.Settings
+        Validated settings.
+    output : Path, optional
+        Folder for the products in place of the settings' own.
+
+    Returns
+    -------
+    Plan
+        Inputs in reading order, and warnings about patterns without files.
+    """
+    inputs, warnings = find_inputs(settings)
+    return Plan(settings, inputs, warnings, (output or settings.output).resolve())
+
+
+def run_nightly(plan: Plan, progress: Progress | None = None) -> RunResult:
+    """Do what the plan says.
+
+    Parameters
+    ----------
+    plan : Plan
+        From `plan_run`.
+    progress : callable, optional
+        Called with (done, total, label) as each step moves on.
+
+    Returns
+    -------
+    RunResult
+        Exit code and what was made. Nothing usable: the earlier products stay, only ``run.json``
+        is written anew.
+
+    Raises
+    ------
+    OutputError
+        If the output folder cannot be written or another run holds it.
+    """
+    from filelock import FileLock, Timeout
+
+    tell = progress or (lambda done, total, label: None)
+    with _writing(plan.output):
+        plan.output.mkdir(parents=True, exist_ok=True)
+        try:
+            with FileLock(plan.output / ".bendcast.lock", timeout=0):
+                return _run(plan, tell)
+        except Timeout:
+            raise OutputError(
+                f"{plan.output}: another run is writing here; wait for it to end"
+            ) from None
+
+
+@contextmanager
+def _writing(output: Path) -> Iterator[None]:
+    """Turn a failure to write into one clear error."""
+    try:
+        yield
+    except OSError as error:
+        if isinstance(error, BendcastError):
+            raise
+        reason = error.strerror or str(error)
+        raise OutputError(f"{error.filename or output}: cannot be written: {reason}") from error
+
+
+def _run(plan: Plan, tell: Progress) -> RunResult:
+    from forecast.outlook import find_windows, make_outlook
+
+    record = _Record(warnings=list(plan.warnings))
+    settings = plan.settings
+    with record.timed("read profiles"):
+        profiles = _read(plan, record, tell)
+    result = RunResult(EXIT_NOTHING_USABLE, plan.output)
+    result.set_aside, result.warnings = record.set_aside, record.warnings
+    if profiles is None:
+        _write_record(plan, record, plan.output, {})
+        return result
+    with record.timed("outlook"):
+        outlook = make_outlook(profiles, settings, tell)
+        result.windows = find_windows(outlook, settings)
+    with staging_folder(plan.output) as staging:
+        with record.timed("products"):
+            products = make_products(
+                outlook, result.windows, settings, staging, set_aside=record.set_aside,
+                warnings=record.warnings, stamp=_stamp(), tell=tell,
+            )  # fmt: skip
+        _write_record(plan, record, staging, products)
+        result.products = [path.name for path in publish(staging, plan.output)]
+    result.profiles = int(profiles.sizes["profile"])
+    result.exit_code = EXIT_SOME_SET_ASIDE if record.set_aside else EXIT_ALL_DONE
+    return result
+
+
+def _read(plan: Plan, record: _Record, tell: Progress) -> xr.Dataset | None:
+    """Profiles of every site, matched to it; None if nothing is usable."""
+    from forecast.ingest import read_files
+
+    parts: list[xr.Dataset] = []
+    done = 0
+    for site in plan.settings.sites:
+        paths = [item.path for item in plan.inputs if item.site == site.name]
+        readable = _fingerprints(plan, record, site, paths)
+        if not readable:
+            continue
+        offset = done
+
+        def step(count: int, total: int, label: str, offset: int = offset) -> None:
+            tell(offset + count, len(plan.inputs), "read profiles")
+
+        reading = read_files(
+            readable,
+            names=plan.settings.names or None,
+            points=[(site.name, site.latitude, site.longitude)],
+            method=site.point_method,
+            progress=step,
+        )
+        done += len(paths)
+        for item in reading.set_aside:
+            record.set_aside.append(
+                {"site": site.name, "file": printable(item.file), "reason": printable(item.reason)}
+            )
+        record.warnings += [f"site {site.name}: {printable(note)}" for note in reading.notes]
+        if reading.profiles is None:
+            continue
+        near, dropped = match_to_site(reading.profiles, site)
+        for file, reason in dropped:
+            record.set_aside.append(
+                {"site": site.name, "file": printable(file), "reason": printable(reason)}
+            )
+        if near.sizes["profile"]:
+            parts.append(near)
+        else:
+            record.warnings.append(f"site {site.name}: no usable profile")
+    return join_profiles(parts) if parts else None
+
+
+def _fingerprints(plan: Plan, record: _Record, site: Site, paths: list[Path]) -> list[Path]:
+    """Note size and sha256 of each input; one that cannot be opened is set aside here."""
+    readable = []
+    for path in paths:
+        name = printable(os.path.relpath(path, plan.settings.base))
+        try:
+            size, digest = fingerprint(path)
+        except OSError as error:
+            reason = f"cannot be read: {error.strerror}"
+            record.set_aside.append({"site": site.name, "file": name, "reason": reason})
+            continue
+        record.inputs.append({"site": site.name, "file": name, "bytes": size, "sha256": digest})
+        readable.append(path)
+    return readable
+
+
+def chart_files(
+    profiles: xr.Dataset, settings: Settings, output: Path, tell: Progress
+) -> list[Path]:
+    """Chart and outlook of some profiles without settings, every station a site of its own.
+
+    Parameters
+    ----------
+    profiles : xarray.Dataset
+        Profiles.
+    settings : forecast.settings.Settings
+        Members, chart top; its sites are ignored.
+    output : Path
+        Folder; ``outlook.nc`` and a PNG and SVG per station go there.
+    tell : callable
+        Progress.
+
+    Returns
+    -------
+    list of Path
+        Files written.
+
+    Raises
+    ------
+    OutputError
+        If the folder cannot be written.
+    """
+    from forecast.outlook import find_windows, make_outlook
+    from forecast.output.netcdf import write_outlook
+    from forecast.settings import Site
+
+    outlook = make_outlook(profiles, settings, tell)
+    windows = find_windows(outlook, settings)
+    sites = []
+    for name in dict.fromkeys(outlook["site"].values.astype(str)):
+        row = int((outlook["site"].values.astype(str) == name).argmax())
+        latitude, longitude = (float(outlook[n].values[row]) for n in ("latitude", "longitude"))
+        sites.append(Site(str(name), latitude, longitude, timezone=settings.timezone))
+    with _writing(output), staging_folder(output) as staging:
+        write_outlook(outlook, staging / "outlook.nc", _stamp())
+        make_charts(outlook, windows, settings, sites, staging, tell)
+        return publish(staging, output)
+
+
+def _write_record(
+    plan: Plan, record: _Record, folder: Path, products: dict[str, dict[str, Any]]
+) -> None:
+    settings = plan.settings
+    body = {
+        "started": _stamp(),
+        "seconds": {name: round(value, 3) for name, value in record.seconds.items()},
+        "bendcast": __version__,
+        "python": platform.python_version(),
+        "packages": {name: _version(name) for name in _PACKAGES},
+        "settings": {
+            "title": settings.title,
+            "sha256": settings.digest,
+            "members": settings.members,
+            "seed": settings.seed,
+            "sites": [asdict(site) for site in settings.sites],
+        },
+        "inputs": record.inputs,
+        "set_aside": record.set_aside,
+        "warnings": record.warnings,
+        "products": products,
+    }
+    from forecast.output.files import write_text_atomic
+
+    text = json.dumps(body, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
+    write_text_atomic(folder / RECORD, text)
+
+
+def _version(package: str) -> str:
+    try:
+        return version(package)
+    except PackageNotFoundError:
+        return "not installed"
+
+
+def _stamp() -> str:
+    """Time of the run, UTC; SOURCE_DATE_EPOCH fixes it for reproducible builds."""
+    epoch = os.environ.get("SOURCE_DATE_EPOCH", "")
+    now = datetime.fromtimestamp(int(epoch), UTC) if epoch.isdigit() else datetime.now(UTC)
+    return now.strftime("%Y-%m-%dT%H:%M:%SZ")

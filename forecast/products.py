@@ -1,0 +1,171 @@
+"""Products of a run: made in a staging folder, then put in place one by one, the page last.
+
+A run that fails while making them leaves the earlier products untouched; one that is killed while
+putting them in place leaves a mixture of whole files with the page still the old one.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import shutil
+import tempfile
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from forecast import __version__
+from forecast.inputs import fingerprint
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+    from forecast.settings import Settings, Site
+
+__all__ = ["make_charts", "make_products", "publish", "staging_folder"]
+
+PAGE = "index.html"
+RECORD = "run.json"
+
+#: Called with (done, total, label).
+Progress = Callable[[int, int, str], None]
+
+
+@contextmanager
+def staging_folder(output: Path) -> Iterator[Path]:
+    """Make a folder inside `output` for unfinished products; gone at the end, whatever happens."""
+    output.mkdir(parents=True, exist_ok=True)
+    staging = Path(tempfile.mkdtemp(prefix=".staging-", dir=output))
+    try:
+        yield staging
+    finally:
+        shutil.rmtree(staging, ignore_errors=True)
+
+
+def make_charts(
+    outlook: xr.Dataset,
+    windows: list[Any],
+    settings: Settings,
+    sites: list[Site],
+    folder: Path,
+    tell: Progress,
+) -> dict[str, dict[str, Any]]:
+    """Draw one time–height chart per site, as PNG and SVG.
+
+    Returns
+    -------
+    dict
+        By site name: what `forecast.output.charts.save_chart` returns.
+    """
+    from forecast.output.charts import draw_time_height, save_chart
+    from forecast.output.files import safe_stem
+
+    charts: dict[str, dict[str, Any]] = {}
+    stems: set[str] = set()
+    for i, site in enumerate(sites):
+        stem = safe_stem(site.name, stems)
+        stems.add(stem)
+        figure = draw_time_height(
+            outlook, site.name, timezone=site.timezone, top=settings.chart_top, windows=windows
+        )
+        charts[site.name] = save_chart(figure, folder / stem)
+        tell(i + 1, len(sites), "charts")
+    return charts
+
+
+def make_products(
+    outlook: xr.Dataset,
+    windows: list[Any],
+    settings: Settings,
+    folder: Path,
+    *,
+    set_aside: list[dict[str, str]],
+    warnings: list[str],
+    stamp: str,
+    tell: Progress,
+) -> dict[str, dict[str, Any]]:
+    """Make every product but the run record.
+
+    Parameters
+    ----------
+    outlook : xarray.Dataset
+        From `forecast.make_outlook`.
+    windows : list of forecast.outlook.Window
+        From `forecast.outlook.find_windows`.
+    settings : forecast.settings.Settings
+        Title, sites, chart top.
+    folder : Path
+        Staging folder.
+    set_aside, warnings
+        What the page tells of the inputs.
+    stamp : str
+        Time of the run, ISO 8601 UTC; the only thing that differs between two runs.
+    tell : callable
+        Progress.
+
+    Returns
+    -------
+    dict
+        By file name: bytes and sha256.
+    """
+    from forecast.output.netcdf import write_outlook
+    from forecast.output.page import write_page
+    from forecast.output.tables import write_windows_csv, write_windows_json
+
+    write_outlook(outlook, folder / "outlook.nc", stamp)
+    write_windows_csv(windows, folder / "windows.csv")
+    meta = {"title": settings.title, "calibration": outlook.attrs["calibration"]}
+    write_windows_json(windows, folder / "windows.json", meta)
+    present = set(outlook["site"].values.astype(str))
+    sites = [site for site in settings.sites if site.name in present]
+    charts = make_charts(outlook, windows, settings, sites, folder, tell)
+    write_page(
+        folder / PAGE,
+        outlook=outlook,
+        windows=windows,
+        charts=charts,
+        settings_title=settings.title,
+        sites=[(site.name, site.timezone) for site in sites],
+        set_aside=set_aside,
+        meta={"made_at": stamp, "version": __version__, "warnings": warnings},
+    )
+    products = {}
+    for path in sorted(folder.iterdir()):
+        size, digest = fingerprint(path)
+        products[path.name] = {"bytes": size, "sha256": digest}
+    return products
+
+
+def publish(staging: Path, output: Path) -> list[Path]:
+    """Move staged files into place, the page last, and delete products of earlier runs.
+
+    Parameters
+    ----------
+    staging : Path
+        Folder of finished files, on the same file system.
+    output : Path
+        Where readers look.
+
+    Returns
+    -------
+    list of Path
+        Files put in place, in order.
+    """
+    names = sorted(p.name for p in staging.iterdir())
+    stale = _earlier_products(output) - set(names)
+    names.sort(key=lambda name: (name == PAGE, name == RECORD, name))
+    for name in names:
+        os.replace(staging / name, output / name)
+    for name in stale:
+        (output / name).unlink(missing_ok=True)
+    return [output / name for name in names]
+
+
+def _earlier_products(output: Path) -> set[str]:
+    """Products that the last run.json names; only plain file names in the folder itself."""
+    try:
+        listed = json.loads((output / RECORD).read_text(encoding="utf-8"))["products"]
+    except (OSError, ValueError, KeyError, TypeError):
+        return set()
+    return {str(n) for n in listed if Path(str(n)).name == str(n) and not str(n).startswith(".")}
