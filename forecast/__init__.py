@@ -6,9 +6,6 @@ is imported by the function that needs it.
 
 from __future__ import annotations
 
-from importlib import import_module
-from typing import Any
-
 __version__ = "0.1.0"
 
 _FACE = {
@@ -24,9 +21,11 @@ _FACE = {
 __all__ = ["__version__", *_FACE]
 
 
-def __getattr__(name: str) -> Any:
+def __getattr__(name: str) -> object:
     """Import a public name on first use (PEP 562)."""
     if name in _FACE:
+        from importlib import import_module
+
         value = getattr(import_module(_FACE[name]), name)
         globals()[name] = value
         return value

@@ -8,10 +8,10 @@ from __future__ import annotations
 import argparse
 import os
 import sys
-from typing import TYPE_CHECKING
 
 from forecast import __version__
 
+TYPE_CHECKING = False  # what typing defines; importing typing costs a fifth of --help
 if TYPE_CHECKING:
     from pathlib import Path
 
@@ -54,7 +54,8 @@ def main(argv: list[str] | None = None) -> int:
     int
         Exit code, as ``bendcast --help`` lists them.
     """
-    arguments = _parser().parse_args(argv)
+    argv = sys.argv[1:] if argv is None else argv
+    arguments = _parser(argv).parse_args(argv)
     try:
         code = arguments.run(arguments)
         sys.stdout.flush()
@@ -94,54 +95,66 @@ def _explain(error: Exception) -> int:
     return EXIT_UNEXPECTED
 
 
-def _parser() -> argparse.ArgumentParser:
+class _HelpFormatter(argparse.RawDescriptionHelpFormatter):
+    """Knows the terminal's width without the import that argparse would make for it."""
+
+    def __init__(self, prog: str):
+        try:
+            width = os.get_terminal_size(sys.stdout.fileno()).columns - 2
+        except (OSError, ValueError, AttributeError):
+            width = 98
+        super().__init__(prog, width=min(max(width, 40), 118))
+
+
+def _parser(argv: list[str]) -> argparse.ArgumentParser:
+    """Parser of the command line; only commands named there get their arguments (it is quicker)."""
     parser = argparse.ArgumentParser(
         prog="bendcast",
         description="When the low atmosphere bends light or radio waves past the horizon: outlooks "
         "from open soundings.",
         epilog=_EPILOG,
-        formatter_class=argparse.RawDescriptionHelpFormatter,
+        formatter_class=_HelpFormatter,
     )
     parser.add_argument("--version", action="version", version=f"bendcast {__version__}")
-    shared = argparse.ArgumentParser(add_help=False)
-    shared.add_argument("-q", "--quiet", action="store_true", help="errors only")
-    shared.add_argument("-v", "--verbose", action="store_true", help="name every set-aside input")
-    shared.add_argument("--debug", action="store_true", help="show where an error arose")
     commands = parser.add_subparsers(dest="command", required=True, metavar="COMMAND")
+    for name, (text, arguments, run) in _COMMANDS.items():
+        command = commands.add_parser(name, help=text, description=text)
+        if name in argv:
+            command.set_defaults(run=run)
+            arguments(command)
+            command.add_argument("-q", "--quiet", action="store_true", help="errors only")
+            command.add_argument("--debug", action="store_true", help="show where an error arose")
+    return parser
 
-    def command(name: str, text: str) -> argparse.ArgumentParser:
-        return commands.add_parser(name, help=text, description=text, parents=[shared])
 
-    nightly = command("nightly", "the scheduled run: from soundings to charts, tables and the page")
-    nightly.add_argument("settings", metavar="SETTINGS.toml")
-    nightly.add_argument(
-        "-o", "--output", metavar="DIR", help="folder instead of the settings' own"
+def _nightly_arguments(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("settings", metavar="SETTINGS.toml")
+    parser.add_argument("-o", "--output", metavar="DIR", help="folder instead of the settings' own")
+    parser.add_argument("--dry-run", action="store_true", help="print the plan and stop")
+
+
+def _inspect_arguments(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("files", nargs="+", metavar="FILE")
+    parser.add_argument("--json", action="store_true", help="machine-readable")
+    _naming(parser)
+
+
+def _chart_arguments(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("files", nargs="+", metavar="FILE")
+    parser.add_argument("-o", "--output", metavar="DIR", default=".", help="folder (default: here)")
+    parser.add_argument(
+        "--top", type=float, default=3000.0, metavar="M", help="chart top, m (3000)"
     )
-    nightly.add_argument("--dry-run", action="store_true", help="print the plan and stop")
-    nightly.set_defaults(run=_nightly)
-
-    inspect = command("inspect", "say what would be taken for what, and what would be refused")
-    inspect.add_argument("files", nargs="+", metavar="FILE")
-    inspect.add_argument("--json", action="store_true", help="machine-readable")
-    _naming(inspect)
-    inspect.set_defaults(run=_inspect)
-
-    chart = command("chart", "chart and netCDF of some soundings, without settings")
-    chart.add_argument("files", nargs="+", metavar="FILE")
-    chart.add_argument("-o", "--output", metavar="DIR", default=".", help="folder (default: here)")
-    chart.add_argument("--top", type=float, default=3000.0, metavar="M", help="chart top, m (3000)")
-    chart.add_argument("--timezone", default="UTC", metavar="ZONE", help="for local time (UTC)")
-    chart.add_argument(
+    parser.add_argument("--timezone", default="UTC", metavar="ZONE", help="for local time (UTC)")
+    parser.add_argument(
         "--point", metavar="LAT,LON", help="where to take profiles from gridded model data"
     )
-    chart.add_argument("--members", type=int, default=64, metavar="N", help="members (64)")
-    _naming(chart)
-    chart.set_defaults(run=_chart)
+    parser.add_argument("--members", type=int, default=64, metavar="N", help="members (64)")
+    _naming(parser)
 
-    check = command("check", "validate settings and say which inputs they find")
-    check.add_argument("settings", metavar="SETTINGS.toml")
-    check.set_defaults(run=_check)
-    return parser
+
+def _check_arguments(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("settings", metavar="SETTINGS.toml")
 
 
 def _naming(parser: argparse.ArgumentParser) -> None:
@@ -173,7 +186,7 @@ def _names(arguments: argparse.Namespace) -> dict[str, str]:
 def _reporter(arguments: argparse.Namespace) -> Reporter:
     from forecast.progress import Reporter
 
-    return Reporter(arguments.quiet, arguments.verbose)
+    return Reporter(arguments.quiet)
 
 
 def _nightly(arguments: argparse.Namespace) -> int:
@@ -328,3 +341,19 @@ def _chart_settings(arguments: argparse.Namespace) -> Settings:
         chart_top=arguments.top,
         timezone=arguments.timezone,
     )
+
+
+_COMMANDS = {
+    "nightly": (
+        "the scheduled run: from soundings to charts, tables and the page",
+        _nightly_arguments,
+        _nightly,
+    ),
+    "inspect": (
+        "say what would be taken for what, and what would be refused",
+        _inspect_arguments,
+        _inspect,
+    ),
+    "chart": ("chart and netCDF of some soundings, without settings", _chart_arguments, _chart),
+    "check": ("validate settings and say which inputs they find", _check_arguments, _check),
+}

@@ -20,13 +20,10 @@ class Reporter:
     ----------
     quiet : bool
         Show errors only.
-    verbose : bool
-        Show every set-aside input and warning as it is known.
     """
 
-    def __init__(self, quiet: bool = False, verbose: bool = False):
+    def __init__(self, quiet: bool = False):
         self.quiet = quiet
-        self.verbose = verbose
         self._bar: Any = None
         self._task: Any = None
         self._label = ""

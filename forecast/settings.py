@@ -22,7 +22,6 @@ from pydantic import (
     ConfigDict,
     Field,
     ValidationError,
-    model_validator,
 )
 
 from forecast.errors import SettingsError, printable
@@ -138,27 +137,10 @@ class _SightlineTable(_Table):
     target_base_height_m: Height = 0.0
     distance_km: Annotated[float, Field(gt=0.0, le=1500.0)] | None = None
     azimuth_deg: Annotated[float, Field(ge=0.0, le=360.0)] | None = None
-    observer: Annotated[list[float], Field(min_length=2, max_length=2)] | None = None
-    target: Annotated[list[float], Field(min_length=2, max_length=2)] | None = None
+    observer: tuple[Latitude, Longitude] | None = None
+    target: tuple[Latitude, Longitude] | None = None
     wave: Literal["optical", "radio"] = "optical"
     wavelength_nm: Annotated[float, Field(ge=300.0, le=1700.0)] = 550.0
-
-    @model_validator(mode="after")
-    def _path(self) -> _SightlineTable:
-        positions = (self.observer is not None) + (self.target is not None)
-        if self.distance_km is None and positions != 2:
-            raise ValueError(
-                "give either distance_km, or both observer and target as [latitude, longitude]"
-            )
-        if self.distance_km is not None and positions:
-            raise ValueError("give either distance_km or positions, not both")
-        for key in ("observer", "target"):
-            pair = getattr(self, key)
-            if pair is not None and not (abs(pair[0]) <= 90.0 and -180.0 <= pair[1] <= 360.0):
-                raise ValueError(f"{key} must be [latitude, longitude] in degrees; found {pair}")
-        if self.target_base_height_m > self.target_height_m:
-            raise ValueError("target_base_height_m must not exceed target_height_m")
-        return self
 
 
 class _Ingest(_Table):
@@ -202,12 +184,14 @@ def load_settings(path: str | Path) -> Settings:
         table = tomllib.loads(text)
     except (UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
         raise SettingsError(path.name, [f"is not valid TOML: {error}"]) from None
+    faults = []
+    checked = None
     try:
         checked = _File.model_validate(table)
     except ValidationError as error:
-        raise SettingsError(path.name, _faults(error, table, text)) from None
-    faults = _cross_faults(checked)
-    if faults:
+        faults = _faults(error, table, text)
+    faults += _cross_faults(table, text)
+    if faults or checked is None:
         raise SettingsError(path.name, faults)
     return _settings(checked, path, hashlib.sha256(raw).hexdigest())
 
@@ -263,27 +247,54 @@ def _line_of(path: tuple[Any, ...], text: str) -> int | None:
     return start + 1 if len(path) > 1 else None
 
 
-def _cross_faults(checked: _File) -> list[str]:
-    """Faults that only show between tables."""
+def _cross_faults(table: dict[str, Any], text: str) -> list[str]:
+    """Faults that only show between keys, looked for even where single keys are wrong."""
     faults = []
-    names = [site.name for site in checked.site]
-    tables: list[tuple[str, list[Any]]] = [
-        ("site", list(checked.site)),
-        ("sightline", list(checked.sightline)),
-    ]
-    for label, rows in tables:
+
+    def rows(label: str) -> list[tuple[int, dict[str, Any]]]:
+        found = table.get(label)
+        return [
+            (i, row)
+            for i, row in enumerate(found if isinstance(found, list) else [])
+            if isinstance(row, dict)
+        ]
+
+    def fault(label: str, i: int, key: str, message: str) -> None:
+        line = _line_of((label, i, key), text)
+        faults.append(f"{label}[{i}].{key}{f' (line {line})' if line else ''}: {message}")
+
+    for label in ("site", "sightline"):
         seen: set[str] = set()
-        for i, row in enumerate(rows):
-            if row.name in seen:
-                faults.append(
-                    f"{label}[{i}].name: found {row.name!r} a second time; names must differ"
-                )
-            seen.add(row.name)
-    for i, line in enumerate(checked.sightline):
-        if line.site not in names:
-            near = difflib.get_close_matches(line.site, names, n=1)
+        for i, row in rows(label):
+            name = row.get("name")
+            if isinstance(name, str) and name in seen:
+                fault(label, i, "name", f"found {name!r} a second time; names must differ")
+            seen.add(str(name))
+    names = [str(row.get("name")) for _, row in rows("site")]
+    for i, row in rows("sightline"):
+        site = row.get("site")
+        if isinstance(site, str) and site not in names:
+            near = difflib.get_close_matches(site, names, n=1)
             hint = f"did you mean {near[0]!r}?" if near else f"sites are: {', '.join(names)}"
-            faults.append(f"sightline[{i}].site: found {line.site!r}, which is no site; {hint}")
+            fault("sightline", i, "site", f"found {site!r}, which is no site; {hint}")
+        base, top = row.get("target_base_height_m", 0.0), row.get("target_height_m")
+        if isinstance(base, int | float) and isinstance(top, int | float) and base > top:
+            fault(
+                "sightline",
+                i,
+                "target_base_height_m",
+                f"found {base:g}; must not exceed target_height_m, {top:g}",
+            )
+        positions = [key for key in ("observer", "target") if key in row]
+        if "distance_km" in row and positions:
+            fault("sightline", i, "distance_km", "give a distance or positions, not both")
+        elif "distance_km" not in row and len(positions) != 2:
+            fault(
+                "sightline",
+                i,
+                "distance_km",
+                "is missing; give it, or both observer and target as [latitude, longitude]",
+            )
     return faults
 
 
