@@ -16,7 +16,14 @@ from forecast import schema
 if TYPE_CHECKING:
     import xarray as xr
 
-__all__ = ["EXTRAS", "LEVEL_NAMES", "Column", "assemble", "set_aside_duplicates"]
+__all__ = [
+    "EXTRAS",
+    "LEVEL_NAMES",
+    "Column",
+    "assemble",
+    "set_aside_duplicates",
+    "set_aside_oversize",
+]
 
 #: Level arrays of a `Column`: attribute → name in the Profiles dataset.
 LEVEL_NAMES = {
@@ -44,6 +51,10 @@ EXTRAS = (
 
 #: Most values per level variable of a Profiles dataset (400 MB each); common sense, no source.
 MAX_PADDED_VALUES = 50_000_000
+
+
+#: Lead time of an ascent.
+NO_LEAD_TIME = np.timedelta64(0, "ns")
 
 
 @dataclass
@@ -89,7 +100,7 @@ class Column:
     v: np.ndarray
     quality: np.ndarray
     surface_altitude: float = float("nan")
-    lead_time: np.timedelta64 = np.timedelta64(0, "ns")
+    lead_time: np.timedelta64 = NO_LEAD_TIME
     source_kind: str = "ascent"
     member: int | None = None
     extras: dict[str, float] = field(default_factory=dict)
@@ -151,6 +162,37 @@ def set_aside_duplicates(columns: list[Column]) -> tuple[list[Column], list[tupl
             )
         )
     return sorted(best.values(), key=_order), dropped
+
+
+def set_aside_oversize(columns: list[Column]) -> tuple[list[Column], list[tuple[str, str]]]:
+    """Keep columns that, padded to a common number of levels, fit into memory.
+
+    Parameters
+    ----------
+    columns : list of Column
+
+    Returns
+    -------
+    kept : list of Column
+        In the order given.
+    dropped : list of (str, str)
+        File and reason for each column not kept: the longest ones.
+    """
+    ranked = sorted(columns, key=lambda column: column.height.size)
+    dropped = []
+    while ranked and len(ranked) * ranked[-1].height.size > MAX_PADDED_VALUES:
+        longest = ranked.pop()
+        dropped.append(
+            (
+                longest.source_file,
+                f"its {longest.height.size} levels, padded for every profile of the run, would "
+                f"exceed {MAX_PADDED_VALUES} values; read it in a run of its own",
+            )
+        )
+    if not dropped:
+        return columns, []
+    left = {id(column) for column in ranked}
+    return [column for column in columns if id(column) in left], dropped
 
 
 def assemble(columns: list[Column]) -> xr.Dataset:

@@ -32,9 +32,11 @@ from forecast.ingest.source import Source, VariableInfo
 from forecast.ingest.units import convert, is_dimensionless, normal_spelling
 
 __all__ = [
+    "HORIZONTAL",
     "Recognition",
     "Rejected",
     "Taken",
+    "leading_number",
     "parse_names",
     "read_role",
     "read_taken",
@@ -45,7 +47,7 @@ _LATITUDE_UNITS = {f"degree{s}{t}" for s in ("", "s") for t in ("_north", "_N", 
 _LONGITUDE_UNITS = {f"degree{s}{t}" for s in ("", "s") for t in ("_east", "_E", "E")}
 
 #: Standard names of horizontal coordinates that are neither latitude nor longitude.
-_HORIZONTAL = (
+HORIZONTAL = (
     "projection_x_coordinate",
     "projection_y_coordinate",
     "grid_latitude",
@@ -117,7 +119,7 @@ def read_taken(
     """Values of one `Taken` in SI; see `read_role`."""
     where = {"source": source.name, "variable": taken.variable}
     if taken.attribute:
-        values = np.asarray(_leading_number(source.attrs.get(taken.variable)))
+        values = np.asarray(leading_number(source.attrs.get(taken.variable)))
     else:
         values = source.read(taken.variable, index)
     row = ROLES[taken.role]
@@ -131,6 +133,15 @@ def read_taken(
     if check:
         check_plausible(taken.role, result, taken.units, **where)
     return result
+
+
+def leading_number(value: Any) -> float:
+    """Number at the start of an attribute value such as ``20 m``, NaN when there is none."""
+    if isinstance(value, str):
+        match = re.match(r"\s*[-+]?\d{1,12}(?:\.\d{1,9})?", value)
+        return float(match.group()) if match else float("nan")
+    number = np.asarray(value).ravel()
+    return float(number[0]) if number.size == 1 and number.dtype.kind in "iuf" else float("nan")
 
 
 @lru_cache(maxsize=1)
@@ -166,6 +177,7 @@ class _Recogniser:
         for role in ROLES:
             if not (result.groups and role in LEVEL_ROLES):
                 self._fill(role)
+            self._from_attribute(role)
         self._formula_terms()
         return result
 
@@ -181,7 +193,7 @@ class _Recogniser:
             if own and (
                 info.standard_name in ("time", "latitude", "longitude", "realization")
                 or info.standard_name in ("forecast_reference_time", "forecast_period")
-                or info.standard_name in _HORIZONTAL
+                or info.standard_name in HORIZONTAL
                 or info.attrs.get("axis") in ("X", "Y", "T", "E")
                 or " since " in (info.units or "")
                 or info.units in _LATITUDE_UNITS | _LONGITUDE_UNITS
@@ -285,7 +297,6 @@ class _Recogniser:
             else:
                 usable.append((info, how))
         if not usable:
-            self._from_attribute(role)
             return
         strong = [pair for pair in usable if pair[1] == usable[0][1]]
         if len(strong) > 1:
@@ -416,13 +427,16 @@ class _Recogniser:
         """A role whose value a layout finds in a global attribute."""
         for row in self.layouts:
             entry = row.get("attributes", {}).get(role)
-            if entry and entry["name"] in self.source.attrs:
-                value = self.source.attrs[entry["name"]]
-                units = entry.get("units") or _unit_after_number(value)
-                if units and np.isfinite(_leading_number(value)):
-                    how = f"layout {row['name']!r}, global attribute"
-                    self.result.taken[role] = Taken(role, entry["name"], how, units, None, (), True)
-                    return
+            if not entry or entry["name"] not in self.source.attrs:
+                continue
+            value = self.source.attrs[entry["name"]]
+            units = entry.get("units") or _unit_after_number(value)
+            if units and np.isfinite(leading_number(value)):
+                how = f"layout {row['name']!r}, global attribute"
+                taken = Taken(role, entry["name"], how, units, None, (), True)
+                self.result.attributes[role] = taken
+                self.result.taken.setdefault(role, taken)
+                return
 
     def _reject(self, role: str, variable: str, reason: str) -> None:
         self.result.rejected.append(Rejected(role, printable(variable, 80), reason))
@@ -499,15 +513,6 @@ def _is_pressure_unit(units: str) -> bool:
     except InputError:
         return False
     return True
-
-
-def _leading_number(value: Any) -> float:
-    """Number at the start of an attribute such as ``20 m``, NaN when there is none."""
-    if isinstance(value, str):
-        match = re.match(r"\s*[-+]?\d{1,12}(?:\.\d{1,9})?", value)
-        return float(match.group()) if match else float("nan")
-    number = np.asarray(value).ravel()
-    return float(number[0]) if number.size == 1 and number.dtype.kind in "iuf" else float("nan")
 
 
 def _unit_after_number(value: Any) -> str | None:

@@ -62,8 +62,12 @@ class Recognition:
         Roles whose candidates cannot be used as they are; raised by `require`.
     vertical_dim : str or None
         Dimension along the vertical; None where the file has none.
+    attributes : dict of str to Taken
+        Roles whose value also stands in a global attribute, by a layout.
     groups : dict of str to dict
         Sets of levels in separate arrays: group → role → Taken.
+    group_counts : dict of str to str
+        Group → variable with the number of its levels per launch.
     layouts : tuple of str
         Layouts that apply.
     station_attributes : tuple of str
@@ -75,6 +79,7 @@ class Recognition:
     rejected: list[Rejected] = field(default_factory=list)
     problems: dict[str, InputError] = field(default_factory=dict)
     vertical_dim: str | None = None
+    attributes: dict[str, Taken] = field(default_factory=dict)
     groups: dict[str, dict[str, Taken]] = field(default_factory=dict)
     group_counts: dict[str, str] = field(default_factory=dict)
     layouts: tuple[str, ...] = ()

@@ -23,8 +23,8 @@ from forecast.ingest.classic_header import declared_length
 
 __all__ = ["MAX_LEVELS", "MAX_VALUES", "Source", "VariableInfo", "decode_times", "open_source"]
 
-#: Most values read from a variable at once (800 MB as float64); common sense, no source.
-MAX_VALUES = 100_000_000
+#: Most values read from a variable at once (160 MB as float64); common sense, no source.
+MAX_VALUES = 20_000_000
 
 #: Most levels of one profile: 55 hours at one per second; common sense, no source.
 MAX_LEVELS = 200_000

@@ -1,0 +1,517 @@
+"""Soundings in a file, of whatever sampling geometry, read into columns.
+
+Serves one ascent per file with time as the way up, the CF discrete sampling geometries, plain
+two-dimensional files, and launches whose mandatory and significant levels stand in separate
+arrays. The time of a profile is its first known time (the launch), its position that of its
+first level with one.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any
+
+import numpy as np
+
+from forecast.errors import InputError, printable
+from forecast.ingest.assemble import EXTRAS, Column
+from forecast.ingest.recognise import leading_number, read_role, read_taken
+from forecast.ingest.recognition import Recognition
+from forecast.ingest.roles import HUMIDITY_ROLES
+from forecast.ingest.sampling_geometries import (
+    Geometry,
+    Multidimensional,
+    find_geometry,
+    is_ragged,
+)
+from forecast.ingest.soundings import Sounding, to_column
+from forecast.ingest.source import MAX_LEVELS, Source, decode_times
+from forecast.physics import moisture
+from forecast.schema import QUALITY_FLAGS
+
+__all__ = ["ColumnOrReason", "check_profiles", "read_ascents"]
+
+#: Least change of altitude (m), or ratio of pressures, along a way up; a station's altitude and
+#: its pressure through one day change less. Common practice, no source.
+LEAST_RISE = 50.0
+LEAST_PRESSURE_RATIO = 1.02
+
+#: A column, or why a profile of the file is set aside.
+ColumnOrReason = Column | InputError
+
+
+def read_ascents(source: Source, recognition: Recognition) -> list[ColumnOrReason]:
+    """Columns of all soundings in a file; a sounding that cannot be used gives its reason.
+
+    Parameters
+    ----------
+    source : Source
+        Open file.
+    recognition : Recognition
+        Of that file.
+
+    Returns
+    -------
+    list of Column or InputError
+        In file order.
+
+    Raises
+    ------
+    InputError
+        If the file as a whole cannot be used.
+    """
+    soundings = (
+        _grouped_soundings(source, recognition)
+        if recognition.groups
+        else _soundings(source, recognition)
+    )
+    result: list[ColumnOrReason] = []
+    for number, sounding in enumerate(soundings):
+        try:
+            result.append(to_column(sounding))
+        except InputError as error:
+            if len(soundings) > 1:
+                error = InputError(
+                    f"profile {number + 1} of {len(soundings)}: {error.reason}",
+                    source=source.name,
+                    variable=error.variable,
+                    remedy=error.remedy,
+                )
+            result.append(error)
+    return result
+
+
+def check_profiles(source: Source, recognition: Recognition) -> None:
+    """Raise InputError if the file holds no vertical profiles at all."""
+    if recognition.groups:
+        return
+    if recognition.vertical_dim is None:
+        if "air_temperature" in recognition or _is_flat(source, recognition):
+            raise InputError(
+                "no vertical dimension: surface observations or fields, not profiles",
+                source=source.name,
+            )
+        recognition.require("air_temperature")
+    taken = recognition.require("air_temperature")
+    vertical = recognition.vertical_dim
+    assert vertical is not None
+    kind = str(source.attrs.get("featureType", "")).strip().lower()
+    alone = taken.dims == (vertical,) or kind in ("point", "timeseries", "trajectory")
+    if alone and not is_ragged(source, vertical):
+        _check_rise(source, recognition, vertical)
+
+
+def _is_flat(source: Source, recognition: Recognition) -> bool:
+    """Whether no air temperature was sought among variables that have a further dimension."""
+    rejected = [r for r in recognition.rejected if r.role == "air_temperature"]
+    if rejected:
+        return all(r.reason == "does not vary along the vertical" for r in rejected)
+    return all(sum(n > 1 for n in v.shape) <= 1 or v.is_text for v in source.variables.values())
+
+
+def _check_rise(source: Source, recognition: Recognition, vertical: str) -> None:
+    """Refuse a series at one place: along a way up altitude or pressure must change."""
+    if source.dims[vertical] > MAX_LEVELS:
+        return
+    for role in ("altitude", "height", "geopotential_height", "air_pressure"):
+        taken = recognition.get(role)
+        if taken is None or vertical not in taken.dims:
+            continue
+        values = np.moveaxis(read_role(source, recognition, role), taken.dims.index(vertical), -1)
+        values = values.reshape(-1, values.shape[-1])
+        values = values[np.isfinite(values).any(axis=1)]
+        if not values.size:
+            continue
+        low, high = np.nanmin(values, axis=1), np.nanmax(values, axis=1)
+        if role == "air_pressure":
+            if (high >= LEAST_PRESSURE_RATIO * low).any():
+                return
+            found = f"pressure varies between {low[0]:.5g} and {high[0]:.5g} Pa only"
+        else:
+            if (high - low >= LEAST_RISE).any():
+                return
+            found = f"{role.replace('_', ' ')} varies by {(high - low).max():.3g} m only"
+        raise InputError(
+            f"no vertical dimension: surface observations, not profiles ({found} along "
+            f"{vertical!r})",
+            source=source.name,
+        )
+
+
+# --- one geometry for all levels ------------------------------------------------------------------
+
+
+def _soundings(source: Source, recognition: Recognition) -> list[Sounding]:
+    geometry = find_geometry(source, recognition)
+    if geometry.count == 0:
+        raise InputError("holds no profiles", source=source.name)
+    common = _per_profile(source, recognition, geometry)
+    levels = _level_reader(source, recognition, geometry)
+    recognition.require("air_pressure")
+    pressure, temperature = levels("air_pressure"), levels("air_temperature")
+    assert pressure is not None and temperature is not None
+    latitude = common["latitude"]
+    altitude, above_ground = _altitudes(recognition, levels, latitude)
+    humidity_role, given = _humidity(recognition, levels)
+    u, v = _wind(levels)
+
+    result = []
+    for i in range(geometry.count):
+        result.append(
+            Sounding(
+                time=common["time"][i],
+                station=common["station"][i],
+                source_file=source.name,
+                pressure=pressure[i],
+                temperature=temperature[i],
+                specific_humidity=_specific_humidity(
+                    humidity_role, given[i], temperature[i], pressure[i]
+                ),
+                altitude=None if altitude is None else altitude[i],
+                above_ground=above_ground,
+                latitude=float(latitude[i]),
+                longitude=float(common["longitude"][i]),
+                surface_altitude=float(common["surface_altitude"][i]),
+                u=None if u is None else u[i],
+                v=None if v is None else v[i],
+                lead_time=common["lead_time"][i],
+                source_kind=common["source_kind"],
+                member=common["member"][i],
+                extras=common["extras"][i],
+                humidity_name=humidity_role.replace("_", " "),
+                humidity_given=np.isfinite(given[i]),
+            )
+        )
+    return result
+
+
+def _level_reader(
+    source: Source, recognition: Recognition, geometry: Geometry
+) -> Callable[[str], list[np.ndarray] | None]:
+    def levels(role: str) -> list[np.ndarray] | None:
+        taken = recognition.get(role)
+        if taken is None:
+            return None
+        return geometry.levels(read_role(source, recognition, role), taken.dims)
+
+    return levels
+
+
+def _altitudes(
+    recognition: Recognition, levels: Callable[[str], list[np.ndarray] | None], latitude: Any
+) -> tuple[list[np.ndarray] | None, bool]:
+    """Heights as given: geometric altitude, else geopotential, else above ground; and which."""
+    from forecast.ingest.vertical import geometric_altitude
+
+    given = levels("altitude")
+    if given is not None:
+        return given, False
+    for role, divisor in (("geopotential_height", 1.0), ("geopotential", 9.80665)):
+        given = levels(role)
+        if given is not None:
+            return [
+                geometric_altitude(h / divisor, lat) for h, lat in zip(given, latitude, strict=True)
+            ], False
+    given = levels("height")
+    if given is not None:
+        return given, True
+    for role in ("altitude", "geopotential_height", "geopotential", "height"):
+        if role in recognition.problems:
+            raise recognition.problems[role]
+    return None, False
+
+
+def _humidity(
+    recognition: Recognition, levels: Callable[[str], list[np.ndarray] | None]
+) -> tuple[str, list[np.ndarray]]:
+    """The measure of humidity that is used: the first of `HUMIDITY_ROLES` with values."""
+    held = [role for role in HUMIDITY_ROLES if role in recognition]
+    if not held:
+        for role in HUMIDITY_ROLES:
+            if role in recognition.problems:
+                raise recognition.problems[role]
+        raise InputError(
+            "no humidity recognised: sought relative humidity, dew point, mixing ratio, specific "
+            "humidity, vapour pressure",
+            source=recognition.source,
+            remedy='set names.relative_humidity = "<variable>" or another measure',
+        )
+    chosen: tuple[str, list[np.ndarray]] | None = None
+    for role in held:
+        given = levels(role)
+        assert given is not None
+        if chosen is None:
+            chosen = role, given
+        if sum(int(np.isfinite(row).sum()) for row in given) > len(given):
+            return role, given
+    assert chosen is not None
+    return chosen
+
+
+def _specific_humidity(
+    role: str, given: np.ndarray, temperature: np.ndarray, pressure: np.ndarray
+) -> np.ndarray:
+    with np.errstate(all="ignore"):
+        if role == "specific_humidity":
+            return given
+        if role == "relative_humidity":
+            return moisture.specific_humidity_from_relative_humidity(given, temperature, pressure)
+        if role == "dew_point_temperature":
+            return moisture.specific_humidity_from_dew_point(given, pressure)
+        if role == "dew_point_depression":
+            return moisture.specific_humidity_from_dew_point(temperature - given, pressure)
+        if role == "humidity_mixing_ratio":
+            return moisture.specific_humidity_from_mixing_ratio(given)
+        return moisture.specific_humidity_from_vapour_pressure(given, pressure)
+
+
+def _wind(
+    levels: Callable[[str], list[np.ndarray] | None],
+) -> tuple[list[np.ndarray] | None, list[np.ndarray] | None]:
+    u, v = levels("eastward_wind"), levels("northward_wind")
+    if u is not None and v is not None:
+        return u, v
+    speed, origin = levels("wind_speed"), levels("wind_from_direction")
+    if speed is None or origin is None:
+        return None, None
+    return (
+        [-s * np.sin(np.radians(d)) for s, d in zip(speed, origin, strict=True)],
+        [-s * np.cos(np.radians(d)) for s, d in zip(speed, origin, strict=True)],
+    )
+
+
+# --- values per profile ---------------------------------------------------------------------------
+
+
+def _per_profile(source: Source, recognition: Recognition, geometry: Geometry) -> dict[str, Any]:
+    """Time, position, station and optional values, one entry per profile."""
+    count = geometry.count
+
+    def scalars(role: str, *, needed: bool = False) -> np.ndarray:
+        taken = recognition.require(role) if needed else recognition.get(role)
+        if taken is None:
+            return np.full(count, np.nan)
+        values = read_role(source, recognition, role)
+        if taken.attribute:
+            return np.repeat(values.ravel(), count)
+        return geometry.scalars(values, taken.dims)
+
+    result: dict[str, Any] = {
+        "time": _times(source, recognition, geometry),
+        "latitude": scalars("latitude", needed=True),
+        "longitude": scalars("longitude", needed=True),
+        "surface_altitude": scalars("surface_altitude"),
+    }
+    result["station"] = _stations(source, recognition, geometry, result)
+    result["lead_time"], result["source_kind"] = _lead_times(
+        source, recognition, geometry, result["time"]
+    )
+    members = scalars("member")
+    result["member"] = [int(m) if np.isfinite(m) else None for m in members]
+    extras = {name: scalars(name) for name in EXTRAS if name in recognition}
+    _near_surface_humidity(recognition, scalars, extras)
+    result["extras"] = [
+        {name: float(values[i]) for name, values in extras.items() if np.isfinite(values[i])}
+        for i in range(count)
+    ]
+    return result
+
+
+def _near_surface_humidity(
+    recognition: Recognition, scalars: Callable[..., np.ndarray], extras: dict[str, np.ndarray]
+) -> None:
+    pressure = extras.get("surface_air_pressure")
+    if "specific_humidity_2m" in extras or pressure is None:
+        return
+    with np.errstate(all="ignore"):
+        if "dew_point_temperature_2m" in recognition:
+            extras["specific_humidity_2m"] = moisture.specific_humidity_from_dew_point(
+                scalars("dew_point_temperature_2m"), pressure
+            )
+        elif "relative_humidity_2m" in recognition and "air_temperature_2m" in extras:
+            extras["specific_humidity_2m"] = moisture.specific_humidity_from_relative_humidity(
+                scalars("relative_humidity_2m"), extras["air_temperature_2m"], pressure
+            )
+
+
+def _times(source: Source, recognition: Recognition, geometry: Geometry) -> np.ndarray:
+    taken = recognition.require("time")
+    times = np.full(geometry.count, np.datetime64("NaT", "ns"))
+    if not taken.attribute:
+        values = source.read_times(taken.variable, units=taken.units)
+        times = geometry.scalars(values, taken.dims)
+    attribute = recognition.attributes.get("time")
+    if attribute is not None and geometry.count == 1 and np.isnat(times).any():
+        number = leading_number(source.attrs[attribute.variable])
+        where = {"source": source.name, "variable": attribute.variable}
+        times = decode_times([number], attribute.units, None, **where)
+    return times
+
+
+def _lead_times(
+    source: Source, recognition: Recognition, geometry: Geometry, time: np.ndarray
+) -> tuple[list[np.timedelta64 | None], str]:
+    """Lead times and kind: a reference time or forecast period makes the profiles a model's."""
+    reference, period = (
+        recognition.get("forecast_reference_time"),
+        recognition.get("forecast_period"),
+    )
+    if reference is not None:
+        start = source.read_times(reference.variable, units=reference.units)
+        lead = time - geometry.scalars(start, reference.dims)
+        return list(lead.astype("timedelta64[ns]")), "model"
+    if period is not None:
+        seconds = geometry.scalars(read_role(source, recognition, "forecast_period"), period.dims)
+        lead = (np.nan_to_num(seconds) * 1e9).astype("timedelta64[ns]")
+        return list(lead), "model"
+    return [None] * geometry.count, "ascent"
+
+
+def _stations(
+    source: Source, recognition: Recognition, geometry: Geometry, position: dict[str, Any]
+) -> list[str]:
+    """Names of the stations: by variable, else by global attributes, else by position."""
+    taken = recognition.get("station")
+    if taken is not None:
+        info = source.variables[taken.variable]
+        texts = np.array(source.read_text(taken.variable), dtype=str)
+        characters = (
+            info.is_text
+            and info.dtype is not str
+            and info.shape
+            and texts.size != int(np.prod(info.shape))
+        )
+        dims = info.dims[:-1] if characters else info.dims
+        shape = info.shape[: len(dims)]
+        names = [str(n) for n in geometry.scalars(texts.reshape(shape), dims)]
+        if all(names):
+            return names
+    words = [
+        printable(source.attrs[name], 60)
+        for name in recognition.station_attributes
+        if str(source.attrs.get(name, "")).strip()
+    ]
+    if words:
+        return [" ".join(words)] * geometry.count
+    return [
+        f"{abs(lat):.1f}{'N' if lat >= 0 else 'S'} {abs(lon):.1f}{'E' if lon >= 0 else 'W'}"
+        for lat, lon in zip(
+            position["latitude"], (position["longitude"] + 180.0) % 360.0 - 180.0, strict=True
+        )
+    ]
+
+
+# --- mandatory and significant levels -------------------------------------------------------------
+
+
+def _grouped_soundings(source: Source, recognition: Recognition) -> list[Sounding]:
+    """Launches whose sets of levels stand in separate arrays, merged in order of pressure."""
+    first = next(iter(recognition.groups.values()))["air_pressure"]
+    profile_dims = first.dims[:-1]
+    base = Multidimensional(source.name, profile_dims, first.dims[-1], source.dims)
+    common = _per_profile(source, recognition, base)
+    parts = [_group(source, recognition, name, profile_dims) for name in recognition.groups]
+    result = []
+    for i in range(base.count):
+        level = {key: np.concatenate([part[key][i] for part in parts]) for key in parts[0]}
+        level, flags = _merge(level)
+        result.append(
+            Sounding(
+                time=common["time"][i],
+                station=common["station"][i],
+                source_file=source.name,
+                pressure=level["p"],
+                temperature=level["t"],
+                specific_humidity=level["q"],
+                altitude=level["z"],
+                latitude=float(common["latitude"][i]),
+                longitude=float(common["longitude"][i]),
+                surface_altitude=float(common["surface_altitude"][i]),
+                u=level["u"],
+                v=level["v"],
+                quality=flags,
+                extras=common["extras"][i],
+            )
+        )
+    return result
+
+
+def _group(
+    source: Source, recognition: Recognition, name: str, profile_dims: tuple[str, ...]
+) -> dict[str, list[np.ndarray]]:
+    """One set of levels: p, t, q, z, u, v per profile, NaN where the set has no such value."""
+    members = recognition.groups[name]
+    vertical = members["air_pressure"].dims[-1]
+    if source.dims[vertical] > MAX_LEVELS:
+        raise InputError(
+            f"declares {source.dims[vertical]} levels along {vertical!r}; at most {MAX_LEVELS} "
+            "are read",
+            source=source.name,
+            variable=members["air_pressure"].variable,
+        )
+    geometry = Multidimensional(source.name, profile_dims, vertical, source.dims)
+    inside = np.ones((geometry.count, source.dims[vertical]), dtype=bool)
+    if name in recognition.group_counts:
+        variable = recognition.group_counts[name]
+        sizes = geometry.scalars(source.read(variable), source.variables[variable].dims)
+        with np.errstate(invalid="ignore"):
+            inside = ~(np.arange(source.dims[vertical]) >= sizes[:, np.newaxis])
+
+    def levels(role: str) -> list[np.ndarray] | None:
+        taken = members.get(role)
+        if taken is None:
+            return None
+        spread = geometry.levels(read_taken(source, recognition, taken), taken.dims)
+        return list(np.where(inside, np.array(spread), np.nan))
+
+    missing = [np.full(source.dims[vertical], np.nan)] * geometry.count
+    pressure, temperature = levels("air_pressure") or missing, levels("air_temperature") or missing
+    humidity = next((role for role in HUMIDITY_ROLES if role in members), None)
+    given = levels(humidity) if humidity else None
+    q = missing
+    if humidity and given:
+        q = [
+            _specific_humidity(humidity, row, t, p)
+            for row, t, p in zip(given, temperature, pressure, strict=True)
+        ]
+    subset = Recognition(source.name, taken=members)
+    latitude = np.full(geometry.count, 45.0)
+    if "latitude" in recognition:
+        taken = recognition.taken["latitude"]
+        latitude = geometry.scalars(read_role(source, recognition, "latitude"), taken.dims)
+    z, _ = _altitudes(subset, levels, latitude)
+    u, v = _wind(levels)
+    return {
+        "p": pressure,
+        "t": temperature,
+        "q": q,
+        "z": z or missing,
+        "u": u or missing,
+        "v": v or missing,
+    }
+
+
+def _merge(level: dict[str, np.ndarray]) -> tuple[dict[str, np.ndarray], np.ndarray]:
+    """Levels in order of falling pressure, each pressure once.
+
+    Where a pressure was given twice, the values of both are united, the first set's before the
+    second's, and the level is marked ``duplicate_level``.
+    """
+    known = np.isfinite(level["p"])
+    level = {key: values[known] for key, values in level.items()}
+    order = np.argsort(-level["p"], kind="stable")
+    level = {key: values[order] for key, values in level.items()}
+    repeat = np.concatenate([[False], np.diff(level["p"]) == 0.0])
+    while repeat.any():
+        # Unite each repeated level with the one before it, until no pressure stands twice.
+        at = np.flatnonzero(repeat & ~np.concatenate([[False], repeat[:-1]]))
+        for values in level.values():
+            values[at - 1] = np.where(np.isfinite(values[at - 1]), values[at - 1], values[at])
+        keep = np.ones(repeat.shape, dtype=bool)
+        keep[at] = False
+        flags = level.setdefault("flags", np.zeros(repeat.shape))
+        flags[at - 1] = 1.0
+        level = {key: values[keep] for key, values in level.items()}
+        repeat = np.concatenate([[False], np.diff(level["p"]) == 0.0])
+    flags = level.pop("flags", np.zeros(level["p"].shape))
+    return level, np.where(flags > 0, np.int32(QUALITY_FLAGS["duplicate_level"]), np.int32(0))

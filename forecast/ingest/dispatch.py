@@ -1,0 +1,85 @@
+"""Which reader a file is for: soundings, or model columns."""
+
+from __future__ import annotations
+
+from forecast.ingest.ascents import ColumnOrReason, check_profiles, read_ascents
+from forecast.ingest.recognise import HORIZONTAL
+from forecast.ingest.recognition import Recognition
+from forecast.ingest.source import Source
+
+__all__ = ["is_gridded", "is_model", "read_columns"]
+
+_SOUNDING_FEATURES = ("profile", "timeseriesprofile", "trajectoryprofile", "trajectory")
+
+
+def read_columns(
+    source: Source,
+    recognition: Recognition,
+    points: list[tuple[str, float, float]] | None,
+    method: str,
+) -> list[ColumnOrReason]:
+    """Columns of a file, or the reason for each profile that cannot be used.
+
+    Parameters
+    ----------
+    source : Source
+        Open file.
+    recognition : Recognition
+        Of that file.
+    points : list of (name, latitude, longitude) or None
+        Where to take columns from gridded data.
+    method : {"bilinear", "nearest"}
+
+    Returns
+    -------
+    list of Column or InputError
+
+    Raises
+    ------
+    InputError
+        If the file as a whole cannot be used.
+    """
+    check_profiles(source, recognition)
+    if is_model(source, recognition):
+        from forecast.ingest.model_levels import read_model_columns
+
+        return list(read_model_columns(source, recognition, points, method))
+    return read_ascents(source, recognition)
+
+
+def is_gridded(source: Source, recognition: Recognition) -> bool:
+    """Whether air temperature varies along horizontal coordinates."""
+    temperature, latitude = recognition.get("air_temperature"), recognition.get("latitude")
+    if temperature is None or latitude is None:
+        return False
+    own = latitude.dims == (latitude.variable,)
+    axes = [source.variables[d] for d in latitude.dims if d in source.variables]
+    plane = len(axes) == 2 and all(
+        axis.standard_name in HORIZONTAL or axis.attrs.get("axis") in ("X", "Y") for axis in axes
+    )
+    return (own or plane) and set(latitude.dims) <= set(temperature.dims)
+
+
+def is_model(source: Source, recognition: Recognition) -> bool:
+    """Whether a file holds model columns rather than soundings.
+
+    Hybrid levels and grids are models'. So are levels common to all times (a vertical coordinate
+    of one dimension beside a time dimension), unless the file says that it holds soundings.
+    """
+    if recognition.groups:
+        return False
+    if any(role in recognition for role in ("hybrid_a", "hybrid_a_half")):
+        return True
+    if str(source.attrs.get("featureType", "")).strip().lower() in _SOUNDING_FEATURES:
+        return False
+    if is_gridded(source, recognition):
+        return True
+    temperature, time = recognition.get("air_temperature"), recognition.get("time")
+    if temperature is None or time is None:
+        return False
+    common = any(
+        (taken := recognition.get(role)) is not None and taken.dims == (recognition.vertical_dim,)
+        for role in ("air_pressure", "altitude", "height")
+    )
+    beside = time.dims == (time.variable,) and time.variable in temperature.dims
+    return common and beside and time.variable != recognition.vertical_dim
