@@ -1,0 +1,1 @@
+"""For people and other programs: charts, page, tables and netCDF from an Outlook."""
