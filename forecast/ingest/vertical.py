@@ -259,10 +259,8 @@ def surface_height(
     above = valid & (p <= ps)
     upper = above.argmax(axis=-1)[..., np.newaxis]
     lower = np.take_along_axis(_valid_before(valid), upper, -1)
-    (p1, h1, t1), (p0, h0) = (
-        (np.take_along_axis(x, at, -1) for x in arrays)
-        for arrays, at in (((p, h, tv), upper), ((p, h), lower))
-    )
+    p1, h1, t1 = (np.take_along_axis(x, upper, -1) for x in (p, h, tv))
+    p0, h0 = (np.take_along_axis(x, lower, -1) for x in (p, h))
     with np.errstate(divide="ignore", invalid="ignore"):
         share = np.log(ps / p1) / np.log(p0 / p1)
         between = h1 + share * (h0 - h1)
