@@ -26,6 +26,7 @@ from forecast.ingest.sampling_geometries import (
 )
 from forecast.ingest.soundings import Sounding, to_column
 from forecast.ingest.source import MAX_LEVELS, Source, decode_times
+from forecast.ingest.vertical import geometric_altitude
 from forecast.physics import moisture
 from forecast.schema import QUALITY_FLAGS
 
@@ -86,7 +87,8 @@ def check_profiles(source: Source, recognition: Recognition) -> None:
     if recognition.groups:
         return
     if recognition.vertical_dim is None:
-        if "air_temperature" in recognition or _is_flat(source, recognition):
+        near_surface = [role for role in recognition.taken if role.endswith(("_2m", "_10m"))]
+        if "air_temperature" in recognition or near_surface or _is_flat(source, recognition):
             raise InputError(
                 "no vertical dimension: surface observations or fields, not profiles",
                 source=source.name,
@@ -117,7 +119,9 @@ def _check_rise(source: Source, recognition: Recognition, vertical: str) -> None
         taken = recognition.get(role)
         if taken is None or vertical not in taken.dims:
             continue
-        values = np.moveaxis(read_role(source, recognition, role), taken.dims.index(vertical), -1)
+        values = np.moveaxis(
+            read_role(source, recognition, role, check=False), taken.dims.index(vertical), -1
+        )
         values = values.reshape(-1, values.shape[-1])
         values = values[np.isfinite(values).any(axis=1)]
         if not values.size:
@@ -153,6 +157,7 @@ def _soundings(source: Source, recognition: Recognition) -> list[Sounding]:
     latitude = common["latitude"]
     altitude, above_ground = _altitudes(recognition, levels, latitude)
     humidity_role, given = _humidity(recognition, levels)
+    recognition.humidity = humidity_role
     u, v = _wind(levels)
 
     result = []
@@ -201,8 +206,6 @@ def _altitudes(
     recognition: Recognition, levels: Callable[[str], list[np.ndarray] | None], latitude: Any
 ) -> tuple[list[np.ndarray] | None, bool]:
     """Heights as given: geometric altitude, else geopotential, else above ground; and which."""
-    from forecast.ingest.vertical import geometric_altitude
-
     given = levels("altitude")
     if given is not None:
         return given, False

@@ -312,7 +312,13 @@ class _Recogniser:
         chosen, how = strong[0]
         for info, other in usable:
             if info is not chosen:
-                self._reject(role, info.name, f"{chosen.name} ({how}) comes first over {other}")
+                self._reject(
+                    role,
+                    info.name,
+                    f"{chosen.name} was chosen ({how} before {other})"
+                    if how != other
+                    else f"{chosen.name} was chosen",
+                )
         try:
             result.taken[role] = self._take(role, chosen, how)
         except InputError as error:

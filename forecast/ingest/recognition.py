@@ -70,6 +70,8 @@ class Recognition:
         Group → variable with the number of its levels per launch.
     layouts : tuple of str
         Layouts that apply.
+    humidity : str
+        Measure of humidity that was used, once profiles are read.
     station_attributes : tuple of str
         Global attributes that name the station.
     """
@@ -83,6 +85,7 @@ class Recognition:
     groups: dict[str, dict[str, Taken]] = field(default_factory=dict)
     group_counts: dict[str, str] = field(default_factory=dict)
     layouts: tuple[str, ...] = ()
+    humidity: str = ""
     station_attributes: tuple[str, ...] = ()
 
     def __contains__(self, role: str) -> bool:
@@ -104,8 +107,11 @@ class Recognition:
             return self.taken[role]
         if role in self.problems:
             raise self.problems[role]
+        refused = [r for r in self.rejected if r.role == role]
+        found = "".join(f"; {r.variable} {r.reason}" for r in refused[:3])
         raise InputError(
-            f"no {role.replace('_', ' ')} recognised: sought {_sought(role)} and known layouts",
+            f"no {role.replace('_', ' ')} recognised: sought {_sought(role)} and known "
+            f"layouts{found}",
             source=self.source,
             remedy=f'set names.{role} = "<variable>"',
         )

@@ -14,6 +14,11 @@ import numpy as np
 from forecast.errors import InputError
 from forecast.ingest import quality as rules
 from forecast.ingest.assemble import Column
+from forecast.ingest.vertical import (
+    geometric_altitude,
+    geopotential_height,
+    hypsometric_height,
+)
 from forecast.schema import QUALITY_FLAGS
 
 __all__ = ["Sounding", "to_column"]
@@ -77,8 +82,6 @@ def to_column(sounding: Sounding) -> Column:
         If fewer than two levels are usable, position or time are missing, or heights and
         pressures contradict each other.
     """
-    from forecast.ingest.vertical import hypsometric_height
-
     p = np.asarray(sounding.pressure, dtype=float)
     fill = np.full(p.shape, np.nan)
     t, q = sounding.temperature.astype(float), sounding.specific_humidity.astype(float)
@@ -103,7 +106,7 @@ def to_column(sounding: Sounding) -> Column:
     flags |= _bit("humidity_out_of_range", outside) | _bit("supersaturation", wet)
     flags |= _bit("value_missing", ~(np.isfinite(p) & np.isfinite(t) & np.isfinite(q)))
 
-    thickness = _thickness(hypsometric_height, p, t, q)
+    thickness = _thickness(sounding, p, t, q)
     _check_thickness(sounding, z, thickness)
     spiked = rules.height_spikes(z, thickness)
     z = np.where(spiked, np.nan, z)
@@ -198,16 +201,17 @@ def _upward(altitude: np.ndarray, pressure: np.ndarray) -> slice:
     return slice(None, None, -1) if top < (known.size - 1) / 2 else slice(None)
 
 
-def _thickness(
-    hypsometric_height: object, p: np.ndarray, t: np.ndarray, q: np.ndarray
-) -> np.ndarray:
-    """Hypsometric height of each level over the lowest, NaN where p or T is missing."""
-    result = np.full(p.shape, np.nan)
-    at = np.flatnonzero(np.isfinite(p) & np.isfinite(t))
-    if at.size:
-        moist = np.nan_to_num(q[at])
-        result[at] = hypsometric_height(p[at], t[at], moist, 0.0)  # type: ignore[operator]
-    return result
+def _thickness(sounding: Sounding, p: np.ndarray, t: np.ndarray, q: np.ndarray) -> np.ndarray:
+    """Geometric height of levels over the lowest by the hypsometric equation, m.
+
+    NaN where p or T is missing; air of unknown humidity counts as dry.
+    """
+    ground = 0.0 if np.isnan(sounding.surface_altitude) else sounding.surface_altitude
+    datum = geopotential_height(ground, sounding.latitude)
+    levels = hypsometric_height(p, t, np.nan_to_num(q), datum)
+    return geometric_altitude(levels, sounding.latitude) - geometric_altitude(
+        datum, sounding.latitude
+    )
 
 
 def _check_thickness(sounding: Sounding, z: np.ndarray, thickness: np.ndarray) -> None:
@@ -255,10 +259,8 @@ def _fill_heights(
     start = 0.0 if above_ground else sounding.surface_altitude
     surface = sounding.extras.get("surface_air_pressure", np.nan)
     if surface > p[first]:
-        from forecast.ingest.vertical import hypsometric_height
-
-        lowest = np.repeat(t[first], 2), np.repeat(np.nan_to_num(q[first]), 2)
-        start += float(hypsometric_height(np.array([surface, p[first]]), *lowest, 0.0)[-1])
+        pair = np.array([surface, p[first]]), np.repeat(t[first], 2), np.repeat(q[first], 2)
+        start += float(_thickness(sounding, *pair)[-1])
     result[at] = thickness[at] - thickness[first] + start
     return result, above_ground
 
