@@ -128,7 +128,12 @@ def make_products(
         settings_title=settings.title,
         sites=[(site.name, site.timezone) for site in sites],
         set_aside=set_aside,
-        meta={"made_at": stamp, "version": __version__, "warnings": warnings},
+        meta={
+            "made_at": stamp,
+            "version": __version__,
+            "warnings": warnings,
+            "threshold": settings.window_threshold,
+        },
     )
     products = {}
     for path in sorted(folder.iterdir()):

@@ -60,7 +60,7 @@ def write_outlook(outlook: xr.Dataset, path: str | Path, stamp: str) -> None:
             attrs["units_metadata"] = "leap_seconds: none"
     data.attrs = {
         "Conventions": "CF-1.11",
-        **{k: v for k, v in outlook.attrs.items()},
+        **outlook.attrs,
         "institution": "not stated; see source",
         "history": f"{stamp} made by bendcast {__version__}",
         "date_created": stamp,

@@ -1,0 +1,242 @@
+"""The page a planner opens in the morning: one HTML file that needs nothing else.
+
+Everything is embedded; the content security policy allows only the page's own style and script,
+named by hash, so that no text from a file or a settings name can do anything but be read.
+"""
+
+from __future__ import annotations
+
+import base64
+import hashlib
+import struct
+from datetime import UTC, datetime
+from functools import cache
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+from zoneinfo import ZoneInfo
+
+import numpy as np
+import xarray as xr
+from jinja2 import Environment, PackageLoader, StrictUndefined
+from markupsafe import Markup
+
+from forecast.errors import printable
+from forecast.output.chart_data import utc
+from forecast.output.files import write_text_atomic
+from forecast.output.tables import iso
+from forecast.output.text import local_time, metres, percent
+from forecast.schema import CAUTION, SIGHTLINE_STATES
+
+if TYPE_CHECKING:
+    from forecast.outlook import Window
+
+__all__ = ["write_page"]
+
+_CARDS = 6
+_NAME = 80  # characters of a name that are shown
+_STATES = {code: name for name, code in SIGHTLINE_STATES.items()} | {-1: "unknown"}
+
+
+def write_page(
+    path: str | Path,
+    *,
+    outlook: xr.Dataset,
+    windows: list[Window],
+    charts: dict[str, dict[str, Any]],
+    settings_title: str,
+    sites: list[tuple[str, str]],
+    set_aside: list[dict[str, str]],
+    meta: dict[str, Any],
+) -> None:
+    """Write the page, whole or not at all.
+
+    Parameters
+    ----------
+    path : str or Path
+        File to write.
+    outlook : xarray.Dataset
+        From `forecast.make_outlook`.
+    windows : list of Window
+        Best first.
+    charts : dict
+        By site: ``png`` (bytes), ``alt``, ``file``, as `forecast.output.charts.save_chart` gives.
+    settings_title : str
+        Title of the run.
+    sites : list of (str, str)
+        Name and IANA time zone of each site that has a chart.
+    set_aside : list of dict
+        ``site``, ``file``, ``reason``.
+    meta : dict
+        ``made_at`` (ISO 8601), ``version``, ``warnings``, ``threshold``.
+    """
+    zones = {name: ZoneInfo(zone) for name, zone in sites}
+    rows = [_window(rank, w, zones) for rank, w in enumerate(windows, 1)]
+    style, script = _asset("page.css"), _asset("page.js")
+    times = outlook["time"].values
+    html = (
+        _environment()
+        .get_template("page.html")
+        .render(
+            title=printable(settings_title, _NAME),
+            style=Markup(style),
+            script=Markup(script),
+            style_hash=_hash(style),
+            script_hash=_hash(script),
+            answer=_answer(rows),
+            span=f"Covers {_minute(times.min())} to {_minute(times.max())} UTC.",
+            best=_best(rows),
+            windows=rows,
+            threshold=percent(float(meta["threshold"])),
+            sites=[_site(outlook, name, charts[name]) for name, _ in sites],
+            resolution=[_resolution(outlook, name) for name, _ in sites],
+            error_model=outlook.attrs["error_model"],
+            calibration=outlook.attrs["calibration"],
+            set_aside=set_aside,
+            warnings=meta["warnings"],
+            caution=CAUTION,
+            source=outlook.attrs["source"],
+            made_at=meta["made_at"],
+            version=meta["version"],
+        )
+    )
+    write_text_atomic(path, html)
+
+
+@cache
+def _environment() -> Environment:
+    return Environment(
+        loader=PackageLoader("forecast.output"),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+    )
+
+
+def _asset(name: str) -> str:
+    loader = _environment().loader
+    assert loader is not None
+    return loader.get_source(_environment(), name)[0]
+
+
+def _hash(text: str) -> str:
+    return base64.b64encode(hashlib.sha256(text.encode()).digest()).decode()
+
+
+def _minute(time: np.datetime64) -> str:
+    return f"{utc(time):%Y-%m-%d %H:%M}"
+
+
+def _window(rank: int, w: Window, zones: dict[str, ZoneInfo]) -> dict[str, Any]:
+    zone = zones.get(w.site, ZoneInfo("UTC"))
+    lower, upper = 100.0 * w.lower, 100.0 * w.upper
+    return {
+        "rank": rank,
+        "kind": w.kind,
+        "site": printable(w.site, _NAME),
+        "subject": printable(w.subject, _NAME),
+        "when_utc": _span(w.start, w.end, UTC),
+        "when_local": _span(w.start, w.end, zone),
+        "best": local_time(w.best_time, UTC),
+        "best_local": local_time(w.best_time, zone),
+        "start": local_time(w.start, UTC),
+        "end": local_time(w.end, UTC),
+        "start_key": iso(w.start),
+        "end_key": iso(w.end),
+        "best_key": iso(w.best_time),
+        "chance": percent(w.probability),
+        "interval": f"{percent(w.lower)} to {percent(w.upper)}",
+        "bar": f"{100.0 * w.probability:.1f}",
+        "bar_lower": f"{lower:.1f}",
+        "bar_width": f"{max(upper - lower, 0.0):.1f}",
+        "valid_times": w.valid_times,
+        "reason": w.reason,
+    }
+
+
+def _span(start: datetime, end: datetime, zone: Any) -> str:
+    if start == end:
+        return local_time(start, zone)
+    last = end.astimezone(zone)
+    if start.astimezone(zone).date() == last.date():
+        return f"{local_time(start, zone)} to {last:%H:%M}"
+    return f"{local_time(start, zone)} to {local_time(end, zone)}"
+
+
+def _best(rows: list[dict[str, Any]]) -> list[dict[str, Any]]:
+    """The cards: the best window of each thing first, then what else there is."""
+    seen: set[tuple[str, str]] = set()
+    first, later = [], []
+    for row in rows:
+        key = (row["site"], row["subject"])
+        (later if key in seen else first).append(row)
+        seen.add(key)
+    return [*first, *later][:_CARDS]
+
+
+def _answer(rows: list[dict[str, Any]]) -> str:
+    if not rows:
+        return "Nothing worth going for in the times covered."
+    w = rows[0]
+    return (
+        f"{w['subject']}: {w['chance']} ({w['interval']}) at {w['best']} UTC, "
+        f"{w['best_local']} local."
+    )
+
+
+def _site(outlook: xr.Dataset, name: str, chart: dict[str, Any]) -> dict[str, Any]:
+    rows = np.flatnonzero(outlook["site"].values.astype(str) == name)
+    latest = int(rows[-1])
+    lines = []
+    for s in range(outlook.sizes["sightline"]):
+        if str(outlook["sightline_site"].values[s]) == name:
+            lines.append(_line(outlook, rows, latest, s))
+    width, height = struct.unpack(">II", chart["png"][16:24])  # PNG header, ISO/IEC 15948 11.2.2
+    return {
+        "name": printable(name, _NAME),
+        "png": base64.b64encode(chart["png"]).decode(),
+        "alt": chart["alt"],
+        "file": chart["file"],
+        "width": width,
+        "height": height,
+        "latest": _minute(outlook["time"].values[latest]),
+        "lines": lines,
+    }
+
+
+def _line(outlook: xr.Dataset, rows: np.ndarray, latest: int, s: int) -> dict[str, str]:
+    """One row of the sightlines' table: three hidden heights and the likeliest time."""
+    chance = np.nan_to_num(outlook["sightline_probability"].values[rows, s], nan=-1.0)
+    best = int(rows[np.lexsort((rows, -chance))[0]])
+    base = float(outlook["target_base_height"].values[s])
+    top = float(outlook["target_height"].values[s])
+    hidden = outlook["hidden_height"].values
+    return {
+        "name": printable(str(outlook["sightline_name"].values[s]), _NAME),
+        "wave": {"optical": "light", "radio": "radio"}[str(outlook["sightline_wave"].values[s])],
+        "distance": metres(float(outlook["distance"].values[s])),
+        "observer": metres(float(outlook["observer_height"].values[s])),
+        "target": metres(top) if base >= top else f"{base:.0f} to {metres(top)}",
+        "straight": metres(float(outlook["hidden_height_straight"].values[s])),
+        "standard": metres(float(outlook["hidden_height_standard"].values[s])),
+        "best_hidden": metres(float(hidden[best, s])),
+        "now_hidden": metres(float(hidden[latest, s])),
+        "state": _STATES[int(outlook["sightline_state"].values[best, s])],
+        "chance": percent(float(outlook["sightline_probability"].values[best, s])),
+        "when": _minute(outlook["time"].values[best]),
+    }
+
+
+def _resolution(outlook: xr.Dataset, name: str) -> str:
+    """What the profiles of a site resolve near the ground."""
+    mine = outlook["site"].values.astype(str) == name
+    parts = []
+    for kind, words in (("ascent", "ascents"), ("model", "model profiles")):
+        rows = mine & (outlook["source_kind"].values.astype(str) == kind)
+        if rows.any():
+            lowest = float(np.median(outlook["lowest_level"].values[rows]))
+            spacing = float(np.median(outlook["near_ground_resolution"].values[rows]))
+            parts.append(
+                f"{words} start at {lowest:.0f} m with a level every {spacing:.0f} m below 300 m"
+            )
+    return f"{printable(name, _NAME)}: {'; '.join(parts)} (medians); thinner layers go unseen."

@@ -1,0 +1,91 @@
+"""How numbers, times and charts are said in words."""
+
+from __future__ import annotations
+
+import math
+from datetime import datetime, tzinfo
+from typing import TYPE_CHECKING
+from zoneinfo import ZoneInfo
+
+import numpy as np
+
+from forecast.errors import printable
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+    from forecast.outlook import Window
+    from forecast.output.chart_data import TimeHeight
+
+__all__ = ["chart_text", "local_time", "metres", "percent", "shorten"]
+
+_MONTHS = ("Jan", "Feb", "Mar", "Apr", "May", "Jun", "Jul", "Aug", "Sep", "Oct", "Nov", "Dec")
+
+
+def percent(share: float) -> str:
+    """A share as whole per cent; a dash if unknown."""
+    return "–" if not math.isfinite(share) else f"{100.0 * share:.0f} %"
+
+
+def metres(height: float) -> str:
+    """A height or distance in whole metres, from 10 km in km; a dash if unknown."""
+    if not math.isfinite(height):
+        return "–"
+    return f"{height / 1000.0:.1f} km" if abs(height) >= 10e3 else f"{height:.0f} m"
+
+
+def local_time(time: datetime, zone: tzinfo) -> str:
+    """Day, month and time, such as 3 Jun 18:07; English month names in any locale."""
+    there = time.astimezone(zone)
+    return f"{there.day} {_MONTHS[there.month - 1]} {there:%H:%M}"
+
+
+def shorten(text: str, limit: int) -> str:
+    """Text from outside, printable and bounded."""
+    return printable(text, limit)
+
+
+def chart_text(outlook: xr.Dataset, data: TimeHeight, windows: list[Window], zone: ZoneInfo) -> str:
+    """Say in words what a time–height chart shows.
+
+    Parameters
+    ----------
+    outlook : xarray.Dataset
+        From `forecast.make_outlook`.
+    data : TimeHeight
+        What the chart shows.
+    windows : list of Window
+        Windows of this site, best first.
+    zone : ZoneInfo
+        Local time.
+
+    Returns
+    -------
+    str
+        A few sentences.
+    """
+    from forecast.output.chart_data import utc
+
+    ascents = int(data.ascent.sum())
+    parts = [
+        f"Time–height chart of {shorten(data.site, 80)}: {ascents} ascents and "
+        f"{data.time.size - ascents} model profiles from {utc(data.time[0]):%Y-%m-%d %H:%M} to "
+        f"{utc(data.time[-1]):%Y-%m-%d %H:%M} UTC, heights 0 to {data.edges[-1]:.0f} m."
+    ]
+    low = data.gradient < 0.0
+    share = np.mean(low.any(axis=1)) if low.size else 0.0
+    parts.append(f"{percent(float(share))} of the profiles hold a trapping layer.")
+    for strip in data.strips:
+        known = strip.probability[np.isfinite(strip.probability)]
+        if known.size:
+            parts.append(
+                f"{shorten(strip.label, 80)}: at most {percent(float(known.max()))}, "
+                f"over half at {int((known > 0.5).sum())} of {known.size} times."
+            )
+    if windows:
+        w = windows[0]
+        parts.append(
+            f"Best window: {shorten(w.subject, 80)}, {local_time(w.best_time, zone)} local time, "
+            f"{percent(w.probability)}."
+        )
+    return " ".join(parts)
