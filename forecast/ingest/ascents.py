@@ -2,8 +2,8 @@
 
 Serves one ascent per file with time as the way up, the CF discrete sampling geometries, plain
 two-dimensional files, and launches whose mandatory and significant levels stand in separate
-arrays. The time of a profile is its first known time (the launch), its position that of its
-first level with one.
+arrays (through `forecast.ingest.level_groups`). The time of a profile is its first known time
+(the launch), its position that of its first level with one.
 """
 
 from __future__ import annotations
@@ -14,72 +14,33 @@ from typing import Any
 import numpy as np
 
 from forecast.errors import InputError, printable
-from forecast.ingest.assemble import EXTRAS, Column
-from forecast.ingest.recognise import leading_number, read_role, read_taken
+from forecast.ingest.assemble import EXTRAS
+from forecast.ingest.recognise import leading_number, read_role
 from forecast.ingest.recognition import Recognition
 from forecast.ingest.roles import HUMIDITY_ROLES
 from forecast.ingest.sampling_geometries import (
     Geometry,
-    Multidimensional,
     find_geometry,
     is_ragged,
 )
-from forecast.ingest.soundings import Sounding, to_column
+from forecast.ingest.soundings import Sounding
 from forecast.ingest.source import MAX_LEVELS, Source, decode_times
 from forecast.ingest.vertical import geometric_altitude
 from forecast.physics import moisture
-from forecast.schema import QUALITY_FLAGS
 
-__all__ = ["ColumnOrReason", "check_profiles", "read_ascents"]
+__all__ = [
+    "altitudes",
+    "check_profiles",
+    "per_profile",
+    "read_soundings",
+    "specific_humidity",
+    "wind",
+]
 
 #: Least change of altitude (m), or ratio of pressures, along a way up; a station's altitude and
 #: its pressure through one day change less. Common practice, no source.
 LEAST_RISE = 50.0
 LEAST_PRESSURE_RATIO = 1.02
-
-#: A column, or why a profile of the file is set aside.
-ColumnOrReason = Column | InputError
-
-
-def read_ascents(source: Source, recognition: Recognition) -> list[ColumnOrReason]:
-    """Columns of all soundings in a file; a sounding that cannot be used gives its reason.
-
-    Parameters
-    ----------
-    source : Source
-        Open file.
-    recognition : Recognition
-        Of that file.
-
-    Returns
-    -------
-    list of Column or InputError
-        In file order.
-
-    Raises
-    ------
-    InputError
-        If the file as a whole cannot be used.
-    """
-    soundings = (
-        _grouped_soundings(source, recognition)
-        if recognition.groups
-        else _soundings(source, recognition)
-    )
-    result: list[ColumnOrReason] = []
-    for number, sounding in enumerate(soundings):
-        try:
-            result.append(to_column(sounding))
-        except InputError as error:
-            if len(soundings) > 1:
-                error = InputError(
-                    f"profile {number + 1} of {len(soundings)}: {error.reason}",
-                    source=source.name,
-                    variable=error.variable,
-                    remedy=error.remedy,
-                )
-            result.append(error)
-    return result
 
 
 def check_profiles(source: Source, recognition: Recognition) -> None:
@@ -142,23 +103,39 @@ def _check_rise(source: Source, recognition: Recognition, vertical: str) -> None
         )
 
 
-# --- one geometry for all levels ------------------------------------------------------------------
+def read_soundings(source: Source, recognition: Recognition) -> list[Sounding]:
+    """All soundings of a file whose levels stand in one set of arrays.
 
+    Parameters
+    ----------
+    source : Source
+        Open file.
+    recognition : Recognition
+        Of that file.
 
-def _soundings(source: Source, recognition: Recognition) -> list[Sounding]:
+    Returns
+    -------
+    list of Sounding
+        In file order, as read.
+
+    Raises
+    ------
+    InputError
+        If the file as a whole cannot be used.
+    """
     geometry = find_geometry(source, recognition)
     if geometry.count == 0:
         raise InputError("holds no profiles", source=source.name)
-    common = _per_profile(source, recognition, geometry)
+    common = per_profile(source, recognition, geometry)
     levels = _level_reader(source, recognition, geometry)
     recognition.require("air_pressure")
     pressure, temperature = levels("air_pressure"), levels("air_temperature")
     assert pressure is not None and temperature is not None
     latitude = common["latitude"]
-    altitude, above_ground = _altitudes(recognition, levels, latitude)
+    altitude, above_ground = altitudes(recognition, levels, latitude)
     humidity_role, given = _humidity(recognition, levels)
     recognition.humidity = humidity_role
-    u, v = _wind(levels)
+    u, v = wind(levels)
 
     result = []
     for i in range(geometry.count):
@@ -169,7 +146,7 @@ def _soundings(source: Source, recognition: Recognition) -> list[Sounding]:
                 source_file=source.name,
                 pressure=pressure[i],
                 temperature=temperature[i],
-                specific_humidity=_specific_humidity(
+                specific_humidity=specific_humidity(
                     humidity_role, given[i], temperature[i], pressure[i]
                 ),
                 altitude=None if altitude is None else altitude[i],
@@ -202,7 +179,7 @@ def _level_reader(
     return levels
 
 
-def _altitudes(
+def altitudes(
     recognition: Recognition, levels: Callable[[str], list[np.ndarray] | None], latitude: Any
 ) -> tuple[list[np.ndarray] | None, bool]:
     """Heights as given: geometric altitude, else geopotential, else above ground; and which."""
@@ -251,9 +228,22 @@ def _humidity(
     return chosen
 
 
-def _specific_humidity(
+def specific_humidity(
     role: str, given: np.ndarray, temperature: np.ndarray, pressure: np.ndarray
 ) -> np.ndarray:
+    """Specific humidity (kg/kg) from any measure of humidity in SI.
+
+    Parameters
+    ----------
+    role : str
+        One of `forecast.ingest.roles.HUMIDITY_ROLES`.
+    given, temperature, pressure : ndarray
+        The measure, K and Pa; relative humidity and dew point are over water.
+
+    Returns
+    -------
+    ndarray
+    """
     with np.errstate(all="ignore"):
         if role == "specific_humidity":
             return given
@@ -268,9 +258,10 @@ def _specific_humidity(
         return moisture.specific_humidity_from_vapour_pressure(given, pressure)
 
 
-def _wind(
+def wind(
     levels: Callable[[str], list[np.ndarray] | None],
 ) -> tuple[list[np.ndarray] | None, list[np.ndarray] | None]:
+    """Eastward and northward wind (m/s) per profile, from components or speed and direction."""
     u, v = levels("eastward_wind"), levels("northward_wind")
     if u is not None and v is not None:
         return u, v
@@ -286,7 +277,7 @@ def _wind(
 # --- values per profile ---------------------------------------------------------------------------
 
 
-def _per_profile(source: Source, recognition: Recognition, geometry: Geometry) -> dict[str, Any]:
+def per_profile(source: Source, recognition: Recognition, geometry: Geometry) -> dict[str, Any]:
     """Time, position, station and optional values, one entry per profile."""
     count = geometry.count
 
@@ -402,119 +393,3 @@ def _stations(
             position["latitude"], (position["longitude"] + 180.0) % 360.0 - 180.0, strict=True
         )
     ]
-
-
-# --- mandatory and significant levels -------------------------------------------------------------
-
-
-def _grouped_soundings(source: Source, recognition: Recognition) -> list[Sounding]:
-    """Launches whose sets of levels stand in separate arrays, merged in order of pressure."""
-    first = next(iter(recognition.groups.values()))["air_pressure"]
-    profile_dims = first.dims[:-1]
-    base = Multidimensional(source.name, profile_dims, first.dims[-1], source.dims)
-    common = _per_profile(source, recognition, base)
-    parts = [_group(source, recognition, name, profile_dims) for name in recognition.groups]
-    result = []
-    for i in range(base.count):
-        level = {key: np.concatenate([part[key][i] for part in parts]) for key in parts[0]}
-        level, flags = _merge(level)
-        result.append(
-            Sounding(
-                time=common["time"][i],
-                station=common["station"][i],
-                source_file=source.name,
-                pressure=level["p"],
-                temperature=level["t"],
-                specific_humidity=level["q"],
-                altitude=level["z"],
-                latitude=float(common["latitude"][i]),
-                longitude=float(common["longitude"][i]),
-                surface_altitude=float(common["surface_altitude"][i]),
-                u=level["u"],
-                v=level["v"],
-                quality=flags,
-                extras=common["extras"][i],
-            )
-        )
-    return result
-
-
-def _group(
-    source: Source, recognition: Recognition, name: str, profile_dims: tuple[str, ...]
-) -> dict[str, list[np.ndarray]]:
-    """One set of levels: p, t, q, z, u, v per profile, NaN where the set has no such value."""
-    members = recognition.groups[name]
-    vertical = members["air_pressure"].dims[-1]
-    if source.dims[vertical] > MAX_LEVELS:
-        raise InputError(
-            f"declares {source.dims[vertical]} levels along {vertical!r}; at most {MAX_LEVELS} "
-            "are read",
-            source=source.name,
-            variable=members["air_pressure"].variable,
-        )
-    geometry = Multidimensional(source.name, profile_dims, vertical, source.dims)
-    inside = np.ones((geometry.count, source.dims[vertical]), dtype=bool)
-    if name in recognition.group_counts:
-        variable = recognition.group_counts[name]
-        sizes = geometry.scalars(source.read(variable), source.variables[variable].dims)
-        with np.errstate(invalid="ignore"):
-            inside = ~(np.arange(source.dims[vertical]) >= sizes[:, np.newaxis])
-
-    def levels(role: str) -> list[np.ndarray] | None:
-        taken = members.get(role)
-        if taken is None:
-            return None
-        spread = geometry.levels(read_taken(source, recognition, taken), taken.dims)
-        return list(np.where(inside, np.array(spread), np.nan))
-
-    missing = [np.full(source.dims[vertical], np.nan)] * geometry.count
-    pressure, temperature = levels("air_pressure") or missing, levels("air_temperature") or missing
-    humidity = next((role for role in HUMIDITY_ROLES if role in members), None)
-    given = levels(humidity) if humidity else None
-    q = missing
-    if humidity and given:
-        q = [
-            _specific_humidity(humidity, row, t, p)
-            for row, t, p in zip(given, temperature, pressure, strict=True)
-        ]
-    subset = Recognition(source.name, taken=members)
-    latitude = np.full(geometry.count, 45.0)
-    if "latitude" in recognition:
-        taken = recognition.taken["latitude"]
-        latitude = geometry.scalars(read_role(source, recognition, "latitude"), taken.dims)
-    z, _ = _altitudes(subset, levels, latitude)
-    u, v = _wind(levels)
-    return {
-        "p": pressure,
-        "t": temperature,
-        "q": q,
-        "z": z or missing,
-        "u": u or missing,
-        "v": v or missing,
-    }
-
-
-def _merge(level: dict[str, np.ndarray]) -> tuple[dict[str, np.ndarray], np.ndarray]:
-    """Levels in order of falling pressure, each pressure once.
-
-    Where a pressure was given twice, the values of both are united, the first set's before the
-    second's, and the level is marked ``duplicate_level``.
-    """
-    known = np.isfinite(level["p"])
-    level = {key: values[known] for key, values in level.items()}
-    order = np.argsort(-level["p"], kind="stable")
-    level = {key: values[order] for key, values in level.items()}
-    repeat = np.concatenate([[False], np.diff(level["p"]) == 0.0])
-    while repeat.any():
-        # Unite each repeated level with the one before it, until no pressure stands twice.
-        at = np.flatnonzero(repeat & ~np.concatenate([[False], repeat[:-1]]))
-        for values in level.values():
-            values[at - 1] = np.where(np.isfinite(values[at - 1]), values[at - 1], values[at])
-        keep = np.ones(repeat.shape, dtype=bool)
-        keep[at] = False
-        flags = level.setdefault("flags", np.zeros(repeat.shape))
-        flags[at - 1] = 1.0
-        level = {key: values[keep] for key, values in level.items()}
-        repeat = np.concatenate([[False], np.diff(level["p"]) == 0.0])
-    flags = level.pop("flags", np.zeros(level["p"].shape))
-    return level, np.where(flags > 0, np.int32(QUALITY_FLAGS["duplicate_level"]), np.int32(0))

@@ -2,12 +2,19 @@
 
 from __future__ import annotations
 
-from forecast.ingest.ascents import ColumnOrReason, check_profiles, read_ascents
-from forecast.ingest.recognise import HORIZONTAL
+from forecast.errors import InputError
+from forecast.ingest.ascents import check_profiles, read_soundings
+from forecast.ingest.assemble import Column
+from forecast.ingest.candidates import HORIZONTAL
+from forecast.ingest.level_groups import grouped_soundings
 from forecast.ingest.recognition import Recognition
+from forecast.ingest.soundings import Sounding, to_column
 from forecast.ingest.source import Source
 
-__all__ = ["is_gridded", "is_model", "read_columns"]
+__all__ = ["ColumnOrReason", "is_gridded", "is_model", "read_columns"]
+
+#: A column, or why a profile of the file is set aside.
+ColumnOrReason = Column | InputError
 
 _SOUNDING_FEATURES = ("profile", "timeseriesprofile", "trajectoryprofile", "trajectory")
 
@@ -44,7 +51,27 @@ def read_columns(
         from forecast.ingest.model_levels import read_model_columns
 
         return list(read_model_columns(source, recognition, points, method))
-    return read_ascents(source, recognition)
+    if recognition.groups:
+        return _columns(source, grouped_soundings(source, recognition))
+    return _columns(source, read_soundings(source, recognition))
+
+
+def _columns(source: Source, soundings: list[Sounding]) -> list[ColumnOrReason]:
+    """Columns of soundings; one that cannot be used gives its reason and number."""
+    result: list[ColumnOrReason] = []
+    for number, sounding in enumerate(soundings, start=1):
+        try:
+            result.append(to_column(sounding))
+        except InputError as error:
+            if len(soundings) > 1:
+                error = InputError(
+                    f"profile {number} of {len(soundings)}: {error.reason}",
+                    source=source.name,
+                    variable=error.variable,
+                    remedy=error.remedy,
+                )
+            result.append(error)
+    return result
 
 
 def is_gridded(source: Source, recognition: Recognition) -> bool:

@@ -5,11 +5,14 @@ from __future__ import annotations
 import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
 
 from forecast.errors import InputError, printable
 from forecast.ingest.roles import ROLES
 
-__all__ = ["Recognition", "Rejected", "Taken", "parse_names"]
+__all__ = ["Recognition", "Rejected", "Taken", "leading_number", "parse_names"]
 
 _NAME_ENTRY = re.compile(r"\s*(?P<variable>[^\[\]]+?)\s*(?:\[(?P<units>[^\[\]]*)\])?\s*")
 
@@ -144,3 +147,12 @@ def parse_names(names: Mapping[str, str] | None) -> dict[str, tuple[str, str | N
 def _sought(role: str) -> str:
     standard = ROLES[role].standard_names
     return f"standard_name {' or '.join(standard)}" if standard else "variables of that meaning"
+
+
+def leading_number(value: Any) -> float:
+    """Number at the start of an attribute value such as ``20 m``, NaN when there is none."""
+    if isinstance(value, str):
+        match = re.match(r"\s*[-+]?\d{1,12}(?:\.\d{1,9})?", value)
+        return float(match.group()) if match else float("nan")
+    number = np.asarray(value).ravel()
+    return float(number[0]) if number.size == 1 and number.dtype.kind in "iuf" else float("nan")
