@@ -42,6 +42,9 @@ class Window:
         Valid times in the window.
     reason : str
         Why, from the numbers of the likeliest valid time.
+    ahead : bool
+        Whether it reaches beyond the site's latest ascent: something to plan for, not to look
+        back on. A site without ascents has nothing but what lies ahead.
     """
 
     site: str
@@ -55,6 +58,7 @@ class Window:
     upper: float
     valid_times: int
     reason: str
+    ahead: bool
 
 
 def find_windows(outlook: xr.Dataset, settings: Settings) -> list[Window]:
@@ -70,8 +74,8 @@ def find_windows(outlook: xr.Dataset, settings: Settings) -> list[Window]:
     Returns
     -------
     list of Window
-        Sightlines first, then ducts; within each by probability, its lower bound and time. A duct
-        window inside one of a lower ceiling adds nothing and is left out.
+        What lies ahead first; then sightlines before ducts; within each by probability, its lower
+        bound and time. A duct window inside one of a lower ceiling adds nothing and is left out.
     """
     windows: list[Window] = []
     site = outlook["site"].values.astype(str)
@@ -91,7 +95,15 @@ def find_windows(outlook: xr.Dataset, settings: Settings) -> list[Window]:
             lower += [(w.start, w.end) for w in windows if w.site == name and w.kind == "duct"]
     order = {"sightline": 0, "duct": 1}
     windows.sort(
-        key=lambda w: (order[w.kind], -w.probability, -w.lower, w.start, w.site, w.subject)
+        key=lambda w: (
+            not w.ahead,
+            order[w.kind],
+            -w.probability,
+            -w.lower,
+            w.start,
+            w.site,
+            w.subject,
+        )
     )
     return windows
 
@@ -140,7 +152,17 @@ def _window(outlook: xr.Dataset, run: np.ndarray, kind: str, item: int, subject:
         float(upper[best]),
         int(run.size),
         reason,
+        times[1] > _latest_ascent(outlook, str(outlook["site"].values[row])),
     )
+
+
+def _latest_ascent(outlook: xr.Dataset, site: str) -> datetime:
+    rows = (outlook["site"].values.astype(str) == site) & (
+        outlook["source_kind"].values.astype(str) == "ascent"
+    )
+    if not rows.any():
+        return datetime.min.replace(tzinfo=UTC)
+    return _utc(outlook["time"].values[rows].max())
 
 
 def _utc(time: np.datetime64) -> datetime:
@@ -159,8 +181,9 @@ def _sightline_reason(outlook: xr.Dataset, row: int, item: int) -> str:
     standard = float(outlook["hidden_height_standard"].values[item])
     straight = float(outlook["hidden_height_straight"].values[item])
     top = float(outlook["target_height"].values[item])
+    shown = f"the lowest {hidden:.0f} m are hidden" if hidden >= 0.5 else "nothing is hidden"
     parts = [
-        f"The lowest {hidden:.0f} m are hidden (90 % of members {low:.0f} to {high:.0f} m) against "
+        f"{shown.capitalize()} (90 % of members {low:.0f} to {high:.0f} m) against "
         f"{standard:.0f} m in standard air and {straight:.0f} m with straight rays; "
         f"the target reaches {top:.0f} m."
     ]

@@ -151,6 +151,7 @@ def _window(rank: int, w: Window, zones: dict[str, ZoneInfo]) -> dict[str, Any]:
         "bar_width": f"{max(upper - lower, 0.0):.1f}",
         "valid_times": w.valid_times,
         "reason": w.reason,
+        "ahead": w.ahead,
     }
 
 
@@ -164,10 +165,11 @@ def _span(start: datetime, end: datetime, zone: Any) -> str:
 
 
 def _best(rows: list[dict[str, Any]]) -> list[dict[str, Any]]:
-    """The cards: the best window of each thing first, then what else there is."""
+    """The cards: of what lies ahead, the best window of each thing first; else of late."""
+    ahead = [row for row in rows if row["ahead"]] or rows
     seen: set[tuple[str, str]] = set()
     first, later = [], []
-    for row in rows:
+    for row in ahead:
         key = (row["site"], row["subject"])
         (later if key in seen else first).append(row)
         seen.add(key)
@@ -175,13 +177,15 @@ def _best(rows: list[dict[str, Any]]) -> list[dict[str, Any]]:
 
 
 def _answer(rows: list[dict[str, Any]]) -> str:
+    """One line: the best thing to plan for, or else the best of late."""
     if not rows:
         return "Nothing worth going for in the times covered."
     w = rows[0]
-    return (
+    line = (
         f"{w['subject']}: {w['chance']} ({w['interval']}) at {w['best']} UTC, "
         f"{w['best_local']} local."
     )
+    return line if w["ahead"] else f"Nothing ahead. Lately {line}"
 
 
 def _site(outlook: xr.Dataset, name: str, chart: dict[str, Any]) -> dict[str, Any]:

@@ -34,7 +34,7 @@ def window_rows(windows: list[Window]) -> list[dict[str, Any]]:
     -------
     list of dict
         Keys: rank, site, kind, subject, start, end, best_time (ISO 8601 UTC), probability,
-        lower, upper (1), valid_times, reason.
+        lower, upper (1), valid_times, ahead, reason.
     """
     return [
         {
@@ -49,6 +49,7 @@ def window_rows(windows: list[Window]) -> list[dict[str, Any]]:
             "lower": round(w.lower, 4),
             "upper": round(w.upper, 4),
             "valid_times": w.valid_times,
+            "ahead": w.ahead,
             "reason": w.reason,
         }
         for rank, w in enumerate(windows, 1)
@@ -78,6 +79,7 @@ def write_windows_csv(windows: list[Window], path: str | Path) -> None:
         "probability_lower",
         "probability_upper",
         "valid_times",
+        "ahead",
         "reason",
     ]
     text = io.StringIO()
@@ -106,6 +108,8 @@ def write_windows_json(windows: list[Window], path: str | Path, meta: dict[str, 
 
 
 def _cell(value: Any) -> Any:
+    if isinstance(value, bool):
+        return "yes" if value else "no"
     if isinstance(value, str) and value[:1] in {"=", "+", "-", "@", "\t", "\r"}:
         return f"'{value}"
     return value

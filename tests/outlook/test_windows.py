@@ -86,5 +86,18 @@ def test_reasons_quote_the_numbers_of_the_best_time():
     assert "nan" not in (reason + duct.reason).lower()
 
 
+def test_what_lies_ahead_of_the_latest_ascent_comes_first():
+    rows = [{"air": air(inversion=500.0)}]
+    rows += [
+        {"air": air(inversion=500.0), "hours": h, "kind": "model", "lead": h} for h in (12, 18)
+    ]
+    outlook = make_outlook(profiles(rows), settings(sightlines=(line(),), members=8))
+    for suffix in ("", "_lower", "_upper"):
+        outlook["sightline_probability" + suffix][:, 0] = [0.9, 0.1, 0.6]
+        outlook["duct_probability" + suffix][:] = 0.0
+    windows = find_windows(outlook, settings())
+    assert [(w.probability, w.ahead) for w in windows] == [(0.6, True), (0.9, False)]
+
+
 def test_no_run_no_window():
     assert find_windows(outlook_with([0.1, 0.2]), settings()) == []
