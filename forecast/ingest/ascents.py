@@ -58,8 +58,8 @@ def check_profiles(source: Source, recognition: Recognition) -> None:
     taken = recognition.require("air_temperature")
     vertical = recognition.vertical_dim
     assert vertical is not None
-    kind = str(source.attrs.get("featureType", "")).strip().lower()
-    alone = taken.dims == (vertical,) or kind in ("point", "timeseries", "trajectory")
+    says_so = str(source.attrs.get("featureType", "")).strip().lower().endswith("profile")
+    alone = len(taken.dims) <= 2 and not says_so
     if alone and not is_ragged(source, vertical):
         _check_rise(source, recognition, vertical)
 

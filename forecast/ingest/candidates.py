@@ -69,6 +69,7 @@ class Recogniser:
             name for row in self.layouts for name in row.get("station", ())
         )
         result.vertical_dim = self._vertical_dim()
+        self.flat_dims |= self._across() - {result.vertical_dim}
         self._find_groups()
         for role in ROLES:
             if not (result.groups and role in LEVEL_ROLES):
@@ -121,12 +122,9 @@ class Recogniser:
         if len(found) == 1:
             return found.pop()
         if not found:
-            wide = [dims for info in proposals if len(dims := self._extra_dims(info)) > 1]
-            vertical = {d for dims in wide for d in dims} & {
-                i.name for i in self.source.variables.values() if _is_vertical_coordinate(i)
-            }
-            if len(vertical) == 1:
-                return vertical.pop()
+            wide = {d for info in proposals for d in self._extra_dims(info)}
+            if wide:
+                return self._vertical_among(wide)
             # An ascent in which time is the way up: temperature and pressure on time alone.
             along = {info.dims for info in proposals if len(info.dims) == 1}
             along &= {
@@ -137,6 +135,29 @@ class Recogniser:
             if len(along) == 1 and self.source.dims.get((dims := along.pop())[0], 0) > 1:
                 return dims[0]
         return None
+
+    def _vertical_among(self, dims: set[str]) -> str | None:
+        """The vertical among several dimensions of air temperature, None if it is not clear.
+
+        It has a vertical coordinate of its own, or is the one that neither time nor position
+        varies along.
+        """
+        own = {i.name for i in self.source.variables.values() if _is_vertical_coordinate(i)}
+        for role in ("air_pressure", "altitude", "height", "geopotential_height"):
+            own |= {i.dims[0] for i, _ in self._proposals(role) if len(i.dims) == 1}
+        if len(dims & own) == 1:
+            return (dims & own).pop()
+        left = dims - self._across()
+        return left.pop() if len(left) == 1 else None
+
+    def _across(self) -> set[str]:
+        """Dimensions that time or position varies along."""
+        return {
+            d
+            for role in ("time", "latitude", "longitude")
+            for info, _ in self._proposals(role)
+            for d in info.dims
+        }
 
     # --- candidates ---------------------------------------------------------------------------
 

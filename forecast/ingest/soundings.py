@@ -91,6 +91,9 @@ def to_column(sounding: Sounding) -> Column:
     flags = np.zeros(p.shape, np.int32) if sounding.quality is None else sounding.quality.copy()
     _check_enough(sounding)
 
+    # Places that hold nothing at all are padding, not levels.
+    held = np.isfinite(p) | np.isfinite(t) | np.isfinite(q) | np.isfinite(z) | np.isfinite(u)
+    p, t, q, z, u, v, flags = (a[held] for a in (p, t, q, z, u, v, flags))
     p = np.where((p > 0.0) & (p < 1.2e5), p, np.nan)
     low, high = rules.TEMPERATURE_RANGE
     with np.errstate(invalid="ignore"):
