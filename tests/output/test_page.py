@@ -1,0 +1,124 @@
+"""The page must be valid, self-contained and inert whatever stands in the data."""
+
+from __future__ import annotations
+
+import base64
+import hashlib
+import re
+from html.parser import HTMLParser
+
+import html5lib
+import pytest
+
+from forecast.output.charts import draw_time_height, save_chart
+from forecast.output.page import write_page
+from tests.output.conftest import HOSTILE
+
+
+@pytest.fixture(scope="module")
+def page(case, tmp_path_factory):
+    outlook, windows, chosen = case
+    folder = tmp_path_factory.mktemp("page")
+    sites = [(HOSTILE, "UTC"), ("cape", "Atlantic/Azores")]
+    charts = {
+        name: save_chart(draw_time_height(outlook, name, windows=windows), folder / f"c{i}")
+        for i, (name, _) in enumerate(sites)
+    }
+
+    def write(name="index.html", windows=windows):
+        write_page(
+            folder / name,
+            outlook=outlook,
+            windows=windows,
+            charts=charts,
+            settings_title=chosen.title,
+            sites=sites,
+            set_aside=[{"site": "cape", "file": HOSTILE, "reason": "cut <off>"}],
+            meta={
+                "made_at": "2031-05-04T00:00:00Z",
+                "version": "0",
+                "warnings": [HOSTILE],
+                "threshold": 0.5,
+            },
+        )
+        return (folder / name).read_text(encoding="utf-8")
+
+    return write
+
+
+class Tags(HTMLParser):
+    def __init__(self, text):
+        super().__init__()
+        self.tags = []
+        self.feed(text)
+
+    def handle_starttag(self, tag, attrs):
+        self.tags.append((tag, dict(attrs)))
+
+
+def test_html_is_valid(page):
+    # Reference: html5lib in strict mode raises on any parse error of the HTML standard.
+    html5lib.HTMLParser(strict=True).parse(page())
+
+
+def test_nothing_is_loaded_from_anywhere(page):
+    for tag, attrs in Tags(page()).tags:
+        for key in ("src", "srcset", "data", "poster", "action"):
+            assert attrs.get(key, "data:").startswith("data:"), (tag, attrs)
+        if tag == "link":
+            raise AssertionError("no linked resources")
+        if tag == "a":
+            assert not re.match(r"\w+:|//", attrs["href"])
+
+
+def test_hostile_names_are_inert(page):
+    text = page()
+    scripts = [attrs for tag, attrs in Tags(text).tags if tag == "script"]
+    assert len(scripts) == 1
+    assert "<script>alert" not in text
+    assert "<b>hill" not in text
+
+
+def test_the_policy_names_exactly_the_pages_own_style_and_script(page):
+    text = page()
+    policy = re.search(r'Content-Security-Policy" content="([^"]+)"', text).group(1)
+    assert "default-src 'none'" in policy
+    for tag in ("style", "script"):
+        body = re.search(rf"<{tag}>(.*?)</{tag}>", text, re.S).group(1)
+        digest = base64.b64encode(hashlib.sha256(body.encode()).digest()).decode()
+        assert f"{tag}-src 'sha256-{digest}'" in policy
+    # Attribute styles would be refused by the policy.
+    assert not any("style" in attrs for _, attrs in Tags(text).tags)
+
+
+def test_ids_are_unique_and_charts_have_text(page):
+    tags = Tags(page()).tags
+    ids = [attrs["id"] for _, attrs in tags if "id" in attrs]
+    assert len(ids) == len(set(ids))
+    images = [attrs for tag, attrs in tags if tag == "img"]
+    assert len(images) == 2
+    assert all(len(attrs["alt"]) > 80 for attrs in images)
+    for tag, attrs in tags:
+        if "aria-labelledby" in attrs:
+            assert attrs["aria-labelledby"] in ids
+        if tag == "th":
+            assert attrs.get("scope") in {"col", "row"}
+
+
+def test_the_answer_comes_first_and_agrees_with_the_windows(page, case):
+    _, windows, _ = case
+    text = page()
+    answer = re.search(r'<p class="answer">([^<]+)</p>', text).group(1)
+    assert windows[0].ahead
+    assert f"{100 * windows[0].probability:.0f} %" in answer
+    assert text.index('class="answer"') < text.index("<table")
+    for words in ("Never point optics near the Sun", "uncalibrated", "cut &lt;off&gt;"):
+        assert words in text
+
+
+def test_a_page_without_windows_says_so(page):
+    assert "Nothing worth going for" in page("none.html", windows=[])
+
+
+def test_same_content_same_bytes(page):
+    assert page("a.html") == page("b.html")
