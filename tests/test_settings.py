@@ -1,0 +1,158 @@
+"""Settings must be right, or every fault is told at once with key, line and what is allowed."""
+
+from __future__ import annotations
+
+import math
+
+import pytest
+
+from forecast.errors import SettingsError
+from forecast.settings import load_settings
+from tests.reference import record
+
+GOOD = """
+[run]
+title = "Test"
+output = "out"
+members = 16
+
+[[site]]
+name = "Cape"
+latitude = 50.0
+longitude = -5.0
+altitude_m = 3.0
+timezone = "Atlantic/Azores"
+inputs = ["*.nc"]
+
+[[sightline]]
+name = "hill"
+site = "Cape"
+observer_height_m = 4.0
+target_height_m = 300.0
+observer = [50.0, -5.0]
+target = [51.0, -3.0]
+wavelength_nm = 633.0
+
+[[sightline]]
+name = "relay"
+site = "Cape"
+wave = "radio"
+observer_height_m = 15.0
+target_height_m = 30.0
+target_base_height_m = 30.0
+distance_km = 70.0
+azimuth_deg = 250.0
+
+[ingest.names]
+air_temperature = "tdry [degC]"
+"""
+
+
+def load(tmp_path, text, name="s.toml"):
+    path = tmp_path / name
+    path.write_text(text, encoding="utf-8")
+    return load_settings(path)
+
+
+def faults(tmp_path, text):
+    with pytest.raises(SettingsError) as caught:
+        load(tmp_path, text)
+    return caught.value.faults
+
+
+def test_values_are_si_inside(tmp_path):
+    settings = load(tmp_path, GOOD)
+    assert settings.output == (tmp_path / "out").resolve()
+    site, (hill, relay) = settings.sites[0], settings.sightlines
+    assert (site.altitude, site.match_radius) == (3.0, 50e3)
+    assert relay.distance == 70e3
+    assert relay.azimuth == 250.0
+    assert hill.wavelength == pytest.approx(633e-9)
+    assert settings.names == {"air_temperature": "tdry [degC]"}
+    assert len(settings.digest) == 64
+
+
+def test_positions_become_a_geodesic(tmp_path):
+    # Karney 2013, by pyproj and geographiclib: see the reference record.
+    expected = record("geodesic_50_-5_51_-3")["expected"]
+    hill = load(tmp_path, GOOD).sightlines[0]
+    assert hill.distance == pytest.approx(expected["distance_m"], abs=1e-3)
+    assert hill.azimuth == pytest.approx(expected["azimuth_deg"], abs=1e-6)
+
+
+def test_without_azimuth_the_radius_is_the_mean(tmp_path):
+    settings = load(tmp_path, GOOD.replace("azimuth_deg = 250.0\n", ""))
+    assert math.isnan(settings.sightlines[1].azimuth)
+
+
+def test_every_fault_is_told_at_once_with_its_line(tmp_path):
+    text = (
+        GOOD.replace("members = 16", "membres = 16")
+        .replace("latitude = 50.0", "latitude = 95.0")
+        .replace("Atlantic/Azores", "Mars/Phobos")
+        .replace(
+            'site = "Cape"\nobserver_height_m = 4.0', 'site = "Cap"\nobserver_height_m = "low"'
+        )
+        .replace("distance_km = 70.0\n", "")
+    )
+    found = faults(tmp_path, text)
+    assert len(found) == 6
+    lines = text.splitlines()
+    for key, words in {
+        "run.membres": "did you mean members?",
+        "site[0].latitude": "95",
+        "site[0].timezone": "Mars/Phobos",
+        "sightline[0].observer_height_m": "low",
+        "sightline[0].site": "did you mean 'Cape'?",
+        "sightline[1].distance_km": "is missing",
+    }.items():
+        (fault,) = [f for f in found if f.startswith(key)]
+        assert words in fault
+        if "missing" not in fault:
+            number = int(fault.split("(line ")[1].split(")")[0])
+            assert key.split(".")[-1] in lines[number - 1], fault
+    assert not any("pydantic" in f or "http" in f for f in found)
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "words"),
+    [
+        ("members = 16", "members = 7", "greater than or equal to 8"),
+        ("members = 16", "members = 16.5", "members"),
+        ("latitude = 50.0", "latitude = nan", "latitude"),
+        ("latitude = 50.0", "latitude = inf", "latitude"),
+        ('inputs = ["*.nc"]', "inputs = []", "inputs"),
+        ('name = "Cape"', 'name = "Ca\\npe"', "control characters"),
+        ('name = "Cape"', 'name = "  "', "blank"),
+        ('name = "relay"', 'name = "hill"', "a second time"),
+        ("target_base_height_m = 30.0", "target_base_height_m = 31.0", "must not exceed"),
+        ("distance_km = 70.0", "distance_km = 70.0\nobserver = [1.0, 2.0]", "not both"),
+        ("target = [51.0, -3.0]", "target = [151.0, -3.0]", "target"),
+        ("wavelength_nm = 633.0", "wavelength_nm = 3000.0", "1700"),
+        ('wave = "radio"', 'wave = "sonar"', "optical"),
+        ("[[site]]", "[[site]", "TOML"),
+        ("[run]", "[run]\n[[sites]]", "did you mean site?"),
+    ],
+)
+def test_each_fault_names_what_is_wrong(tmp_path, old, new, words):
+    assert old in GOOD
+    found = faults(tmp_path, GOOD.replace(old, new, 1))
+    assert any(words in fault for fault in found), found
+
+
+def test_a_file_that_is_no_settings_is_one_clear_message(tmp_path):
+    with pytest.raises(SettingsError, match="cannot be read"):
+        load_settings(tmp_path / "none.toml")
+    (tmp_path / "b.toml").write_bytes(b"\xff\xfe\x00")
+    with pytest.raises(SettingsError, match="not valid TOML"):
+        load_settings(tmp_path / "b.toml")
+    (tmp_path / "big.toml").write_bytes(b"#" * 1_000_002)
+    with pytest.raises(SettingsError, match="larger than"):
+        load_settings(tmp_path / "big.toml")
+
+
+def test_the_sample_settings_are_right():
+    from pathlib import Path
+
+    path = Path(__file__).parents[1] / "sample_soundings" / "outlook.toml"
+    assert len(load_settings(path).sightlines) == 3
