@@ -15,6 +15,7 @@ from typing import Any
 import numpy as np
 
 from forecast.errors import InputError, printable
+from forecast.ingest.level_sets import HYBRID_COORDINATE, fill_from_formula_terms, find_groups
 from forecast.ingest.recognition import Recognition, Rejected, Taken, leading_number
 from forecast.ingest.roles import LEVEL_ROLES, NEAR_SURFACE, ROLES
 from forecast.ingest.source import Source, VariableInfo
@@ -35,8 +36,6 @@ HORIZONTAL = (
 
 #: Statistics over time or space that are not the quantity itself.
 _STATISTICS = re.compile(r"\b(maximum|minimum|standard_deviation|variance|range|sum)\b")
-
-_HYBRID_COORDINATE = "atmosphere_hybrid_sigma_pressure_coordinate"
 
 
 @lru_cache(maxsize=1)
@@ -70,12 +69,12 @@ class Recogniser:
         )
         result.vertical_dim = self._vertical_dim()
         self.flat_dims |= self._across() - {result.vertical_dim}
-        self._find_groups()
+        find_groups(self)
         for role in ROLES:
             if not (result.groups and role in LEVEL_ROLES):
                 self._fill(role)
             self._from_attribute(role)
-        self._formula_terms()
+        fill_from_formula_terms(self)
         return result
 
     # --- dimensions ---------------------------------------------------------------------------
@@ -97,32 +96,33 @@ class Recogniser:
             ):
                 dims.add(info.name)
         for role in ("time", "latitude", "longitude", "member"):
-            for info, _ in self._proposals(role):
+            for info, _ in self.proposals(role):
                 if info.dims == (info.name,):
                     dims.add(info.name)
         return dims
 
-    def _extra_dims(self, info: VariableInfo) -> tuple[str, ...]:
+    def extra_dims(self, info: VariableInfo) -> tuple[str, ...]:
+        """Dimensions of a variable that may be the vertical."""
         return tuple(
             d for d in info.dims if d not in self.flat_dims and self.source.dims.get(d, 1) > 1
         )
 
     def _vertical_dim(self) -> str | None:
         """The dimension along which air temperature varies with height."""
-        proposals = [info for info, _ in self._proposals("air_temperature") if not info.is_text]
-        found = {dims[-1] for info in proposals if len(dims := self._extra_dims(info)) == 1}
+        proposals = [info for info, _ in self.proposals("air_temperature") if not info.is_text]
+        found = {dims[-1] for info in proposals if len(dims := self.extra_dims(info)) == 1}
         if len(found) > 1 and "air_temperature" in self.names:
             wanted = self.names["air_temperature"][0]
-            found = {d for i in proposals if i.name == wanted for d in self._extra_dims(i)} or found
+            found = {d for i in proposals if i.name == wanted for d in self.extra_dims(i)} or found
         if len(found) > 1:
             # More than one: the one that a vertical coordinate names.
-            named = found & {d for r in ("air_pressure",) for i, _ in self._proposals(r)
-                             for d in self._extra_dims(i)}  # fmt: skip
+            named = found & {d for r in ("air_pressure",) for i, _ in self.proposals(r)
+                             for d in self.extra_dims(i)}  # fmt: skip
             found = named or found
         if len(found) == 1:
             return found.pop()
         if not found:
-            wide = {d for info in proposals for d in self._extra_dims(info)}
+            wide = {d for info in proposals for d in self.extra_dims(info)}
             if wide:
                 return self._vertical_among(wide)
             # An ascent in which time is the way up: temperature and pressure on time alone.
@@ -130,7 +130,7 @@ class Recogniser:
             along &= {
                 info.dims
                 for role in ("air_pressure", "altitude", "geopotential_height", "height")
-                for info, _ in self._proposals(role)
+                for info, _ in self.proposals(role)
             }
             if len(along) == 1 and self.source.dims.get((dims := along.pop())[0], 0) > 1:
                 return dims[0]
@@ -144,7 +144,7 @@ class Recogniser:
         """
         own = {i.name for i in self.source.variables.values() if _is_vertical_coordinate(i)}
         for role in ("air_pressure", "altitude", "height", "geopotential_height"):
-            own |= {i.dims[0] for i, _ in self._proposals(role) if len(i.dims) == 1}
+            own |= {i.dims[0] for i, _ in self.proposals(role) if len(i.dims) == 1}
         if len(dims & own) == 1:
             return (dims & own).pop()
         left = dims - self._across()
@@ -155,13 +155,13 @@ class Recogniser:
         return {
             d
             for role in ("time", "latitude", "longitude")
-            for info, _ in self._proposals(role)
+            for info, _ in self.proposals(role)
             for d in info.dims
         }
 
     # --- candidates ---------------------------------------------------------------------------
 
-    def _proposals(self, role: str) -> Iterator[tuple[VariableInfo, str]]:
+    def proposals(self, role: str) -> Iterator[tuple[VariableInfo, str]]:
         """Variables that might play a role, the strongest claim first, each once."""
         held = self.source.variables
         seen = set()
@@ -205,7 +205,7 @@ class Recogniser:
             self._reject(role, self.names[role][0], "named in names, not in this file")
         usable = []
         near = any(role == there for there, _ in NEAR_SURFACE.values())
-        for info, how in self._proposals(role):
+        for info, how in self.proposals(role):
             if near and how == "CF" and self.result.vertical_dim in info.dims:
                 continue
             reason = None if how == "user" else self._unfit(role, info)
@@ -237,7 +237,7 @@ class Recogniser:
                     else f"{chosen.name} was chosen",
                 )
         try:
-            result.taken[role] = self._take(role, chosen, how)
+            result.taken[role] = self.take(role, chosen, how)
         except InputError as error:
             result.problems[role] = error
 
@@ -251,7 +251,7 @@ class Recogniser:
         if kind == "level":
             if vertical is None or vertical not in info.dims:
                 return "does not vary along the vertical"
-            odd = [d for d in self._extra_dims(info) if d != vertical]
+            odd = [d for d in self.extra_dims(info) if d != vertical]
             if odd and vertical not in self.flat_dims:
                 return f"has a further dimension {odd[0]}"
         if kind == "surface" and vertical in info.dims and vertical not in self.flat_dims:
@@ -302,7 +302,7 @@ class Recogniser:
         if kind == "coordinate":
             listed = {
                 name
-                for info, _ in self._proposals("air_temperature")
+                for info, _ in self.proposals("air_temperature")
                 for name in str(info.attrs.get("coordinates", "")).split()
             }
             tests += [
@@ -318,7 +318,8 @@ class Recogniser:
             pairs = kept or pairs
         return pairs
 
-    def _take(self, role: str, info: VariableInfo, how: str) -> Taken:
+    def take(self, role: str, info: VariableInfo, how: str) -> Taken:
+        """The variable as taken for the role; InputError if its unit cannot be known."""
         row = ROLES[role]
         units, method = info.units, how
         if how == "CF":
@@ -336,6 +337,14 @@ class Recogniser:
                 source=self.source.name,
                 variable=info.name,
                 remedy=f'set it, for example names.{role} = "{info.name} [{row.units}]"',
+            )
+        if row.units == "1" and units and re.search(r"\(k?g\)", normal_spelling(units, "1") or ""):
+            raise InputError(
+                f"unit {printable(units, 40)!r} is a ratio of masses, not of {role}",
+                source=self.source.name,
+                variable=info.name,
+                remedy=f'set names.humidity_mixing_ratio = "{info.name}", or the unit with '
+                f'names.{role} = "{info.name} [%]"',
             )
         if (units or "").strip().lower() == "gpm" and role in ("altitude", "height"):
             raise InputError(
@@ -364,65 +373,13 @@ class Recogniser:
     def _reject(self, role: str, variable: str, reason: str) -> None:
         self.result.rejected.append(Rejected(role, printable(variable, 80), reason))
 
-    # --- hybrid levels and groups -------------------------------------------------------------
-
-    def _formula_terms(self) -> None:
-        """Hybrid coefficients and surface pressure that ``formula_terms`` names."""
-        held, taken = self.source.variables, self.result.taken
-        for info in held.values():
-            if info.standard_name != _HYBRID_COORDINATE or "formula_terms" not in info.attrs:
-                continue
-            if self.result.vertical_dim not in info.dims:
-                continue
-            words = str(info.attrs["formula_terms"]).replace(":", " : ").split()
-            terms = {
-                a: b
-                for a, colon, b in zip(words, words[1:], words[2:], strict=False)
-                if colon == ":"
-            }
-            for term, role in (
-                ("ap", "hybrid_a"),
-                ("a", "hybrid_a"),
-                ("b", "hybrid_b"),
-                ("ps", "surface_air_pressure"),
-                ("p0", "reference_pressure"),
-            ):
-                name = terms.get(term)
-                if name not in held or (role in self.names and role in taken):
-                    continue
-                try:
-                    taken[role] = self._take(role, held[name], f"CF formula_terms of {info.name}")
-                    self.result.problems.pop(role, None)
-                except InputError as error:
-                    self.result.problems[role] = error
-
-    def _find_groups(self) -> None:
-        """Sets of levels in separate arrays (mandatory and significant levels)."""
-        for row in self.layouts:
-            for group in row.get("groups", ()):
-                members: dict[str, Taken] = {}
-                for role, name in group["roles"].items():
-                    info = self.source.variables.get(name)
-                    if info is None or info.is_text:
-                        continue
-                    try:
-                        members[role] = self._take(
-                            role, info, f"layout {row['name']!r}, {group['name']} levels"
-                        )
-                    except InputError as error:
-                        self.result.problems[role] = error
-                if "air_pressure" in members and len(members) > 1:
-                    self.result.groups[group["name"]] = members
-                    if group.get("count") in self.source.variables:
-                        self.result.group_counts[group["name"]] = group["count"]
-
 
 def _is_vertical_coordinate(info: VariableInfo) -> bool:
     return info.dims == (info.name,) and (
         info.attrs.get("axis") == "Z"
         or info.attrs.get("positive") in ("up", "down")
         or info.standard_name
-        in ("air_pressure", "altitude", "height", "model_level_number", _HYBRID_COORDINATE)
+        in ("air_pressure", "altitude", "height", "model_level_number", HYBRID_COORDINATE)
         or _is_pressure_unit(info.units or "")
     )
 

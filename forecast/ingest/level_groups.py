@@ -12,8 +12,8 @@ from forecast.errors import InputError
 from forecast.ingest.ascents import altitudes, per_profile, specific_humidity, wind
 from forecast.ingest.recognise import read_role, read_taken
 from forecast.ingest.recognition import Recognition
-from forecast.ingest.roles import HUMIDITY_ROLES
-from forecast.ingest.sampling_geometries import Multidimensional
+from forecast.ingest.roles import HUMIDITY_ROLES, check_plausible
+from forecast.ingest.sampling_geometries import Multidimensional, check_profile_count
 from forecast.ingest.soundings import Sounding
 from forecast.ingest.source import MAX_LEVELS, Source
 from forecast.schema import QUALITY_FLAGS
@@ -22,10 +22,33 @@ __all__ = ["grouped_soundings"]
 
 
 def grouped_soundings(source: Source, recognition: Recognition) -> list[Sounding]:
-    """Launches whose sets of levels stand in separate arrays, merged in order of pressure."""
-    first = next(iter(recognition.groups.values()))["air_pressure"]
-    profile_dims = first.dims[:-1]
-    base = Multidimensional(source.name, profile_dims, first.dims[-1], source.dims)
+    """Launches whose sets of levels stand in separate arrays, merged in order of pressure.
+
+    Parameters
+    ----------
+    source : Source
+        Open file.
+    recognition : Recognition
+        Of that file, with ``groups``.
+
+    Returns
+    -------
+    list of Sounding
+        In file order.
+
+    Raises
+    ------
+    InputError
+        If a unit is missing or contradicted, or more levels are declared than are read.
+    """
+    for role in ("air_pressure", "air_temperature", *HUMIDITY_ROLES):
+        if role in recognition.problems:
+            raise recognition.problems[role]
+    first, vertical = next(iter(recognition.group_dims.items()))
+    longest = max((t.dims for t in recognition.groups[first].values()), key=len)
+    profile_dims = tuple(d for d in longest if d != vertical)
+    base = Multidimensional(source.name, profile_dims, vertical, source.dims)
+    check_profile_count(source, base.count)
     common = per_profile(source, recognition, base)
     parts = [_group(source, recognition, name, profile_dims) for name in recognition.groups]
     result = []
@@ -58,7 +81,7 @@ def _group(
 ) -> dict[str, list[np.ndarray]]:
     """One set of levels: p, t, q, z, u, v per profile, NaN where the set has no such value."""
     members = recognition.groups[name]
-    vertical = members["air_pressure"].dims[-1]
+    vertical = recognition.group_dims[name]
     if source.dims[vertical] > MAX_LEVELS:
         raise InputError(
             f"declares {source.dims[vertical]} levels along {vertical!r}; at most {MAX_LEVELS} "
@@ -78,8 +101,11 @@ def _group(
         taken = members.get(role)
         if taken is None:
             return None
-        spread = geometry.levels(read_taken(source, recognition, taken), taken.dims)
-        return list(np.where(inside, np.array(spread), np.nan))
+        values = read_taken(source, recognition, taken, check=False)
+        rows = np.where(inside, np.array(geometry.levels(values, taken.dims)), np.nan)
+        # Only now: unused places may hold anything.
+        check_plausible(role, rows, taken.units, source=source.name, variable=taken.variable)
+        return list(rows)
 
     missing = [np.full(source.dims[vertical], np.nan)] * geometry.count
     pressure, temperature = levels("air_pressure") or missing, levels("air_temperature") or missing

@@ -69,6 +69,8 @@ class Recognition:
         Roles whose value also stands in a global attribute, by a layout.
     groups : dict of str to dict
         Sets of levels in separate arrays: group → role → Taken.
+    group_dims : dict of str to str
+        Group → dimension along its levels.
     group_counts : dict of str to str
         Group → variable with the number of its levels per launch.
     layouts : tuple of str
@@ -86,6 +88,7 @@ class Recognition:
     vertical_dim: str | None = None
     attributes: dict[str, Taken] = field(default_factory=dict)
     groups: dict[str, dict[str, Taken]] = field(default_factory=dict)
+    group_dims: dict[str, str] = field(default_factory=dict)
     group_counts: dict[str, str] = field(default_factory=dict)
     layouts: tuple[str, ...] = ()
     humidity: str = ""

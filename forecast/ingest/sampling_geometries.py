@@ -19,7 +19,14 @@ from forecast.errors import InputError
 from forecast.ingest.recognition import Recognition
 from forecast.ingest.source import MAX_LEVELS, Source
 
-__all__ = ["MAX_PROFILES", "Geometry", "find_geometry", "is_ragged"]
+__all__ = [
+    "MAX_PROFILES",
+    "Geometry",
+    "Multidimensional",
+    "check_profile_count",
+    "find_geometry",
+    "is_ragged",
+]
 
 #: Most profiles read from one file; common sense, no source.
 MAX_PROFILES = 100_000
@@ -68,11 +75,13 @@ class Multidimensional:
         return np.broadcast_to(values, full).reshape(self.count, shape[-1])
 
     def levels(self, values: np.ndarray, dims: tuple[str, ...]) -> list[np.ndarray]:
+        """See `Geometry.levels`."""
         spread = self._spread(values, dims)
         levels = self.sizes[self.vertical]
         return list(np.broadcast_to(spread, (self.count, levels)))
 
     def scalars(self, values: np.ndarray, dims: tuple[str, ...]) -> np.ndarray:
+        """See `Geometry.scalars`."""
         return _first_known(self._spread(values, dims))
 
 
@@ -91,6 +100,7 @@ class Ragged:
         self.count = len(self.rows)
 
     def levels(self, values: np.ndarray, dims: tuple[str, ...]) -> list[np.ndarray]:
+        """See `Geometry.levels`."""
         if dims != (self.sample_dim,):
             raise InputError(
                 f"values on ({', '.join(dims)}) cannot be dealt out to ragged profiles on "
@@ -100,6 +110,7 @@ class Ragged:
         return [values[rows] for rows in self.rows]
 
     def scalars(self, values: np.ndarray, dims: tuple[str, ...]) -> np.ndarray:
+        """See `Geometry.scalars`."""
         if dims == (self.profile_dim,):
             return values
         if dims == (self.outer_dim,) and self.outer is not None:
@@ -151,7 +162,7 @@ def find_geometry(source: Source, recognition: Recognition) -> Geometry:
         )
     profile_dims = tuple(d for d in dims if d != vertical)
     result = Multidimensional(source.name, profile_dims, vertical, source.dims)
-    _check_count(source, result.count)
+    check_profile_count(source, result.count)
     return result
 
 
@@ -174,7 +185,7 @@ def _ragged(source: Source, vertical: str) -> Ragged | None:
     if counts:
         variable, profile_dim = counts[0].name, counts[0].dims[0] if counts[0].dims else ""
         sizes = np.atleast_1d(source.read(variable))
-        _check_count(source, sizes.size)
+        check_profile_count(source, sizes.size)
         sizes = np.where(np.isfinite(sizes), sizes, 0).astype(np.int64)
         ends = np.cumsum(sizes)
         if (sizes < 0).any() or (ends.size and ends[-1] > source.dims[vertical]):
@@ -189,7 +200,7 @@ def _ragged(source: Source, vertical: str) -> Ragged | None:
         variable = indices[0].name
         profile_dim = str(indices[0].attrs["instance_dimension"])
         count = source.dims.get(profile_dim, 0)
-        _check_count(source, count)
+        check_profile_count(source, count)
         numbers = source.read(variable)
         outside = np.isfinite(numbers) & ((numbers < 0) | (numbers >= count))
         if outside.any():
@@ -225,7 +236,8 @@ def _ragged(source: Source, vertical: str) -> Ragged | None:
     return result
 
 
-def _check_count(source: Source, count: int) -> None:
+def check_profile_count(source: Source, count: int) -> None:
+    """Raise InputError if a file declares more profiles than are read."""
     if count > MAX_PROFILES:
         raise InputError(
             f"declares {count} profiles; at most {MAX_PROFILES} are read from one file",

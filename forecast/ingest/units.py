@@ -24,6 +24,8 @@ _SPELLINGS = {
     "unitless": "dimensionless",
     "dimensionless": "dimensionless",
     "fraction": "dimensionless",
+    "~": "dimensionless",
+    "numeric": "dimensionless",
     "percent": "percent",
     "%": "percent",
     "kelvin": "kelvin",
