@@ -76,9 +76,11 @@ def require_humidity(recognition: Recognition) -> list[str]:
     for role in HUMIDITY_ROLES:
         if role in recognition.problems:
             raise recognition.problems[role]
+    refused = [r for r in recognition.rejected if r.role in HUMIDITY_ROLES]
+    found = "".join(f"; {r.variable} {r.reason}" for r in refused[:3])
     raise InputError(
         "no humidity on the levels of air temperature: sought specific or relative humidity, dew "
-        "point, mixing ratio, vapour pressure; without it radio refractivity cannot be computed",
+        f"point, mixing ratio, vapour pressure{found}",
         source=recognition.source,
         remedy='set names.specific_humidity = "<variable>" or another measure',
     )
@@ -381,17 +383,22 @@ def _hydrostatic_heights(
     """
     tv = vertical.virtual_temperature(temperature, q)
     scale = vertical.DRY_AIR_GAS_CONSTANT / vertical.STANDARD_GRAVITY
+    heights = None
     if half is not None:
         phi = vertical.geopotential_on_full_levels(temperature, q, half)
         gap = scale * tv[..., 0] * np.log(surface_pressure / half[..., 0])
-        return phi / vertical.STANDARD_GRAVITY + gap[..., np.newaxis]
+        heights = phi / vertical.STANDARD_GRAVITY + gap[..., np.newaxis]
+        if np.isfinite(heights).all():
+            return heights
     pressure, tv = np.broadcast_arrays(pressure, tv)
     with np.errstate(invalid="ignore"):
         above = np.isfinite(tv) & (pressure <= surface_pressure[..., np.newaxis])
     first = above.argmax(axis=-1)[..., np.newaxis]
     p1, t1 = (np.take_along_axis(x, first, -1)[..., 0] for x in (pressure, tv))
     base = scale * t1 * np.log(surface_pressure / p1)
-    return vertical.hypsometric_height(np.where(above, pressure, np.nan), temperature, q, base)
+    bridged = vertical.hypsometric_height(np.where(above, pressure, np.nan), temperature, q, base)
+    # Where a value is missing below, the sum over layers has none; the levels bridge the gap.
+    return bridged if heights is None else np.where(np.isfinite(heights), heights, bridged)
 
 
 def _above_ground(h: np.ndarray, ground: np.ndarray, latitude: np.ndarray) -> np.ndarray:

@@ -67,6 +67,7 @@ def read_model_columns(
     """
     if method not in METHODS:
         raise ValueError(f"read_model_columns: method is {method!r}; choose {' or '.join(METHODS)}")
+    recognition.require("air_temperature")
     levels = find_levels(source, recognition, TOP)
     require_humidity(recognition)
     grid = find_grid(source, recognition)
