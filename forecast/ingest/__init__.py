@@ -48,7 +48,7 @@ class Reading:
     set_aside : list of SetAside
         Files, or single profiles of files, that were refused.
     notes : list of str
-        What a user may want to know: counts of quality flags.
+        What a user may want to know: how files were read, counts of quality flags.
     """
 
     profiles: xr.Dataset | None
@@ -98,10 +98,11 @@ def read_files(
     files = [Path(path) for path in paths]
     columns: list[Column] = []
     set_aside: list[SetAside] = []
+    notes: list[str] = []
     for number, path in enumerate(files):
         if progress is not None:
             progress(number, len(files), printable(path.name))
-        kept, refused = _read_file(path, names, places, method)
+        kept, refused = _read_file(path, names, places, method, notes)
         columns += kept
         set_aside += refused
     if progress is not None:
@@ -111,8 +112,8 @@ def read_files(
         set_aside += [SetAside(file, printable(reason)) for file, reason in dropped]
     set_aside.sort(key=lambda item: (item.file, item.reason))
     if not columns:
-        return Reading(None, set_aside)
-    return Reading(assemble(columns), set_aside, _flag_notes(columns))
+        return Reading(None, set_aside, sorted(notes))
+    return Reading(assemble(columns), set_aside, [*sorted(notes), *_flag_notes(columns)])
 
 
 def open_profiles(
@@ -182,7 +183,11 @@ def inspect_files(
 
 
 def _read_file(
-    path: Path, names: Mapping[str, str] | None, points: list[Point] | None, method: str
+    path: Path,
+    names: Mapping[str, str] | None,
+    points: list[Point] | None,
+    method: str,
+    notes: list[str],
 ) -> tuple[list[Column], list[SetAside]]:
     """Columns of one file, and what of it is set aside; never raises for what the file holds."""
     from forecast.ingest.dispatch import read_columns
@@ -190,14 +195,16 @@ def _read_file(
     from forecast.ingest.source import open_source
 
     name = printable(path.name)
+    found_notes: list[str] = []
     try:
         with open_source(path) as source:
-            found = read_columns(source, recognise(source, names), points, method)
+            found = read_columns(source, recognise(source, names), points, method, found_notes)
     except InputError as error:
         return [], [SetAside(name, one_line(error))]
     except Exception as error:
         # A reader's own fault must not stop the batch; the type helps to report it.
         return [], [SetAside(name, f"unexpected: {type(error).__name__}: {printable(error)}")]
+    notes += [f"{name}: {printable(note)}" for note in found_notes]
     columns = [item for item in found if not isinstance(item, InputError)]
     reasons = [one_line(item) for item in found if isinstance(item, InputError)]
     more = len(reasons) - MAX_REASONS_PER_FILE

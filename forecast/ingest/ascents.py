@@ -45,6 +45,11 @@ LEAST_PRESSURE_RATIO = 1.02
 
 def check_profiles(source: Source, recognition: Recognition) -> None:
     """Raise InputError if the file holds no vertical profiles at all."""
+    if not source.variables:
+        raise InputError(
+            "holds no variables" + (" outside groups, which are not read" * source.has_groups),
+            source=source.name,
+        )
     if recognition.groups:
         return
     if recognition.vertical_dim is None:
@@ -135,7 +140,7 @@ def read_soundings(source: Source, recognition: Recognition) -> list[Sounding]:
     altitude, above_ground = altitudes(recognition, levels, latitude)
     humidity_role, given = _humidity(recognition, levels)
     recognition.humidity = humidity_role
-    u, v = wind(levels)
+    u, v = _wind_or_none(recognition, levels)
 
     result = []
     for i in range(geometry.count):
@@ -274,6 +279,17 @@ def wind(
     )
 
 
+def _wind_or_none(
+    recognition: Recognition, levels: Callable[[str], list[np.ndarray] | None]
+) -> tuple[list[np.ndarray] | None, list[np.ndarray] | None]:
+    """Wind, or none with a note when it cannot be used: refraction does not need it."""
+    try:
+        return wind(levels)
+    except InputError as error:
+        recognition.notes.append(f"wind left out: {error.variable}: {error.reason}")
+        return None, None
+
+
 # --- values per profile ---------------------------------------------------------------------------
 
 
@@ -285,10 +301,18 @@ def per_profile(source: Source, recognition: Recognition, geometry: Geometry) ->
         taken = recognition.require(role) if needed else recognition.get(role)
         if taken is None:
             return np.full(count, np.nan)
-        values = read_role(source, recognition, role)
-        if taken.attribute:
-            return np.repeat(values.ravel(), count)
-        return geometry.scalars(values, taken.dims)
+        try:
+            values = read_role(source, recognition, role)
+            if taken.attribute:
+                return np.repeat(values.ravel(), count)
+            return geometry.scalars(values, taken.dims)
+        except InputError as error:
+            if needed:
+                raise
+            recognition.notes.append(
+                f"{role.replace('_', ' ')} left out: {taken.variable}: {error.reason}"
+            )
+            return np.full(count, np.nan)
 
     result: dict[str, Any] = {
         "time": _times(source, recognition, geometry),
@@ -377,9 +401,13 @@ def _stations(
         )
         dims = info.dims[:-1] if characters else info.dims
         shape = info.shape[: len(dims)]
-        names = [str(n) for n in geometry.scalars(texts.reshape(shape), dims)]
-        if all(names):
-            return names
+        try:
+            names = [str(n) for n in geometry.scalars(texts.reshape(shape), dims)]
+        except InputError as error:
+            recognition.notes.append(f"station names left out: {error.reason}")
+        else:
+            if all(names):
+                return names
     words = [
         printable(source.attrs[name], 60)
         for name in recognition.station_attributes
@@ -388,7 +416,7 @@ def _stations(
     if words:
         return [" ".join(words)] * geometry.count
     return [
-        f"{abs(lat):.1f}{'N' if lat >= 0 else 'S'} {abs(lon):.1f}{'E' if lon >= 0 else 'W'}"
+        f"lat {lat:.1f} lon {lon:.1f}"
         for lat, lon in zip(
             position["latitude"], (position["longitude"] + 180.0) % 360.0 - 180.0, strict=True
         )

@@ -39,9 +39,9 @@ _STATISTICS = re.compile(r"\b(maximum|minimum|standard_deviation|variance|range|
 
 
 @lru_cache(maxsize=1)
-def _layouts() -> tuple[dict[str, Any], ...]:
+def _table() -> dict[str, Any]:
     text = files("forecast.ingest").joinpath("layouts.toml").read_text(encoding="utf-8")
-    return tuple(tomllib.loads(text)["layout"])
+    return tomllib.loads(text)
 
 
 class Recogniser:
@@ -54,7 +54,7 @@ class Recogniser:
         held = source.variables
         self.layouts = [
             row
-            for row in _layouts()
+            for row in _table()["layout"]
             if all(name in held for name in row.get("requires", ()))
             and any(name in held for name in row.get("requires_any", held))
         ]
@@ -64,9 +64,9 @@ class Recogniser:
         """Fill every role that can be filled."""
         result = self.result
         result.layouts = tuple(row["name"] for row in self.layouts)
-        result.station_attributes = tuple(
-            name for row in self.layouts for name in row.get("station", ())
-        )
+        named = [name for row in self.layouts for name in row.get("station", ())]
+        usual = [name for name in _table()["station"] if name in self.source.attrs]
+        result.station_attributes = tuple(named or usual[:1])
         result.vertical_dim = self._vertical_dim()
         self.flat_dims |= self._across() - {result.vertical_dim}
         find_groups(self)

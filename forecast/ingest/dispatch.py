@@ -24,6 +24,7 @@ def read_columns(
     recognition: Recognition,
     points: list[tuple[str, float, float]] | None,
     method: str,
+    notes: list[str] | None = None,
 ) -> list[ColumnOrReason]:
     """Columns of a file, or the reason for each profile that cannot be used.
 
@@ -36,6 +37,8 @@ def read_columns(
     points : list of (name, latitude, longitude) or None
         Where to take columns from gridded data.
     method : {"bilinear", "nearest"}
+    notes : list of str, optional
+        What a user may want to know of how the file was read is added to it.
 
     Returns
     -------
@@ -50,10 +53,16 @@ def read_columns(
     if is_model(source, recognition):
         from forecast.ingest.model_levels import read_model_columns
 
-        return list(read_model_columns(source, recognition, points, method))
-    if recognition.groups:
-        return _columns(source, grouped_soundings(source, recognition))
-    return _columns(source, read_soundings(source, recognition))
+        return list(read_model_columns(source, recognition, points, method, notes))
+    read = grouped_soundings if recognition.groups else read_soundings
+    found = _columns(source, read(source, recognition))
+    if notes is not None:
+        notes += recognition.notes
+        notes += [
+            f"{error.variable} left out as {role.replace('_', ' ')}: {error.reason}"
+            for role, error in recognition.problems.items()
+        ]
+    return found
 
 
 def _columns(source: Source, soundings: list[Sounding]) -> list[ColumnOrReason]:

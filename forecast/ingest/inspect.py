@@ -146,7 +146,7 @@ def inspect_file(path: Path, names: Mapping[str, str] | None = None) -> FileRepo
             recognition = recognise(source, names)
             _describe_recognition(report, recognition)
             points = _sample_points(report, source, recognition)
-            found = read_columns(source, recognition, points, "nearest")
+            found = read_columns(source, recognition, points, "nearest", report.notes)
             report.kind = "model columns" if is_model(source, recognition) else "soundings"
     except InputError as error:
         report.refused.append(one_line(error))

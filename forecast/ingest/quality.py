@@ -15,7 +15,7 @@ spike                       T is off by more than 5 K, or RH by more than  value
                             0.4, against both neighbours, in the same
                             sense, neighbours within 60 m; or its height
                             is off by more than 50 m against both
-                            hydrostatic neighbours
+                            hydrostatic neighbours (500 m at the ends)
 temperature_out_of_range    T < 150 K or T > 340 K                         T NaN         cp
 humidity_out_of_range       RH < −2 % or RH > 150 %, or q < 0 or q > 0.06  q NaN         cp
                             (RH −2 to 0 % counts as dry)                   (q = 0)
@@ -70,6 +70,7 @@ MAX_SPECIFIC_HUMIDITY = 0.06
 TEMPERATURE_SPIKE = 5.0
 HUMIDITY_SPIKE = 0.4
 HEIGHT_SPIKE = 50.0
+END_SPIKE = 500.0
 SPIKE_SPACING = 60.0
 #: Frozen sensor: levels, and m for temperature and humidity.
 FROZEN_LEVELS = 20
@@ -180,6 +181,10 @@ def height_spikes(height: np.ndarray, thickness: np.ndarray) -> np.ndarray:
     result[at[1:-1]] = (np.minimum(np.abs(up), np.abs(down)) > HEIGHT_SPIKE) & (
         np.sign(up) == np.sign(down)
     )
+    # The first and the last level have one neighbour, which must agree with the one beyond it.
+    size = np.abs(step)
+    result[at[0]] = size[0] > END_SPIKE and size[1] < HEIGHT_SPIKE
+    result[at[-1]] = size[-1] > END_SPIKE and size[-2] < HEIGHT_SPIKE
     return result
 
 

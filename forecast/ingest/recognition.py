@@ -77,6 +77,8 @@ class Recognition:
         Layouts that apply.
     humidity : str
         Measure of humidity that was used, once profiles are read.
+    notes : list of str
+        Optional values that were left out, and why; filled while reading.
     station_attributes : tuple of str
         Global attributes that name the station.
     """
@@ -92,6 +94,7 @@ class Recognition:
     group_counts: dict[str, str] = field(default_factory=dict)
     layouts: tuple[str, ...] = ()
     humidity: str = ""
+    notes: list[str] = field(default_factory=list)
     station_attributes: tuple[str, ...] = ()
 
     def __contains__(self, role: str) -> bool:

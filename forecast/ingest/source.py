@@ -91,6 +91,8 @@ class Source:
         Dimension sizes.
     attrs : dict
         Global attributes; text is bounded.
+    has_groups : bool
+        Whether there are groups, which are not read.
     """
 
     def __init__(self, path: Path, dataset: Any):
@@ -102,6 +104,7 @@ class Source:
                 f"holds {len(dataset.variables)} variables; at most {MAX_VARIABLES} are read",
                 source=self.name,
             )
+        self.has_groups = bool(dataset.groups)
         self.dims = {name: len(dim) for name, dim in dataset.dimensions.items()}
         self.attrs = _attributes(dataset)
         self.variables = {
@@ -139,17 +142,23 @@ class Source:
                 variable=name,
                 remedy="cut the file to the period and area that are needed",
             )
-        values = np.ma.filled(
-            np.ma.asarray(self._get(name, index)).astype(np.float64, copy=False), np.nan
-        )
-        return np.asarray(values, dtype=np.float64)
+        values = self._get(name, index)
+        try:
+            numbers = np.ma.asarray(values).astype(np.float64, copy=False)
+        except (TypeError, ValueError) as error:
+            raise InputError(
+                f"holds {printable(info.dtype, 60)} values; numbers are expected",
+                source=self.name,
+                variable=name,
+            ) from error
+        return np.asarray(np.ma.filled(numbers, np.nan), dtype=np.float64)
 
     def read_text(self, name: str) -> list[str]:
         """Strings of a text variable (character array or strings), printable and bounded."""
         info = self.variables[name]
         if not info.is_text:
             numbers = np.atleast_1d(self.read(name)).ravel()
-            return [f"{x:g}" if np.isfinite(x) else "" for x in numbers]
+            return [f"{x:.12g}" if np.isfinite(x) else "" for x in numbers]
         if _selected_size(info.shape, ...) > MAX_VALUES:
             raise InputError("declares too much text", source=self.name, variable=name)
         values = np.ma.filled(np.ma.asarray(self._get(name, ...)), "")

@@ -141,6 +141,16 @@ def test_a_height_that_jumps_is_no_new_top():
     assert np.isfinite(column.height).sum() == 299
 
 
+@pytest.mark.parametrize("end", [0, 300])
+def test_a_wild_height_at_an_end_is_no_ground_and_no_top(end):
+    air = fine()
+    z = air.z.copy()
+    z[end] = 50_000.0
+    column = to_column(sound(air, altitude=z))
+    assert flagged(column, "spike") == [end]
+    assert np.isfinite(column.height).sum() == 300
+
+
 def test_spikes_of_temperature_and_humidity():
     air = fine()
     t, rh = air.t.copy(), air.rh.copy()

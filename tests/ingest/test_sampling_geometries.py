@@ -123,7 +123,7 @@ def test_a_single_profile_without_profile_dimension(tmp_path):
     profiles = read_files([path]).profiles
     np.testing.assert_allclose(profiles.altitude.values[0], air.z)
     # Nothing names the station, so its position does.
-    assert profiles.station.item() == "48.2N 30.5W"
+    assert profiles.station.item() == "lat 48.2 lon -30.5"
     # No ground is given: it is where the profile begins.
     assert profiles.height.values[0, 0] == 0.0
 
