@@ -21,6 +21,10 @@ __all__ = ["HEIGHT_ROLES", "LevelSet", "find_levels"]
 #: Roles that give the height of levels, the one to be used first at the front.
 HEIGHT_ROLES = ("height", "altitude", "geopotential_height", "geopotential")
 
+#: Hybrid coefficients of layer interfaces, by which the model's own integration can be repeated,
+#: and of levels.
+_HYBRID_PAIRS = (("hybrid_a_half", "hybrid_b_half"), ("hybrid_a", "hybrid_b"))
+
 #: Pressure of the standard atmosphere at sea level, Pa; ICAO Doc 7488/3.
 _STANDARD_PRESSURE = 101325.0
 
@@ -108,10 +112,15 @@ def find_levels(source: Source, recognition: Recognition, top: float) -> LevelSe
             source=source.name,
             variable=recognition.require("air_temperature").variable,
         )
-    for suffix in ("_half", ""):
-        pair = f"hybrid_a{suffix}", f"hybrid_b{suffix}"
-        if any(role in recognition or role in recognition.problems for role in pair):
-            return _hybrid(source, recognition, pair)
+    for held in (all, any):
+        # A whole pair of coefficients comes before one that is incomplete or has a problem.
+        for pair in _HYBRID_PAIRS:
+            if held(role in recognition for role in pair):
+                return _hybrid(source, recognition, pair)
+    for pair in _HYBRID_PAIRS:
+        for role in pair:
+            if role in recognition.problems:
+                raise recognition.problems[role]
     for role in ("air_pressure", *HEIGHT_ROLES):
         taken = recognition.get(role)
         if taken is not None and taken.dims == (dim,):

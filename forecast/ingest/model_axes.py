@@ -136,7 +136,8 @@ class ModelAxes:
     def times(self) -> tuple[np.ndarray, np.ndarray | None]:
         """Valid times and lead times on the outer dimensions; None where no lead time is given.
 
-        A time that lacks the dimension of the forecast period is that of the run's start.
+        A time that lacks the dimension of the forecast period is that of the run's start; so is
+        a time beside which the file has a ``valid_time``.
         """
         recognition = self.recognition
         reference = self._time("forecast_reference_time")
@@ -151,6 +152,10 @@ class ModelAxes:
         if "time" not in recognition and reference is not None and period is not None:
             return reference + period, period
         time = self._time("time")
+        valid = self._explicit_valid_time()
+        if valid is not None:
+            start = time if reference is None else reference
+            return valid, period if period is not None or start is None else valid - start
         if time is None:
             recognition.require("time")
             raise AssertionError("unreachable: require raises")
@@ -173,6 +178,16 @@ class ModelAxes:
         return self.spread(np.round(numbers).astype(np.int64), taken.dims)
 
     # --- helpers ------------------------------------------------------------------------------
+
+    def _explicit_valid_time(self) -> np.ndarray | None:
+        """Variable ``valid_time`` where another one was taken for time, None without it."""
+        info, taken = self.source.variables.get("valid_time"), self.recognition.get("time")
+        if info is None or taken is None or taken.variable == info.name or taken.how == "user":
+            return None
+        fits = all(d in self.outer or self.source.dims[d] == 1 for d in info.dims)
+        if not fits or info.is_text or " since " not in (info.units or ""):
+            return None
+        return self.spread(self.source.read_times(info.name), info.dims)
 
     def _time(self, role: str) -> np.ndarray | None:
         taken = self.recognition.get(role)

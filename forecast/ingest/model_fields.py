@@ -18,15 +18,19 @@ from forecast.ingest.ascents import specific_humidity
 from forecast.ingest.assemble import EXTRAS
 from forecast.ingest.levels import HEIGHT_ROLES, LevelSet
 from forecast.ingest.model_axes import ModelAxes
+from forecast.ingest.model_heights import (
+    above_ground,
+    geopotential_heights,
+    hydrostatic_heights,
+    pressure_from_heights,
+    split_heights,
+)
 from forecast.ingest.recognition import Recognition
 from forecast.ingest.roles import HUMIDITY_ROLES
 from forecast.physics import moisture
 from forecast.schema import QUALITY_FLAGS
 
 __all__ = ["ModelFields", "read_fields", "require_humidity"]
-
-#: Passes of pressure against humidity where each needs the other; each gains two digits.
-_PASSES = 6
 
 
 @dataclass
@@ -129,7 +133,7 @@ def read_fields(axes: ModelAxes, levels: LevelSet) -> ModelFields:
         if surface_pressure is None:
             raise _missing_surface_pressure(recognition, "levels of height without pressure need")
         above = _geopotential_above_ground(axes, role, heights, ground, latitude)
-        pressure = _pressure_from_heights(above, temperature, humidity, given, surface_pressure)
+        pressure = pressure_from_heights(above, temperature, humidity, given, surface_pressure)
     q = specific_humidity(humidity, given, temperature, pressure)
 
     if ground is None and role is not None and role != "height":
@@ -139,7 +143,7 @@ def read_fields(axes: ModelAxes, levels: LevelSet) -> ModelFields:
                 "count from mean sea level"
             )
         else:
-            h = _geopotential_heights(role, heights, latitude)
+            h = geopotential_heights(role, heights, latitude)
             tv = vertical.virtual_temperature(temperature, q)
             ground = vertical.geometric_altitude(
                 vertical.surface_height(pressure, h, tv, surface_pressure), latitude
@@ -151,11 +155,11 @@ def read_fields(axes: ModelAxes, levels: LevelSet) -> ModelFields:
             raise _missing_surface_pressure(
                 recognition, "levels have neither height nor geopotential; to compute it needs"
             )
-        h = _hydrostatic_heights(pressure, half, temperature, q, surface_pressure)
-        height = _above_ground(h, surface_altitude, latitude)
+        h = hydrostatic_heights(pressure, half, temperature, q, surface_pressure)
+        height = above_ground(h, surface_altitude, latitude)
         altitude = height + surface_altitude[..., np.newaxis]
     else:
-        height, altitude = _heights(role, heights, surface_altitude, latitude)
+        height, altitude = split_heights(role, heights, surface_altitude, latitude)
     under = vertical.below_ground(
         pressure,
         altitude,
@@ -201,6 +205,7 @@ def _humidity(axes: ModelAxes) -> tuple[str, np.ndarray]:
     for role in held:
         values = _required(axes, role)
         if np.isfinite(values).any():
+            axes.recognition.humidity = role
             return role, values
     raise InputError(
         f"holds no {held[0].replace('_', ' ')} value at the places: all are missing",
@@ -301,31 +306,6 @@ def _extras(
     return result
 
 
-# --- what is derived ------------------------------------------------------------------------------
-
-
-def _geopotential_heights(role: str, values: np.ndarray, latitude: np.ndarray) -> np.ndarray:
-    """Geopotential height (m) from altitude, geopotential height or geopotential."""
-    if role == "altitude":
-        return vertical.geopotential_height(values, latitude[:, np.newaxis])
-    return values / vertical.STANDARD_GRAVITY if role == "geopotential" else values
-
-
-def _heights(
-    role: str, values: np.ndarray, ground: np.ndarray, latitude: np.ndarray
-) -> tuple[np.ndarray, np.ndarray]:
-    """Height above ground and altitude from what is given; without ground both are altitude."""
-    base = ground[..., np.newaxis]
-    if role == "height":
-        return values, values + base
-    if role == "altitude":
-        altitude = values
-    else:
-        h = _geopotential_heights(role, values, latitude)
-        altitude = vertical.geometric_altitude(h, latitude[:, np.newaxis])
-    return altitude - np.where(np.isfinite(base), base, 0.0), altitude
-
-
 def _geopotential_above_ground(
     axes: ModelAxes,
     role: str | None,
@@ -349,61 +329,5 @@ def _geopotential_above_ground(
         altitude = base[..., np.newaxis] + values
         above = vertical.geopotential_height(altitude, latitude[:, np.newaxis]) - under
     else:
-        above = _geopotential_heights(str(role), values, latitude) - under
+        above = geopotential_heights(str(role), values, latitude) - under
     return np.where(above < 0.0, np.nan, above)
-
-
-def _pressure_from_heights(
-    above: np.ndarray,
-    temperature: np.ndarray,
-    humidity: str,
-    given: np.ndarray,
-    surface_pressure: np.ndarray,
-) -> np.ndarray:
-    """Pressure of levels of height; humidity other than q and mixing ratio needs it in turn."""
-    pressure = vertical.hydrostatic_pressure(above, temperature, surface_pressure)
-    for _ in range(_PASSES):
-        q = specific_humidity(humidity, given, temperature, pressure)
-        tv = vertical.virtual_temperature(temperature, q)
-        pressure = vertical.hydrostatic_pressure(above, tv, surface_pressure)
-    return pressure
-
-
-def _hydrostatic_heights(
-    pressure: np.ndarray,
-    half: np.ndarray | None,
-    temperature: np.ndarray,
-    q: np.ndarray,
-    surface_pressure: np.ndarray,
-) -> np.ndarray:
-    """Geopotential height of levels above the ground, NaN below it.
-
-    Between the ground and the lowest level (or the lowest interface, where layers are missing
-    below it) the air has that level's virtual temperature.
-    """
-    tv = vertical.virtual_temperature(temperature, q)
-    scale = vertical.DRY_AIR_GAS_CONSTANT / vertical.STANDARD_GRAVITY
-    heights = None
-    if half is not None:
-        phi = vertical.geopotential_on_full_levels(temperature, q, half)
-        gap = scale * tv[..., 0] * np.log(surface_pressure / half[..., 0])
-        heights = phi / vertical.STANDARD_GRAVITY + gap[..., np.newaxis]
-        if np.isfinite(heights).all():
-            return heights
-    pressure, tv = np.broadcast_arrays(pressure, tv)
-    with np.errstate(invalid="ignore"):
-        above = np.isfinite(tv) & (pressure <= surface_pressure[..., np.newaxis])
-    first = above.argmax(axis=-1)[..., np.newaxis]
-    p1, t1 = (np.take_along_axis(x, first, -1)[..., 0] for x in (pressure, tv))
-    base = scale * t1 * np.log(surface_pressure / p1)
-    bridged = vertical.hypsometric_height(np.where(above, pressure, np.nan), temperature, q, base)
-    # Where a value is missing below, the sum over layers has none; the levels bridge the gap.
-    return bridged if heights is None else np.where(np.isfinite(heights), heights, bridged)
-
-
-def _above_ground(h: np.ndarray, ground: np.ndarray, latitude: np.ndarray) -> np.ndarray:
-    """Height (m) of a geopotential height above the ground; unknown ground counts as sea level."""
-    base = np.where(np.isfinite(ground), ground, 0.0)
-    under = vertical.geopotential_height(base, latitude)[..., np.newaxis]
-    altitude = vertical.geometric_altitude(under + h, latitude[:, np.newaxis])
-    return altitude - base[..., np.newaxis]

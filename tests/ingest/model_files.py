@@ -1,4 +1,4 @@
-"""Writes small model files in many layouts, all of one invented atmosphere that is linear in place.
+"""Small model files in many layouts, all of one invented atmosphere that is linear in place.
 
 Temperature, surface pressure and sea temperature are linear in latitude and longitude, so that
 bilinear mixing must give them exactly.
@@ -12,6 +12,11 @@ from typing import Any
 import netCDF4
 import numpy as np
 
+from forecast.ingest.model_levels import read_model_columns
+from forecast.ingest.recognise import recognise
+from forecast.ingest.source import open_source
+
+PLACE = [("Harrow Point", 54.2, -3.1)]
 LATITUDES = np.array([55.0, 54.5, 54.0, 53.5])
 LONGITUDES = np.array([-4.0, -3.5, -3.0])
 LEVELS = 40
@@ -151,3 +156,15 @@ def write_model(
             sea[:, row, column] = np.ma.masked
         put(file, "sst", flat, sea, fill=-999.0, units="K", standard_name="sea_surface_temperature")
     return path
+
+
+def read(
+    path: Path,
+    points: Any = PLACE,
+    method: str = "bilinear",
+    names: dict[str, str] | None = None,
+    notes: list[str] | None = None,
+) -> list[Any]:
+    """Columns of a file at places, and reasons for those that cannot be used."""
+    with open_source(path) as source:
+        return read_model_columns(source, recognise(source, names), points, method, notes)
