@@ -109,7 +109,7 @@ def read_fields(axes: ModelAxes, levels: LevelSet) -> ModelFields:
     InputError
         If pressure or height cannot be found, or values contradict their unit.
     """
-    recognition, source = axes.recognition, axes.source.name
+    recognition = axes.recognition
     notes: list[str] = []
     temperature = _required(axes, "air_temperature")
     low, high = quality.TEMPERATURE_RANGE
@@ -139,8 +139,8 @@ def read_fields(axes: ModelAxes, levels: LevelSet) -> ModelFields:
     if ground is None and role is not None and role != "height":
         if surface_pressure is None:
             notes.append(
-                f"{source}: neither surface pressure nor altitude of the ground is given; heights "
-                "count from mean sea level"
+                "neither surface pressure nor altitude of the ground is given; heights count from "
+                "mean sea level"
             )
         else:
             h = geopotential_heights(role, heights, latitude)
@@ -279,7 +279,8 @@ def _extras(
         try:
             return axes.read(role)
         except InputError as error:
-            notes.append(f"{role.replace('_', ' ')} is left out: {error}")
+            what = role.replace("_", " ")
+            notes.append(f"{what} left out: {error.variable}: {error.reason}")
             return None
 
     for name in EXTRAS:

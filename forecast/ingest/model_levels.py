@@ -80,12 +80,9 @@ def read_model_columns(
     if notes is not None:
         notes += fields.notes
         if method == "bilinear" and points is not None and not grid.regular and grid.count > 1:
-            notes.append(
-                f"{source.name}: latitude and longitude make no regular grid, the nearest column "
-                "is taken"
-            )
+            notes.append("latitude and longitude make no regular grid, the nearest column is taken")
         if not lead_known:
-            notes.append(f"{source.name}: no start of the forecast given, lead time counts as 0")
+            notes.append("no start of the forecast given, lead time counts as 0")
     return [*columns, *unusable, *refused]
 
 

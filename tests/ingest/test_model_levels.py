@@ -351,3 +351,14 @@ def test_place_outside_the_grid_is_refused_and_the_others_are_read(tmp_path):
     assert "latitude 53.50 to 55.00, longitude -4.00 to -3.00" in reading.set_aside[0].reason
     with pytest.raises(ValueError, match="bilinear or nearest"):
         read(path, method="cubic")
+
+
+def test_optional_value_in_a_wrong_unit_is_left_out_and_noted(tmp_path):
+    """Celsius declared as kelvin: the column is kept without it."""
+    path = write_model(tmp_path / "model.nc")
+    with netCDF4.Dataset(path, "a") as file:
+        file["sst"][...] = 12.0
+    reading = read_files([path], points=PLACE)
+    assert reading.profiles is not None and "sea_surface_temperature" not in reading.profiles
+    [note] = [note for note in reading.notes if "left out" in note]
+    assert note.startswith("model.nc: sea surface temperature left out: sst: declared unit 'K'")
