@@ -35,7 +35,7 @@ _LIKELY = (0.3, 0.6, 0.9)  # outlines of the likelihood of lying inside a duct
 _MOST_STRIPS = 12
 _INK = "#1b1b1b"
 _FAINT = "#6b6b6b"
-_STYLE = {
+_STYLE: Any = {
     "font.family": "DejaVu Sans",
     "font.size": 9.5,
     "svg.hashsalt": "bendcast",
@@ -98,7 +98,7 @@ def draw_time_height(
         span = mdates.date2num([data.left.min(), data.right.max()])
         mesh = _draw_gradient(axis, data, low_stretch)
         _draw_likelihood(axis, data)
-        _mark_profiles(axis, data, top)
+        _mark_profiles(axis, data)
         axis.set_xlim(*span)
         axis.set_ylabel("height above ground (m)")
         _colour_bar(figure, axis, mesh, height)
@@ -208,7 +208,8 @@ def _draw_likelihood(axis: Axes, data: TimeHeight) -> None:
     )
 
 
-def _mark_profiles(axis: Axes, data: TimeHeight, top: float) -> None:
+def _mark_profiles(axis: Axes, data: TimeHeight) -> None:
+    """Ticks for ascents and model times, and a line where the forecast begins."""
     when = mdates.date2num(data.time)
     across = axis.get_xaxis_transform()
     for mask, marker, size, label in (
@@ -221,6 +222,10 @@ def _mark_profiles(axis: Axes, data: TimeHeight, top: float) -> None:
                 edgecolors=_INK if marker == "^" else None, linewidths=0.6, transform=across,
                 label=label, zorder=5,
             )  # fmt: skip
+    if data.ascent.any() and not data.ascent.all():
+        latest = mdates.date2num(data.right[data.ascent].max())
+        axis.axvline(latest, color="white", lw=1.4)
+        axis.text(latest, 0.9, " forecast →", color="white", fontsize=8.5, transform=across)
     handles, labels = axis.get_legend_handles_labels()
     lines = [
         matplotlib.lines.Line2D([], [], color="white", lw=w, ls=s)
@@ -337,7 +342,11 @@ def _time_axes(
     for axis in others:
         axis.tick_params(axis="x", labelbottom=False, length=0)
     days = span[1] - span[0]
-    for axis, tz, where in ((lowest, UTC, "bottom"), (upper.secondary_xaxis("top"), zone, "top")):
+    scales: list[tuple[Any, Any, str]] = [
+        (lowest, UTC, "bottom"),
+        (upper.secondary_xaxis("top"), zone, "top"),
+    ]
+    for axis, tz, where in scales:
         hours = next(h for h in (1, 3, 6, 12, 24, 48, 96, 240) if days * 24 / h <= 13 or h == 240)
         locator: mdates.DateLocator
         if hours < 24:

@@ -168,7 +168,8 @@ def _best(rows: list[dict[str, Any]]) -> list[dict[str, Any]]:
     """The cards: of what lies ahead, the best window of each thing first; else of late."""
     ahead = [row for row in rows if row["ahead"]] or rows
     seen: set[tuple[str, str]] = set()
-    first, later = [], []
+    first: list[dict[str, Any]] = []
+    later: list[dict[str, Any]] = []
     for row in ahead:
         key = (row["site"], row["subject"])
         (later if key in seen else first).append(row)
