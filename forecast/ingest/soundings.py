@@ -101,7 +101,6 @@ def to_column(sounding: Sounding) -> Column:
     t, q = np.where(bad, np.nan, t), np.where(bad, np.nan, q)
     flags |= _bit("temperature_out_of_range", bad)
 
-    # Upwards: a sounding whose top stands nearer its beginning was written from above.
     order = _upward(z, p)
     p, t, q, z, u, v, flags = (a[order] for a in (p, t, q, z, u, v, flags))
 
@@ -110,9 +109,9 @@ def to_column(sounding: Sounding) -> Column:
     flags |= _bit("value_missing", ~(np.isfinite(p) & np.isfinite(t) & np.isfinite(q)))
 
     thickness = _thickness(sounding, p, t, q)
-    _check_thickness(sounding, z, thickness)
     spiked = rules.height_spikes(z, thickness)
     z = np.where(spiked, np.nan, z)
+    _check_thickness(sounding, z, thickness)
     above_ground, computed = sounding.above_ground, np.isfinite(thickness) & ~np.isfinite(z)
     if computed.any():
         z, above_ground = _fill_heights(sounding, z, thickness, p, t, q)
@@ -195,13 +194,14 @@ def _bit(name: str, mask: np.ndarray) -> np.ndarray:
 
 
 def _upward(altitude: np.ndarray, pressure: np.ndarray) -> slice:
-    """The slice that puts levels in the order of rising height."""
+    """The slice that puts levels in the order of rising height.
+
+    Most steps decide, so that neither a lone wild height nor the way down after the top counts
+    for the whole.
+    """
     rank = altitude if np.isfinite(altitude).sum() >= 2 else -pressure
-    known = np.flatnonzero(np.isfinite(rank))
-    if known.size < 2:
-        return slice(None)
-    top = int(np.argmax(rank[known]))
-    return slice(None, None, -1) if top < (known.size - 1) / 2 else slice(None)
+    steps = np.sign(np.diff(rank[np.isfinite(rank)]))
+    return slice(None, None, -1) if steps.sum() < 0 else slice(None)
 
 
 def _thickness(sounding: Sounding, p: np.ndarray, t: np.ndarray, q: np.ndarray) -> np.ndarray:

@@ -106,11 +106,20 @@ class Source:
             )
         self.has_groups = bool(dataset.groups)
         self.dims = {name: len(dim) for name, dim in dataset.dimensions.items()}
-        self.attrs = _attributes(dataset)
-        self.variables = {
-            name: VariableInfo(name, tuple(v.dimensions), tuple(v.shape), v.dtype, _attributes(v))
-            for name, v in dataset.variables.items()
-        }
+        try:
+            self.attrs = _attributes(dataset)
+            self.variables = {
+                name: VariableInfo(
+                    name, tuple(v.dimensions), tuple(v.shape), v.dtype, _attributes(v)
+                )
+                for name, v in dataset.variables.items()
+            }
+        except (UnicodeError, RuntimeError) as error:
+            raise InputError(
+                f"is damaged: its attributes cannot be read ({error})",
+                source=self.name,
+                remedy="fetch it again",
+            ) from error
 
     def read(self, name: str, index: Any = ...) -> np.ndarray:
         """Values of a numeric variable, unpacked, NaN where missing.
