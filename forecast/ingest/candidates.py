@@ -34,6 +34,9 @@ HORIZONTAL = (
     "grid_longitude",
 )
 
+#: Roles near the surface → the role aloft that shares the standard name.
+_ALOFT = {there: aloft for aloft, (there, _) in NEAR_SURFACE.items()}
+
 #: Statistics over time or space that are not the quantity itself.
 _STATISTICS = re.compile(r"\b(maximum|minimum|standard_deviation|variance|range|sum)\b")
 
@@ -169,9 +172,8 @@ class Recogniser:
             name = self.names[role][0]
             yield held[name], "user"
             seen.add(name)
-        near = {there: standard for standard, (there, _) in NEAR_SURFACE.items()}
         for info in held.values():
-            if info.name not in seen and self._cf_says(role, info, near.get(role)):
+            if info.name not in seen and self._cf_says(role, info, _ALOFT.get(role)):
                 seen.add(info.name)
                 yield info, "CF"
         for row in self.layouts:

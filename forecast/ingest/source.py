@@ -13,6 +13,7 @@ import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field
+from functools import cached_property
 from pathlib import Path
 from typing import Any
 
@@ -60,13 +61,13 @@ class VariableInfo:
     dtype: Any
     attrs: dict[str, Any] = field(repr=False)
 
-    @property
+    @cached_property
     def units(self) -> str | None:
         """Declared unit, None when the attribute is absent or blank."""
         text = self.attrs.get("units")
         return text.strip() if isinstance(text, str) and text.strip() else None
 
-    @property
+    @cached_property
     def standard_name(self) -> str | None:
         """CF standard name, None when absent."""
         text = self.attrs.get("standard_name")
