@@ -76,6 +76,6 @@ class Reporter:
         if self.quiet:
             return
         if self._bar is not None:
-            self._bar.console.print(text, markup=False, highlight=False)
+            self._bar.console.print(text, markup=False, highlight=False, soft_wrap=True)
         else:
             print(text, file=sys.stderr, flush=True)
