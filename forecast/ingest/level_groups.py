@@ -9,7 +9,8 @@ from __future__ import annotations
 import numpy as np
 
 from forecast.errors import InputError
-from forecast.ingest.ascents import altitudes, per_profile, specific_humidity, wind
+from forecast.ingest.ascents import altitudes, specific_humidity, wind
+from forecast.ingest.profile_values import per_profile
 from forecast.ingest.recognise import read_role, read_taken
 from forecast.ingest.recognition import Recognition
 from forecast.ingest.roles import HUMIDITY_ROLES, check_plausible

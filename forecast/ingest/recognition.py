@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from difflib import get_close_matches
 from typing import Any
 
 import numpy as np
@@ -137,7 +138,12 @@ def parse_names(names: Mapping[str, str] | None) -> dict[str, tuple[str, str | N
     result: dict[str, tuple[str, str | None]] = {}
     for role, entry in (names or {}).items():
         if role not in ROLES:
-            raise InputError(f"{role!r} is no role; allowed are {', '.join(ROLES)}", source="names")
+            near = get_close_matches(str(role), ROLES, n=3, cutoff=0.4) or ["air_temperature"]
+            raise InputError(
+                f"{role!r} is no role (did you mean {' or '.join(near)}?)",
+                source="names",
+                remedy=f"allowed are {', '.join(ROLES)}",
+            )
         match = _NAME_ENTRY.fullmatch(entry) if isinstance(entry, str) else None
         if not match or (match["units"] is not None and not match["units"].strip()):
             raise InputError(

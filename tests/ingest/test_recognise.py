@@ -87,7 +87,8 @@ def test_a_named_variable_that_the_file_lacks_is_told_and_passed_over(tmp_path):
 @pytest.mark.parametrize(
     ("names", "said"),
     [
-        ({"temperature": "t"}, "'temperature' is no role; allowed are time"),
+        ({"temperature": "t"}, "'temperature' is no role (did you mean air_temperature or"),
+        ({"wind": "t"}, "allowed are time, forecast_reference_time"),
         ({"air_temperature": ""}, "expected 'variable' or 'variable [unit]'"),
         ({"air_temperature": "t []"}, "expected 'variable' or 'variable [unit]'"),
         ({"air_temperature": "t [K"}, "expected 'variable' or 'variable [unit]'"),
@@ -296,3 +297,26 @@ def test_a_pressure_coordinate_is_known_by_its_unit(tmp_path):
         np.testing.assert_allclose(
             read_role(source, found, "air_pressure"), [1e5, 92500.0, 85000.0]
         )
+
+
+def test_a_layout_may_fix_units(tmp_path, monkeypatch):
+    """Only where its documentation does; a unit that the file declares comes first."""
+    from forecast.ingest import candidates
+
+    layout = {
+        "name": "probe listing",
+        "requires": ["TT"],
+        "roles": {"air_temperature": "TT"},
+        "units": {"air_temperature": "degC"},
+    }
+    monkeypatch.setattr(candidates, "_table", lambda: {"layout": [layout], "station": []})
+    air = make_air()
+    path = write_ascent(tmp_path / "a.nc", air, leave_out=["temp"])
+    with netCDF4.Dataset(path, "a") as data:
+        variable = data.createVariable("TT", "f8", ("time",))
+        variable[:] = air.t - 273.15
+    np.testing.assert_allclose(open_profiles(path).air_temperature.values[0], air.t, atol=1e-9)
+    assert look(path).get("air_temperature").declared is None
+    with netCDF4.Dataset(path, "a") as data:
+        data["TT"].units = "K"
+    assert look(path).get("air_temperature").units == "K"

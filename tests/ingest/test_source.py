@@ -10,7 +10,8 @@ import pytest
 
 from forecast.errors import InputError
 from forecast.ingest.classic_header import declared_length
-from forecast.ingest.source import MAX_VALUES, decode_times, open_source
+from forecast.ingest.source import MAX_VALUES, open_source
+from forecast.ingest.times import decode_times
 
 from .make_files import make_air, write_ascent
 
@@ -132,6 +133,19 @@ def test_a_huge_declared_variable_is_refused_before_reading(tmp_path):
         with pytest.raises(InputError, match=f"declares 1000000000 values; at most {MAX_VALUES}"):
             source.read("t")
         assert source.read("t", (slice(0, 5),)).shape == (5,), "a part can be read"
+
+
+def test_a_giant_chunk_is_not_unpacked(tmp_path):
+    """Ten values in a chunk of 10⁸: reading one would cost the memory of all."""
+    path = tmp_path / "chunk.nc"
+    with netCDF4.Dataset(path, "w") as data:
+        data.createDimension("time", None)
+        data.createVariable("a", "f8", ("time",), chunksizes=(10,))[:] = np.ones(10)
+        data.createVariable("b", "f8", ("time",), chunksizes=(10**8,))
+    with open_source(path) as source:
+        assert source.read("a").size == 10
+        with pytest.raises(InputError, match="stored in chunks of 100000000 values"):
+            source.read("b")
 
 
 def test_missing_values_are_nan_and_packing_is_undone(tmp_path):
