@@ -4,8 +4,9 @@ Method: Bouguer's invariant ``n r cos θ`` (Born & Wolf, Principles of Optics, 7
 With ``Z = a ln(1 + z/a)``, ``x`` the distance along the surface and ``m = n (1 + z/a)`` the
 spherical problem becomes a flat one of index m, in which ``dZ/dx = tan θ`` and
 ``d²Z/dx² = (dμ/dZ) / 2C²`` with ``μ = m² − 1`` and the invariant ``C = m cos θ``. The air is taken
-as linear in μ(Z) between nodes, which differs from linear N(z) by less than 2e-3 N in a layer of
-1 km, so that each ray is an exact parabola in each layer: the spherical form costs nothing.
+as linear in μ(Z) between nodes, which differs from linear N(z) by less than 7e-3 N in a layer of
+1 km in which N falls by 0 to 157, and falls off with the square of the layer's depth, so that
+each ray is an exact parabola in each layer: the spherical form costs nothing.
 
 Slopes at nodes come from the invariant itself, ``w² C² = (μ − μ_start) + (1 + μ_start) sin² θ``,
 never from the previous slope, so nothing accumulates. A ray launched level bends like any other.

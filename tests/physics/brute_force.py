@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from itertools import pairwise
 from typing import NamedTuple
 
 __all__ = ["Duct", "ducts_by_the_rule", "usable_levels"]
@@ -47,7 +48,7 @@ def _base(levels, top: int) -> float:
     """Lowest height from which M stays at or above M(top), seeking the highest point below it."""
     wanted = levels[top][1]
     base = levels[0][0]
-    for (z0, m0), (z1, m1) in zip(levels[:top], levels[1 : top + 1], strict=True):
+    for (z0, m0), (z1, m1) in pairwise(levels[: top + 1]):
         if m0 < wanted <= m1:
             base = z0 + (wanted - m0) / (m1 - m0) * (z1 - z0)
     return base
