@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import hashlib
 import math
+import os
 import tomllib
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -24,7 +25,7 @@ _LARGEST_FILE = 1_000_000  # bytes
 
 @dataclass(frozen=True)
 class Site:
-    """Where profiles are taken. Altitude and match radius in m, angles in degrees."""
+    """Where profiles are taken. Altitude and match radius in m, angles in degrees, water in K."""
 
     name: str
     latitude: float
@@ -34,6 +35,8 @@ class Site:
     inputs: tuple[str, ...] = ()
     match_radius: float = 50e3
     point_method: str = "bilinear"
+    surface: str = "none"
+    sea_surface_temperature: float | None = None
 
 
 @dataclass(frozen=True)
@@ -90,26 +93,35 @@ def load_settings(path: str | Path) -> Settings:
     """
     path = Path(path)
     try:
-        raw = path.read_bytes()[: _LARGEST_FILE + 1]
+        with path.open("rb") as stream:
+            raw = stream.read(_LARGEST_FILE + 1)
     except OSError as error:
         raise SettingsError(path.name, [f"cannot be read: {error.strerror}"]) from None
     if len(raw) > _LARGEST_FILE:
         raise SettingsError(path.name, [f"is larger than {_LARGEST_FILE} bytes"])
     try:
-        text = raw.decode("utf-8")
+        text = raw.decode("utf-8-sig")  # some editors put a byte order mark first
         table = tomllib.loads(text)
-    except (UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
-        raise SettingsError(path.name, [f"is not valid TOML: {error}"]) from None
+    except (ValueError, RecursionError) as error:
+        raise SettingsError(path.name, [f"is not valid TOML: {_not_toml(error)}"]) from None
     from forecast.settings_file import check_table
 
-    checked, faults = check_table(table, text)
+    base = path.resolve().parent
+    checked, faults = check_table(table, text, base)
     if checked is None:
         raise SettingsError(path.name, faults)
-    return _settings(checked, path, hashlib.sha256(raw).hexdigest())
+    return _settings(checked, base, hashlib.sha256(raw).hexdigest())
 
 
-def _settings(checked: SettingsFile, path: Path, digest: str) -> Settings:
-    base = path.resolve().parent
+def _not_toml(error: Exception) -> str:
+    if isinstance(error, UnicodeDecodeError):
+        return f"not UTF-8 text (at byte {error.start})"
+    if isinstance(error, tomllib.TOMLDecodeError):
+        return str(error)  # it names line and column
+    return "nested too deep" if isinstance(error, RecursionError) else "a number is too long"
+
+
+def _settings(checked: SettingsFile, base: Path, digest: str) -> Settings:
     run = checked.run
     sites = tuple(
         Site(
@@ -121,12 +133,16 @@ def _settings(checked: SettingsFile, path: Path, digest: str) -> Settings:
             inputs=tuple(s.inputs),
             match_radius=1e3 * s.match_radius_km,
             point_method=s.point_method,
+            surface=s.surface,
+            sea_surface_temperature=None
+            if s.sea_surface_temperature_c is None
+            else s.sea_surface_temperature_c + 273.15,
         )
         for s in checked.site
     )
     return Settings(
         title=run.title,
-        output=(base / run.output).resolve(),
+        output=(base / os.path.expanduser(run.output)).resolve(),
         sites=sites,
         sightlines=tuple(_sightline(line) for line in checked.sightline),
         members=run.members,
@@ -147,7 +163,7 @@ def _sightline(line: SightlineTable) -> Sightline:
     else:
         from pyproj import Geod
 
-        assert line.observer is not None and line.target is not None  # the model has checked
+        assert line.observer is not None and line.target is not None  # the cross-check has seen it
         forward, _, distance = Geod(ellps="WGS84").inv(
             line.observer[1], line.observer[0], line.target[1], line.target[0]
         )

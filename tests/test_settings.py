@@ -117,10 +117,16 @@ def test_every_fault_is_told_at_once_with_its_line(tmp_path):
 @pytest.mark.parametrize(
     ("old", "new", "words"),
     [
-        ("members = 16", "members = 7", "greater than or equal to 8"),
+        ("members = 16", "members = 7", "found 7; allowed: a whole number from 8 to 4096"),
         ("members = 16", "members = 16.5", "members"),
         ("latitude = 50.0", "latitude = nan", "latitude"),
         ("latitude = 50.0", "latitude = inf", "latitude"),
+        # Text and truth values are not numbers, however much they look like it.
+        ("latitude = 50.0", 'latitude = "50"', "found '50'; allowed: a number from -90 to 90"),
+        ("latitude = 50.0", "latitude = true", "found true; allowed: a number"),
+        ("members = 16", "members = 0x" + 5000 * "f", "more than 38 digits"),
+        ("members = 16", "members = " + 5000 * "9", "a number is too long"),
+        ("target_base_height_m = 30.0", "target_base_height_m = " + 400 * "9", "0 to 9000 m"),
         ('inputs = ["*.nc"]', "inputs = []", "inputs"),
         ('name = "Cape"', 'name = "Ca\\npe"', "control characters"),
         ('name = "Cape"', 'name = "  "', "blank"),
@@ -128,6 +134,13 @@ def test_every_fault_is_told_at_once_with_its_line(tmp_path):
         ("target_base_height_m = 30.0", "target_base_height_m = 31.0", "must not exceed"),
         ("distance_km = 70.0", "distance_km = 70.0\nobserver = [1.0, 2.0]", "not both"),
         ("target = [51.0, -3.0]", "target = [151.0, -3.0]", "target"),
+        ("target = [51.0, -3.0]", "target = [51.0, -3.0, 7.0]", "[latitude, longitude]"),
+        ("target = [51.0, -3.0]", "target = [50.0, -5.0]", "lies 0 km from the observer"),
+        ("target = [51.0, -3.0]", "target = [-50.0, 170.0]", "allowed: 0.01 to 1500 km"),
+        ('wave = "radio"', 'wave = "radio"\nwavelength_nm = 600.0', "optical sightlines only"),
+        ("air_temperature =", "air_temprature =", "did you mean air_temperature?"),
+        ('"tdry [degC]"', '"tdry [degC"', "'variable [unit]'"),
+        ('output = "out"', 'output = "s.toml"', "which is a file; expected a folder"),
         ("wavelength_nm = 633.0", "wavelength_nm = 3000.0", "1700"),
         ('wave = "radio"', 'wave = "sonar"', "optical"),
         ("[[site]]", "[[site]", "TOML"),
@@ -149,6 +162,55 @@ def test_a_file_that_is_no_settings_is_one_clear_message(tmp_path):
     (tmp_path / "big.toml").write_bytes(b"#" * 1_000_002)
     with pytest.raises(SettingsError, match="larger than"):
         load_settings(tmp_path / "big.toml")
+    (tmp_path / "deep.toml").write_bytes(b"a = " + b"[" * 100_000)
+    with pytest.raises(SettingsError, match="nested too deep"):
+        load_settings(tmp_path / "deep.toml")
+    with pytest.raises(SettingsError, match="cannot be read"):
+        load_settings(tmp_path)
+
+
+def test_a_file_without_end_is_not_read_whole():
+    # /dev/zero never ends; only the bound stops the reading.
+    with pytest.raises(SettingsError, match="larger than"):
+        load_settings("/dev/zero")
+
+
+def test_thousands_of_faults_are_bounded(tmp_path):
+    found = faults(tmp_path, "".join(f"key{i} = 1\n" for i in range(40_000)))
+    assert len(found) == 51
+    assert found[-1] == "and 39951 more"  # the missing site is a fault too
+
+
+def test_faults_come_in_the_order_of_the_file(tmp_path):
+    text = GOOD.replace("latitude = 50.0", "latitude = 91.0").replace(
+        "distance_km = 70.0", "distance_km = -1.0"
+    )
+    found = faults(tmp_path, text.replace('name = "relay"', 'name = "hill"'))
+    lines = [int(fault.split("(line ")[1].split(")")[0]) for fault in found]
+    assert len(lines) == 3
+    assert lines == sorted(lines)
+
+
+def test_a_byte_order_mark_is_no_fault(tmp_path):
+    (tmp_path / "s.toml").write_bytes(b"\xef\xbb\xbf" + GOOD.encode())
+    assert load_settings(tmp_path / "s.toml").title == "Test"
+
+
+def test_lines_are_found_in_dotted_keys_and_nested_tables(tmp_path):
+    dotted = GOOD.replace("[run]", "").replace("title = ", "run.title = ")
+    dotted = dotted.replace("output = ", "run.output = ").replace("members = 16", "run.members = 1")
+    (fault,) = faults(tmp_path, dotted)
+    assert fault.startswith("run.members (line 5): found 1; allowed")
+    (fault,) = faults(tmp_path, GOOD.replace('"tdry [degC]"', "7"))
+    line = GOOD.split("\n").index('air_temperature = "tdry [degC]"') + 1
+    assert fault.startswith(f"ingest.names.air_temperature (line {line}): found 7; allowed")
+
+
+def test_control_characters_in_keys_and_values_are_shown_escaped(tmp_path):
+    text = GOOD.replace('name = "Cape"', 'name = "\\u001b[31mCape"\n"k\\u001b\\n" = 1')
+    found = faults(tmp_path, text)
+    assert all(fault.isprintable() for fault in found)
+    assert any("k\\x1b\\n" in fault for fault in found)
 
 
 def test_the_sample_settings_are_right():
