@@ -21,6 +21,7 @@ __all__ = [
     "LAYER_CLASSES",
     "QUALITY_FLAGS",
     "SIGHTLINE_STATES",
+    "SURFACE_STATES",
     "VARIABLES",
     "Variable",
     "attributes",
@@ -44,6 +45,10 @@ DUCT_KINDS = {"surface_duct": 1, "elevated_surface_duct": 2, "elevated_duct": 3}
 
 #: Sightline states; the value is the code stored in `sightline_state`.
 SIGHTLINE_STATES = {"shut": 0, "grazing": 1, "open": 2}
+
+#: What is known of the air between the surface and the lowest trusted level; code of
+#: `surface_layer_state`.
+SURFACE_STATES = {"none": 0, "modelled": 1, "unknown": 2}
 
 #: Quality bits of the Profiles dataset; a level may carry several.
 QUALITY_FLAGS = {
@@ -250,6 +255,25 @@ _ROWS = [
         "near_ground_warming", "largest warming above the lowest level within 300 m", "K", PROFILE
     ),
     Variable("near_ground_warming_depth", "depth over which the air warms so", "m", PROFILE),
+    Variable(
+        "surface_layer_state",
+        "whether sightlines run through a modelled surface layer",
+        None,
+        PROFILE,
+        extra=_codes(SURFACE_STATES),
+    ),
+    Variable(
+        "air_sea_temperature_difference",
+        "air at the lowest trusted level less water",
+        "K",
+        PROFILE,
+    ),
+    Variable(
+        "evaporation_duct_height",
+        "height of the evaporation duct of the surface layer",
+        "m",
+        PROFILE,
+    ),
     Variable("near_ground_resolution", "mean level spacing in the lowest 300 m", "m", PROFILE),
 ]
 

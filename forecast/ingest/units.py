@@ -134,12 +134,12 @@ def _registry(whole: bool = False) -> Any:
 
     if whole:
         return pint.UnitRegistry()
-    registry = pint.UnitRegistry(None)
+    registry: Any = pint.UnitRegistry(None)
     registry.load_definitions(list(_COMMON))
     return registry
 
 
-def _convert(numbers: np.ndarray, spelled: str, wanted: str) -> np.ndarray:
+def _convert(numbers: np.ndarray, spelled: str, wanted: str | None) -> np.ndarray:
     import pint
 
     try:

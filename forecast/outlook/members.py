@@ -21,7 +21,14 @@ import numpy as np
 
 from forecast.physics.moisture import relative_humidity, specific_humidity_from_relative_humidity
 
-__all__ = ["ErrorSizes", "MemberProfiles", "error_model", "error_sizes", "perturb"]
+__all__ = [
+    "ErrorSizes",
+    "MemberProfiles",
+    "error_model",
+    "error_sizes",
+    "generator",
+    "perturb",
+]
 
 _GRID_STEPS = 6  # points of the noise grid per correlation height
 _LARGEST_TILT = 0.5  # a displacement may stretch or squeeze the lowest layer by half at most
@@ -116,7 +123,7 @@ def perturb(
     out_z = np.empty_like(out_t)
     humidity = relative_humidity(specific_humidity, air_temperature, air_pressure)
     for row, (size, identity) in enumerate(zip(sizes, identities, strict=True)):
-        rng = _generator(seed, identity)
+        rng = generator(seed, identity)
         top = float(np.nanmax(height[row], initial=0.0))
         noise = _correlated(rng, members, 2, height[row], size.correlation_height, top)
         out_t[row] = air_temperature[row] + size.temperature * noise[0]
@@ -133,7 +140,8 @@ def perturb(
     return MemberProfiles(out_z, np.ascontiguousarray(pressure), out_t, out_q)
 
 
-def _generator(seed: int, identity: str) -> np.random.Generator:
+def generator(seed: int, identity: str) -> np.random.Generator:
+    """Random numbers that hang on the seed and one identity alone."""
     digest = hashlib.sha256(f"{seed}\x00{identity}".encode()).digest()
     return np.random.Generator(np.random.Philox(key=int.from_bytes(digest[:16], "little")))
 

@@ -9,67 +9,37 @@ Brown, Cai & DasGupta 2001, Statistical Science 16, sect. 3.1.3), widened for co
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import xarray as xr
-from scipy.special import betaincinv
 
 from forecast.errors import InputError
 from forecast.outlook import members as draws
-from forecast.outlook.duct_events import duct_cover, duct_under
+from forecast.outlook.sightlines import sightline_geometry, trace_paths
+from forecast.outlook.statistics import Progress, Row, height_bins, member_statistics
+from forecast.outlook.surface import (
+    STATE_NAMES,
+    SurfaceInputs,
+    add_surface_layer,
+    surface_inputs,
+)
 from forecast.physics.column_batch import analyse_columns
 from forecast.physics.columns import duct_dataset
 from forecast.physics.curvature import classify_layers, ray_curvature
 from forecast.physics.earth import euler_radius
-from forecast.physics.rays import build_medium
-from forecast.physics.refractive_index import optical_refractivity
-from forecast.physics.sightline import standard_medium, trace_sightlines
-from forecast.schema import CAUTION, CEILINGS_M, SIGHTLINE_STATES, describe
+from forecast.physics.evaporation_duct import evaporation_duct
+from forecast.physics.surface_join import trusted_level
+from forecast.physics.surface_layer import SurfaceLayer
+from forecast.schema import CAUTION, CEILINGS_M, describe
 
 if TYPE_CHECKING:
     from forecast.settings import Settings, Sightline
 
-__all__ = ["make_outlook", "probability_interval"]
+__all__ = ["make_outlook"]
 
 _SMALLEST_ENSEMBLE = 8
-_CHUNK_VALUES = 3_000_000  # member values worked on at once; bounds memory to some 300 MB
 _NEAR_GROUND = 300.0  # m
-_STATE = ("height", "air_pressure", "air_temperature", "specific_humidity")
-
-Progress = Callable[[int, int, str], None]
-
-
-@dataclass(frozen=True)
-class _Row:
-    """One valid time of a site: the profile that speaks, and its ensemble if it has one."""
-
-    index: int
-    ensemble: tuple[int, ...]
-
-
-def probability_interval(hits: Any, trials: Any) -> tuple[np.ndarray, np.ndarray]:
-    """Central 90 % interval of a probability from hits in trials (Jeffreys' prior).
-
-    Parameters
-    ----------
-    hits, trials : array_like
-        Counts; trials may be a fractional effective number.
-
-    Returns
-    -------
-    tuple of ndarray
-        5 % and 95 % quantiles of the Beta(hits + ½, trials − hits + ½) posterior; the lower is 0
-        without a hit and the upper 1 without a miss.
-    """
-    k = np.asarray(hits, dtype=float)
-    n = np.asarray(trials, dtype=float)
-    lower = np.where(k <= 0.0, 0.0, betaincinv(k + 0.5, n - k + 0.5, 0.05))
-    upper = np.where(k >= n, 1.0, betaincinv(k + 0.5, n - k + 0.5, 0.95))
-    missing = np.isnan(k)
-    return np.where(missing, np.nan, lower), np.where(missing, np.nan, upper)
 
 
 def make_outlook(
@@ -104,26 +74,32 @@ def make_outlook(
         profiles = profiles.assign_coords(site=("profile", profiles["station"].values.astype(str)))
     rows = _speaking_rows(profiles)
     lines = list(settings.sightlines)
-    state, valid_top = _usable_levels(profiles, _reach(settings, lines))
-    chosen = profiles.isel(profile=[row.index for row in rows])
-    guess = {name: a[[row.index for row in rows]] for name, a in state.items()}
-    tops = valid_top[[row.index for row in rows]]
+    state, wind, valid_top = _usable_levels(profiles, _reach(settings, lines))
+    water = surface_inputs(profiles, wind, state["height"], settings)
+    index = [row.index for row in rows]
+    chosen = profiles.isel(profile=index)
+    guess = {name: a[index] for name, a in state.items()}
+    tops = valid_top[index]
     site = chosen["site"].values.astype(str)
     latitude = chosen["latitude"].values.astype(float)
     radius = euler_radius(latitude)
 
     data = _best_guess(guess, radius, settings.chart_top)
-    data.update(_sightline_geometry(lines, latitude, site))
-    data.update(_trace(lines, guess, latitude, site))
+    data.update(sightline_geometry(lines, latitude, site))
+    air, surface_state, layer = add_surface_layer(guess, water.take(index))
+    data.update(trace_paths(lines, air, latitude, site))
     data.update(_resolution(guess))
-    data.update(_member_statistics(profiles, state, rows, lines, data, tops, settings, progress))
+    data.update(_surface(guess, water.take(index), surface_state, layer))
+    data.update(
+        member_statistics(profiles, state, water, rows, lines, data, tops, settings, progress)
+    )
 
     coords = {name: c for name, c in chosen.coords.items() if c.dims == ("profile",)}
     coords.pop("member", None)
     outlook = xr.Dataset(data, coords=coords)
     outlook = outlook.assign_coords(
         ceiling=("ceiling", np.array(CEILINGS_M)),
-        height_bin=("height_bin", _height_bins(settings.chart_top)),
+        height_bin=("height_bin", height_bins(settings.chart_top)),
         sightline_name=("sightline", np.array([line.name for line in lines], dtype=str)),
         sightline_site=("sightline", np.array([line.site for line in lines], dtype=str)),
         sightline_wave=("sightline", np.array([line.wave for line in lines], dtype=str)),
@@ -139,7 +115,7 @@ def make_outlook(
     return describe(outlook)
 
 
-def _speaking_rows(profiles: xr.Dataset) -> list[_Row]:
+def _speaking_rows(profiles: xr.Dataset) -> list[Row]:
     """One row per (site, time), sorted by both."""
     site = profiles["site"].values.astype(str)
     station = profiles["station"].values.astype(str)
@@ -160,7 +136,7 @@ def _speaking_rows(profiles: xr.Dataset) -> list[_Row]:
         ]
         same.sort(key=lambda i: member[i])
         whole = tuple(same) if model[best] and len(same) >= _SMALLEST_ENSEMBLE else ()
-        rows.append(_Row(best, whole))
+        rows.append(Row(best, whole))
     return rows
 
 
@@ -171,14 +147,17 @@ def _reach(settings: Settings, lines: list[Sightline]) -> float:
     return max(settings.chart_top, max(CEILINGS_M), *far, 0.0) * 1.05
 
 
-def _usable_levels(profiles: xr.Dataset, reach: float) -> tuple[dict[str, np.ndarray], np.ndarray]:
+def _usable_levels(
+    profiles: xr.Dataset, reach: float
+) -> tuple[dict[str, np.ndarray], np.ndarray, np.ndarray]:
     """Pack each profile's complete levels to the front and cut them above `reach`.
 
-    Returns the state arrays (profile, level) and the height of each profile's highest usable
-    level before the cut.
+    Returns the state arrays and wind speed (profile, level), and the height of each profile's
+    highest usable level before the cut.
     """
     arrays = {
-        name: profiles[name].transpose("profile", "level").values.astype(float) for name in _STATE
+        name: profiles[name].transpose("profile", "level").values.astype(float)
+        for name in STATE_NAMES
     }
     valid = np.logical_and.reduce([np.isfinite(a) for a in arrays.values()])
     height = np.where(valid, arrays["height"], -np.inf)
@@ -188,10 +167,17 @@ def _usable_levels(profiles: xr.Dataset, reach: float) -> tuple[dict[str, np.nda
     valid &= beyond <= 1
     order = np.argsort(~valid, axis=1, kind="stable")[:, : max(2, int(valid.sum(axis=1).max()))]
     packed = np.take_along_axis(valid, order, axis=1)
-    return {
+    speed = np.full(valid.shape, np.nan)
+    if "eastward_wind" in profiles and "northward_wind" in profiles:
+        speed = np.hypot(
+            profiles["eastward_wind"].transpose("profile", "level").values.astype(float),
+            profiles["northward_wind"].transpose("profile", "level").values.astype(float),
+        )
+    state = {
         name: np.where(packed, np.take_along_axis(a, order, axis=1), np.nan)
         for name, a in arrays.items()
-    }, tops
+    }
+    return state, np.take_along_axis(speed, order, axis=1), tops
 
 
 def _best_guess(
@@ -239,194 +225,24 @@ def _resolution(guess: dict[str, np.ndarray]) -> dict[str, Any]:
     }
 
 
-def _sightline_geometry(
-    lines: list[Sightline], latitude: np.ndarray, site: np.ndarray
+def _surface(
+    guess: dict[str, np.ndarray],
+    water: SurfaceInputs,
+    state: np.ndarray,
+    layer: SurfaceLayer | None,
 ) -> dict[str, Any]:
-    """Geometry of the sightlines, and what straight rays and standard air would show."""
-    geometry: dict[str, Any] = {
-        name: ("sightline", np.array([getattr(line, name) for line in lines], dtype=float))
-        for name in (
-            "observer_height",
-            "target_height",
-            "target_base_height",
-            "distance",
-            "azimuth",
-        )
+    """What is known of the air next to the water."""
+    trusted = trusted_level(guess["height"])
+    t = guess["air_temperature"][np.arange(trusted.size), np.maximum(trusted, 0)]
+    difference = np.where(water.wanted & (trusted >= 0), t - water.sst, np.nan)
+    height = np.full(trusted.size, np.nan)
+    if layer is not None:
+        height = evaporation_duct(layer, guess["air_pressure"][:, 0]).height
+    return {
+        "surface_layer_state": ("profile", state),
+        "air_sea_temperature_difference": ("profile", difference),
+        "evaporation_duct_height": ("profile", height),
     }
-    for label in ("straight", "standard"):
-        hidden = np.full(len(lines), np.nan)
-        elevation = np.full(len(lines), np.nan)
-        for i, line in enumerate(lines):
-            here = latitude[site == line.site]
-            radius = float(euler_radius(np.mean(here) if here.size else 45.0, line.azimuth))
-            air = standard_medium(line.wave if label == "standard" else "straight", radius)
-            table = trace_sightlines(
-                air, line.observer_height, line.target_height, line.distance,
-                line.target_base_height,
-            )  # fmt: skip
-            hidden[i] = table.hidden_height[0, 0]
-            elevation[i] = table.apparent_elevation[0, 0]
-        geometry[f"hidden_height_{label}"] = ("sightline", hidden)
-        geometry[f"apparent_elevation_{label}"] = ("sightline", elevation)
-    return geometry
-
-
-def _trace(
-    lines: list[Sightline], state: dict[str, np.ndarray], latitude: np.ndarray, site: np.ndarray
-) -> dict[str, Any]:
-    """Every sightline through the columns of its own site; columns may be rows or members."""
-    shape = (site.size, len(lines))
-    codes = np.full(shape, -1, dtype=np.int8)
-    floats = {
-        name: np.full(shape, np.nan)
-        for name in ("hidden_height", "visible_extent", "apparent_elevation")
-    }
-    refractivity: dict[tuple[str, str, float], np.ndarray] = {}
-    for i, line in enumerate(lines):
-        own = np.flatnonzero(site == line.site)
-        if own.size == 0:
-            continue
-        air = {name: a[own] for name, a in state.items()}
-        key = (line.site, line.wave, line.wavelength if line.wave == "optical" else 0.0)
-        if key not in refractivity:
-            refractivity[key] = _refractivity(air, line)
-        medium = build_medium(
-            air["height"], refractivity[key], euler_radius(latitude[own], line.azimuth), line.wave
-        )
-        table = trace_sightlines(
-            medium, line.observer_height, line.target_height, line.distance,
-            line.target_base_height,
-        )  # fmt: skip
-        codes[own, i] = table.state[:, 0]
-        for name, values in floats.items():
-            values[own, i] = getattr(table, name)[:, 0]
-    both = ("profile", "sightline")
-    return {"sightline_state": (both, codes), **{n: (both, a) for n, a in floats.items()}}
-
-
-def _refractivity(air: dict[str, np.ndarray], line: Sightline) -> np.ndarray:
-    p, t, q = (air[name] for name in _STATE[1:])
-    if line.wave == "optical":
-        return optical_refractivity(p, t, q, line.wavelength)
-    return analyse_columns(p, t, q, air["height"], 6371e3).refractivity
-
-
-def _height_bins(chart_top: float) -> np.ndarray:
-    """Heights at which the likelihood of being inside a duct is told, m: finer near the ground."""
-    low = np.arange(0.0, min(300.0, chart_top), 10.0)
-    return np.concatenate([low, np.arange(low[-1] + 10.0, chart_top + 1.0, 25.0)])
-
-
-def _member_statistics(
-    profiles: xr.Dataset,
-    state: dict[str, np.ndarray],
-    rows: list[_Row],
-    lines: list[Sightline],
-    data: dict[str, Any],
-    tops: np.ndarray,
-    settings: Settings,
-    progress: Progress | None,
-) -> dict[str, Any]:
-    """Shares of members in which ducts lie under the ceilings and sightlines are open."""
-    site = profiles["site"].values.astype(str)
-    latitude = profiles["latitude"].values.astype(float)
-    bins = _height_bins(settings.chart_top)
-    ceilings = np.array(CEILINGS_M)
-    n_rows = len(rows)
-    duct_hits = np.full((n_rows, ceilings.size), np.nan)
-    cover = np.full((n_rows, bins.size), np.nan)
-    open_hits = np.full((n_rows, len(lines)), np.nan)
-    hidden_low = np.full((n_rows, len(lines)), np.nan)
-    hidden_high = np.full((n_rows, len(lines)), np.nan)
-    count = np.array([len(r.ensemble) or settings.members for r in rows])
-    levels = state["height"].shape[1]
-    step = max(1, _CHUNK_VALUES // (int(count.max()) * levels))
-    done = 0
-    while done < n_rows:
-        part = rows[done : done + step]
-        batch, owner = _member_columns(profiles, state, part, settings)
-        row_site = site[[r.index for r in part]][owner]
-        row_latitude = latitude[[r.index for r in part]][owner]
-        columns = analyse_columns(
-            batch["air_pressure"], batch["air_temperature"], batch["specific_humidity"],
-            batch["height"], euler_radius(row_latitude),
-        )  # fmt: skip
-        found = duct_under(columns.ducts, ceilings, settings.minimum_duct_strength)
-        inside = duct_cover(columns.ducts, bins, settings.minimum_duct_strength)
-        traced = _trace(lines, batch, row_latitude, row_site)
-        is_open = traced["sightline_state"][1] == SIGHTLINE_STATES["open"]
-        hidden = traced["hidden_height"][1]
-        for k in range(len(part)):
-            mine = owner == k
-            duct_hits[done + k] = found[mine].sum(axis=0)
-            cover[done + k] = inside[mine].mean(axis=0)
-            for i, line in enumerate(lines):
-                if row_site[mine][0] == line.site:
-                    open_hits[done + k, i] = is_open[mine, i].sum()
-                    hidden_low[done + k, i], hidden_high[done + k, i] = np.quantile(
-                        hidden[mine, i], (0.05, 0.95)
-                    )
-        done += len(part)
-        if progress is not None:
-            progress(done, n_rows, "members")
-    # A profile cut short cannot tell of ducts it does not reach.
-    duct_hits[tops[:, None] < ceilings] = np.nan
-    cover[tops[:, None] < bins] = np.nan
-    rule = draws.error_model()["interval"]
-    share = np.minimum(1.0, rule["spacing"] / np.maximum(data["near_ground_resolution"][1], 1e-3))
-    sure = np.maximum(np.minimum(rule["fewest"], count), count * share)
-    out: dict[str, Any] = {"member_count": ("profile", count.astype(np.int32))}
-    for name, hits, dim in (("duct", duct_hits, "ceiling"), ("sightline", open_hits, "sightline")):
-        chance = hits / count[:, None]
-        lower, upper = probability_interval(chance * sure[:, None], sure[:, None])
-        out[f"{name}_probability"] = (("profile", dim), chance)
-        out[f"{name}_probability_lower"] = (("profile", dim), np.minimum(lower, chance))
-        out[f"{name}_probability_upper"] = (("profile", dim), np.maximum(upper, chance))
-    out["duct_likelihood"] = (("profile", "height_bin"), cover)
-    out["hidden_height_lower"] = (("profile", "sightline"), hidden_low)
-    out["hidden_height_upper"] = (("profile", "sightline"), hidden_high)
-    return out
-
-
-def _member_columns(
-    profiles: xr.Dataset, state: dict[str, np.ndarray], rows: list[_Row], settings: Settings
-) -> tuple[dict[str, np.ndarray], np.ndarray]:
-    """Members of some rows as one batch of columns, and which row each belongs to."""
-    parts: dict[str, list[np.ndarray]] = {name: [] for name in _STATE}
-    owner: list[np.ndarray] = []
-    drawn = [k for k, row in enumerate(rows) if not row.ensemble]
-    if drawn:
-        index = [rows[k].index for k in drawn]
-        some = profiles.isel(profile=index)
-        lead = some["lead_time"].values.astype("timedelta64[s]").astype(float) / 86400.0
-        kind = some["source_kind"].values.astype(str)
-        identity = [
-            f"{st}|{np.datetime_as_string(tm, 's')}|{kd}|{ld}"
-            for st, tm, kd, ld in zip(
-                some["station"].values, some["time"].values, kind, lead, strict=True
-            )
-        ]
-        sizes = [draws.error_sizes(k, ld) for k, ld in zip(kind, lead, strict=True)]
-        batch = draws.perturb(
-            state["height"][index],
-            state["air_pressure"][index],
-            state["air_temperature"][index],
-            state["specific_humidity"][index],
-            sizes,
-            identity,
-            settings.members,
-            settings.seed,
-        )
-        for name in _STATE:
-            a = getattr(batch, name)
-            parts[name].append(a.reshape(-1, a.shape[-1]))
-        owner.append(np.repeat(drawn, settings.members))
-    for k, row in enumerate(rows):
-        if row.ensemble:
-            for name in _STATE:
-                parts[name].append(state[name][list(row.ensemble)])
-            owner.append(np.full(len(row.ensemble), k))
-    return {name: np.concatenate(a) for name, a in parts.items()}, np.concatenate(owner)
 
 
 def _error_model_text(settings: Settings) -> str:

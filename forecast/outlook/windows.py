@@ -10,7 +10,7 @@ import numpy as np
 import xarray as xr
 
 from forecast.physics.moisture import CELSIUS_OFFSET
-from forecast.schema import DUCT_KINDS
+from forecast.schema import DUCT_KINDS, SURFACE_STATES
 
 if TYPE_CHECKING:
     from forecast.settings import Settings
@@ -193,6 +193,7 @@ def _sightline_reason(outlook: xr.Dataset, row: int, item: int) -> str:
         parts.append("It is open in standard air too.")
     if str(outlook["sightline_wave"].values[item]) == "optical":
         parts.append(_warming(outlook, row))
+    parts.append(_water(outlook, row))
     parts.append(_lowest_layer(outlook, row))
     # Only a duct that the path can enter explains anything.
     reach = max(top, float(outlook["observer_height"].values[item]))
@@ -219,6 +220,24 @@ def _warming(outlook: xr.Dataset, row: int) -> str:
         return ""
     lowest = float(outlook["air_temperature"].values[row, 0]) - CELSIUS_OFFSET
     return f"Air warms by {warming:.1f} K in the lowest {depth:.0f} m (from {lowest:.1f} °C)."
+
+
+def _water(outlook: xr.Dataset, row: int) -> str:
+    """What is known of the air next to the water, for sites that lie by the sea."""
+    state = int(outlook["surface_layer_state"].values[row])
+    if state == SURFACE_STATES["unknown"]:
+        return (
+            "The lowest metres over the water are not known (no water temperature, no wind or no "
+            "level between 8 and 60 m): less sure."
+        )
+    if state != SURFACE_STATES["modelled"]:
+        return ""
+    difference = float(outlook["air_sea_temperature_difference"].values[row])
+    side = "colder" if difference >= 0.0 else "warmer"
+    return (
+        f"The water is {abs(difference):.1f} K {side} than the air above; the metres between are "
+        "modelled."
+    )
 
 
 def _lowest_layer(outlook: xr.Dataset, row: int) -> str:

@@ -85,5 +85,6 @@ def settings(**changes) -> SimpleNamespace:
         "minimum_duct_strength": 2.0,
         "chart_top": 3000.0,
         "sightlines": (),
+        "sites": (),
     }
     return SimpleNamespace(**{**values, **changes})

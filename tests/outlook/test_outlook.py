@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from types import SimpleNamespace
+
 import numpy as np
 import pytest
 from scipy.stats import beta
@@ -9,7 +11,7 @@ from scipy.stats import beta
 import forecast
 from forecast.outlook import make_outlook
 from forecast.outlook.duct_events import duct_cover, duct_under
-from forecast.outlook.outlook import probability_interval
+from forecast.outlook.statistics import probability_interval
 from forecast.physics.ducts import find_ducts
 from forecast.schema import SIGHTLINE_STATES
 from tests.outlook.build import air, line, profiles, settings
@@ -148,6 +150,59 @@ def test_a_coarse_profile_is_less_sure():
     assert outlook["near_ground_resolution"].values == pytest.approx([20.0, 120.0])
     width = (outlook["duct_probability_upper"] - outlook["duct_probability_lower"]).values[:, 0]
     assert width[1] > 3.0 * width[0]
+
+
+def over_water(difference, **changes):
+    """Profiles 10 m apart in height with wind, and a site over water colder by `difference`."""
+    fine = air()
+    data = profiles([{"air": fine}])
+    wind = np.full(data["height"].shape, 4.0)
+    data = data.assign(
+        eastward_wind=(("profile", "level"), wind),
+        northward_wind=(("profile", "level"), 0.0 * wind),
+    )
+    site = SimpleNamespace(name="cape", surface="sea", sea_surface_temperature=288.02 - difference)
+    values = {"sites": (SimpleNamespace(**{**vars(site), **changes}),), "members": 64}
+    low = line(wave="optical", observer_height=3.0, target_height=30.0, distance=30e3)
+    return data, settings(sightlines=(low,), **values)
+
+
+def test_cold_water_shows_more_and_warm_water_less():
+    # Light is bent down where air warms upward from cold water and up over warm water; the
+    # standard value lies between (common practice; the size is checked with the ray invariant
+    # when the sightlines themselves are).
+    hidden = {}
+    for difference in (-4.0, 3.0):
+        data, chosen = over_water(difference)
+        outlook = make_outlook(data, chosen)
+        assert outlook["surface_layer_state"].values[0] == 1
+        assert outlook["air_sea_temperature_difference"].values[0] == pytest.approx(
+            difference, abs=0.05
+        )
+        hidden[difference] = float(outlook["hidden_height"].values[0, 0])
+        standard = float(outlook["hidden_height_standard"].values[0])
+    assert hidden[3.0] < standard - 3.0
+    assert hidden[-4.0] > standard + 1.0
+
+
+def test_without_water_temperature_nothing_is_pretended():
+    data, chosen = over_water(0.0, sea_surface_temperature=None)
+    outlook = make_outlook(data, chosen)
+    assert outlook["surface_layer_state"].values[0] == 2
+    plain = make_outlook(data, settings(sightlines=chosen.sightlines, members=64))
+    np.testing.assert_array_equal(outlook["hidden_height"].values, plain["hidden_height"].values)
+    # ... and the outlook is less sure of the sightline, not of the ducts.
+    for name, wider in (("sightline", True), ("duct", False)):
+        upper, other = (o[f"{name}_probability_upper"].values for o in (outlook, plain))
+        assert ((upper > other).all()) == wider
+
+
+def test_ducts_are_those_of_the_profile_not_of_the_surface_layer():
+    # Evaporation ducts are nearly always there: counted as ducts they would hide all others.
+    data, chosen = over_water(-4.0)
+    outlook = make_outlook(data, chosen)
+    assert outlook["duct_probability"].values[0, 0] == 0.0
+    assert 1.0 < outlook["evaporation_duct_height"].values[0] < 40.0
 
 
 def test_intervals_hold_their_probability():

@@ -1,0 +1,189 @@
+"""Shares of members in which things happen, with intervals: the probabilities of the outlook."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import xarray as xr
+from scipy.special import betaincinv
+
+from forecast.outlook import members as draws
+from forecast.outlook.duct_events import duct_cover, duct_under
+from forecast.outlook.sightlines import trace_paths
+from forecast.outlook.surface import STATE_NAMES, SurfaceInputs, add_surface_layer, draw_errors
+from forecast.physics.column_batch import analyse_columns
+from forecast.physics.earth import euler_radius
+from forecast.schema import CEILINGS_M, SIGHTLINE_STATES, SURFACE_STATES
+
+if TYPE_CHECKING:
+    from forecast.settings import Settings, Sightline
+
+__all__ = ["Progress", "Row", "height_bins", "member_statistics", "probability_interval"]
+
+_CHUNK_VALUES = 3_000_000  # member values worked on at once; bounds memory to some 300 MB
+
+#: Called with (done, total, label).
+Progress = Callable[[int, int, str], None]
+
+
+@dataclass(frozen=True)
+class Row:
+    """One valid time of a site: the profile that speaks, and its ensemble if it has one."""
+
+    index: int
+    ensemble: tuple[int, ...]
+
+
+def probability_interval(hits: Any, trials: Any) -> tuple[np.ndarray, np.ndarray]:
+    """Central 90 % interval of a probability from hits in trials (Jeffreys' prior).
+
+    Parameters
+    ----------
+    hits, trials : array_like
+        Counts; trials may be a fractional effective number.
+
+    Returns
+    -------
+    tuple of ndarray
+        5 % and 95 % quantiles of the Beta(hits + ½, trials − hits + ½) posterior; the lower is 0
+        without a hit and the upper 1 without a miss.
+    """
+    k = np.asarray(hits, dtype=float)
+    n = np.asarray(trials, dtype=float)
+    lower = np.where(k <= 0.0, 0.0, betaincinv(k + 0.5, n - k + 0.5, 0.05))
+    upper = np.where(k >= n, 1.0, betaincinv(k + 0.5, n - k + 0.5, 0.95))
+    missing = np.isnan(k)
+    return np.where(missing, np.nan, lower), np.where(missing, np.nan, upper)
+
+
+def height_bins(chart_top: float) -> np.ndarray:
+    """Heights at which the likelihood of being inside a duct is told, m: finer near the ground."""
+    low = np.arange(0.0, min(300.0, chart_top), 10.0)
+    return np.concatenate([low, np.arange(low[-1] + 10.0, chart_top + 1.0, 25.0)])
+
+
+def member_statistics(
+    profiles: xr.Dataset,
+    state: dict[str, np.ndarray],
+    water: SurfaceInputs,
+    rows: list[Row],
+    lines: list[Sightline],
+    data: dict[str, Any],
+    tops: np.ndarray,
+    settings: Settings,
+    progress: Progress | None,
+) -> dict[str, Any]:
+    """Shares of members in which ducts lie under the ceilings and sightlines are open."""
+    site = profiles["site"].values.astype(str)
+    latitude = profiles["latitude"].values.astype(float)
+    bins = height_bins(settings.chart_top)
+    ceilings = np.array(CEILINGS_M)
+    n_rows = len(rows)
+    duct_hits = np.full((n_rows, ceilings.size), np.nan)
+    cover = np.full((n_rows, bins.size), np.nan)
+    open_hits = np.full((n_rows, len(lines)), np.nan)
+    hidden_low = np.full((n_rows, len(lines)), np.nan)
+    hidden_high = np.full((n_rows, len(lines)), np.nan)
+    count = np.array([len(r.ensemble) or settings.members for r in rows])
+    levels = state["height"].shape[1]
+    step = max(1, _CHUNK_VALUES // (int(count.max()) * levels))
+    done = 0
+    while done < n_rows:
+        part = rows[done : done + step]
+        batch, owner, errors = _member_columns(profiles, state, part, settings)
+        row_site = site[[r.index for r in part]][owner]
+        row_latitude = latitude[[r.index for r in part]][owner]
+        columns = analyse_columns(
+            batch["air_pressure"], batch["air_temperature"], batch["specific_humidity"],
+            batch["height"], euler_radius(row_latitude),
+        )  # fmt: skip
+        found = duct_under(columns.ducts, ceilings, settings.minimum_duct_strength)
+        inside = duct_cover(columns.ducts, bins, settings.minimum_duct_strength)
+        below = water.take([r.index for r in part]).take(owner)
+        air, _, _ = add_surface_layer(batch, below, errors)
+        traced = trace_paths(lines, air, row_latitude, row_site)
+        is_open = traced["sightline_state"][1] == SIGHTLINE_STATES["open"]
+        hidden = traced["hidden_height"][1]
+        for k in range(len(part)):
+            mine = owner == k
+            duct_hits[done + k] = found[mine].sum(axis=0)
+            cover[done + k] = inside[mine].mean(axis=0)
+            for i, line in enumerate(lines):
+                if row_site[mine][0] == line.site:
+                    open_hits[done + k, i] = is_open[mine, i].sum()
+                    hidden_low[done + k, i], hidden_high[done + k, i] = np.quantile(
+                        hidden[mine, i], (0.05, 0.95)
+                    )
+        done += len(part)
+        if progress is not None:
+            progress(done, n_rows, "members")
+    # A profile cut short cannot tell of ducts it does not reach.
+    duct_hits[tops[:, None] < ceilings] = np.nan
+    cover[tops[:, None] < bins] = np.nan
+    rule = draws.error_model()["interval"]
+    share = np.minimum(1.0, rule["spacing"] / np.maximum(data["near_ground_resolution"][1], 1e-3))
+    fewest = np.minimum(rule["fewest"], count)
+    sure = np.maximum(fewest, count * share)
+    # A path over water whose lowest metres are not known is as unsure as can be.
+    blind = data["surface_layer_state"][1] == SURFACE_STATES["unknown"]
+    surest = {"duct": sure, "sightline": np.where(blind, fewest, sure)}
+    out: dict[str, Any] = {"member_count": ("profile", count.astype(np.int32))}
+    for name, hits, dim in (("duct", duct_hits, "ceiling"), ("sightline", open_hits, "sightline")):
+        sure = surest[name]
+        chance = hits / count[:, None]
+        lower, upper = probability_interval(chance * sure[:, None], sure[:, None])
+        out[f"{name}_probability"] = (("profile", dim), chance)
+        out[f"{name}_probability_lower"] = (("profile", dim), np.minimum(lower, chance))
+        out[f"{name}_probability_upper"] = (("profile", dim), np.maximum(upper, chance))
+    out["duct_likelihood"] = (("profile", "height_bin"), cover)
+    out["hidden_height_lower"] = (("profile", "sightline"), hidden_low)
+    out["hidden_height_upper"] = (("profile", "sightline"), hidden_high)
+    return out
+
+
+def _member_columns(
+    profiles: xr.Dataset, state: dict[str, np.ndarray], rows: list[Row], settings: Settings
+) -> tuple[dict[str, np.ndarray], np.ndarray, np.ndarray]:
+    """Members of some rows as one batch of columns, which row each belongs to, surface errors."""
+    parts: dict[str, list[np.ndarray]] = {name: [] for name in STATE_NAMES}
+    owner: list[np.ndarray] = []
+    some = profiles.isel(profile=[row.index for row in rows])
+    lead = some["lead_time"].values.astype("timedelta64[s]").astype(float) / 86400.0
+    kind = some["source_kind"].values.astype(str)
+    identity = [
+        f"{st}|{np.datetime_as_string(tm, 's')}|{kd}|{ld}"
+        for st, tm, kd, ld in zip(
+            some["station"].values, some["time"].values, kind, lead, strict=True
+        )
+    ]
+    drawn = [k for k, row in enumerate(rows) if not row.ensemble]
+    if drawn:
+        index = [rows[k].index for k in drawn]
+        batch = draws.perturb(
+            state["height"][index],
+            state["air_pressure"][index],
+            state["air_temperature"][index],
+            state["specific_humidity"][index],
+            [draws.error_sizes(kind[k], lead[k]) for k in drawn],
+            [identity[k] for k in drawn],
+            settings.members,
+            settings.seed,
+        )
+        for name in STATE_NAMES:
+            a = getattr(batch, name)
+            parts[name].append(a.reshape(-1, a.shape[-1]))
+        owner.append(np.repeat(drawn, settings.members))
+    for k, row in enumerate(rows):
+        if row.ensemble:
+            for name in STATE_NAMES:
+                parts[name].append(state[name][list(row.ensemble)])
+            owner.append(np.full(len(row.ensemble), k))
+    of_row = np.concatenate(owner)
+    errors = np.empty((3, of_row.size))
+    for k in range(len(rows)):
+        mine = of_row == k
+        errors[:, mine] = draw_errors(identity[k], int(mine.sum()), settings.seed)
+    return {name: np.concatenate(a) for name, a in parts.items()}, of_row, errors
