@@ -15,6 +15,8 @@ TYPE_CHECKING = False  # what typing defines; importing typing costs a fifth of 
 if TYPE_CHECKING:
     from pathlib import Path
 
+    from xarray import Dataset
+
     from forecast.progress import Reporter
     from forecast.settings import Settings
 
@@ -31,7 +33,7 @@ exit codes:
   0  all done                       4  nothing usable
   1  unexpected error               5  settings wrong
   2  wrong usage                    6  output could not be written
-  3  done, some inputs set aside    130  interrupted
+  3  done, some inputs set aside    130, 143  interrupted, terminated
 
 Not for navigation or safety of life. Never point optics near the Sun.
 """
@@ -39,6 +41,8 @@ Not for navigation or safety of life. Never point optics near the Sun.
 EXIT_UNEXPECTED = 1
 EXIT_SETTINGS_WRONG = 5
 EXIT_INTERRUPTED = 130
+
+_MOST_CHARTS = 24  # of one `chart`; a regional grid would make thousands
 
 
 def main(argv: list[str] | None = None) -> int:
@@ -54,6 +58,7 @@ def main(argv: list[str] | None = None) -> int:
     int
         Exit code, as ``bendcast --help`` lists them.
     """
+    _mend_streams()
     argv = sys.argv[1:] if argv is None else argv
     arguments = _parser(argv).parse_args(argv)
     try:
@@ -61,36 +66,67 @@ def main(argv: list[str] | None = None) -> int:
         sys.stdout.flush()
         return code
     except BrokenPipeError:
-        # The reader of a pipe has gone; nothing is left to say to it.
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        _drop_stdout()
         return 0
     except KeyboardInterrupt:
-        print("interrupted", file=sys.stderr)
+        _complain("interrupted")
         return EXIT_INTERRUPTED
     except Exception as error:
         if arguments.debug:
-            raise
+            import traceback
+
+            _complain(traceback.format_exc())
         return _explain(error)
+
+
+def _mend_streams() -> None:
+    """Make sure that there is something to write to, and that any text can be written to it."""
+    for name in ("stdout", "stderr"):
+        if getattr(sys, name) is None:  # closed by the caller
+            setattr(sys, name, open(os.devnull, "w", encoding="utf-8"))  # noqa: SIM115
+    if hasattr(sys.stdout, "reconfigure"):
+        # File names may hold bytes, and titles letters, that the terminal's encoding lacks.
+        sys.stdout.reconfigure(errors="backslashreplace")
+
+
+def _drop_stdout() -> None:
+    """The reader of a pipe has gone; nothing is left to say to it, at exit neither."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+
+
+def _report(text: str) -> None:
+    """A result on standard output; a reader that has gone does not change what was done."""
+    try:
+        print(text, flush=True)
+    except BrokenPipeError:
+        _drop_stdout()
+
+
+def _complain(text: str) -> None:
+    """A fault on standard error, if anyone still listens there."""
+    try:
+        print(text, file=sys.stderr, flush=True)
+    except OSError:
+        return
 
 
 def _explain(error: Exception) -> int:
     """One clear message for an error, and its exit code."""
-    from forecast.errors import InputError, SettingsError
+    from forecast.errors import InputError, SettingsError, printable
     from forecast.nightly import EXIT_NOTHING_USABLE, EXIT_OUTPUT_FAILED, OutputError
 
     if isinstance(error, SettingsError):
-        print(error, file=sys.stderr)
+        _complain(str(error))
         return EXIT_SETTINGS_WRONG
     if isinstance(error, InputError):
-        print(f"bendcast: {error}", file=sys.stderr)
+        _complain(f"bendcast: {error}")
         return EXIT_NOTHING_USABLE
     if isinstance(error, OutputError):
-        print(f"bendcast: {error}", file=sys.stderr)
+        _complain(f"bendcast: {printable(error)}")
         return EXIT_OUTPUT_FAILED
-    print(
-        f"bendcast: unexpected {type(error).__name__}: {error}\n"
-        "This is a defect of bendcast; --debug shows where.",
-        file=sys.stderr,
+    _complain(
+        f"bendcast: unexpected {type(error).__name__}: {printable(error)}\n"
+        "This is a defect of bendcast; --debug shows where."
     )
     return EXIT_UNEXPECTED
 
@@ -149,6 +185,13 @@ def _chart_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--point", metavar="LAT,LON", help="where to take profiles from gridded model data"
     )
+    parser.add_argument(
+        "--station",
+        action="append",
+        default=[],
+        metavar="NAME",
+        help="only the soundings of this station; repeatable",
+    )
     parser.add_argument("--members", type=int, default=64, metavar="N", help="members (64)")
     _naming(parser)
 
@@ -171,15 +214,24 @@ def _naming(parser: argparse.ArgumentParser) -> None:
 
 
 def _names(arguments: argparse.Namespace) -> dict[str, str]:
-    from forecast.errors import SettingsError
+    from forecast.errors import InputError, SettingsError
+    from forecast.ingest.recognition import parse_names
     from forecast.settings import load_settings
 
     names = dict(load_settings(arguments.settings).names) if arguments.settings else {}
+    faults = []
     for entry in arguments.name:
-        role, found, variable = entry.partition("=")
-        if not found or not role.strip() or not variable.strip():
-            raise SettingsError("--name", [f"found {entry!r}; expected ROLE=VARIABLE"])
-        names[role.strip()] = variable.strip()
+        role, found, variable = (part.strip() for part in entry.partition("="))
+        if not found or not role or not variable:
+            faults.append(f"found {entry!r}; expected ROLE=VARIABLE")
+            continue
+        try:
+            parse_names({role: variable})
+        except InputError as error:
+            faults.append(error.reason)
+        names[role] = variable
+    if faults:
+        raise SettingsError("--name", faults)
     return names
 
 
@@ -194,6 +246,7 @@ def _nightly(arguments: argparse.Namespace) -> int:
 
     from forecast.nightly import EXIT_NOTHING_USABLE, plan_run, run_nightly
     from forecast.settings import load_settings
+    from forecast.stopping import stopping_cleanly
 
     settings = load_settings(arguments.settings)
     plan = plan_run(settings, Path(arguments.output) if arguments.output else None)
@@ -203,30 +256,31 @@ def _nightly(arguments: argparse.Namespace) -> int:
             print(f"{number}. {step}")
         _print_inputs(plan.inputs, plan.warnings, settings.base)
         return 0
-    with _reporter(arguments) as reporter:
+    with _reporter(arguments) as reporter, stopping_cleanly():
         result = run_nightly(plan, reporter)
         for warning in result.warnings:
             reporter.line(f"note: {warning}")
         for item in result.set_aside:
             reporter.line(f"set aside: {item['file']}: {item['reason']}")
-        if result.exit_code == EXIT_NOTHING_USABLE:
-            print(
-                f"bendcast: nothing usable among {len(plan.inputs)} inputs; earlier products in "
-                f"{plan.output} are left as they were",
-                file=sys.stderr,
-            )
-            return result.exit_code
-    print(
+    if result.exit_code == EXIT_NOTHING_USABLE:
+        _complain(
+            f"bendcast: nothing usable among {len(plan.inputs)} inputs; earlier products in "
+            f"{plan.output} are left as they were"
+        )
+        return result.exit_code
+    _report(
         f"{settings.title}: {result.profiles} profiles, {len(result.windows)} windows, "
-        f"{len(result.set_aside)} inputs set aside"
+        f"{len(result.set_aside)} inputs set aside\n"
+        f"page: {plan.output / 'index.html'}"
     )
-    print(f"page: {plan.output / 'index.html'}")
     return result.exit_code
 
 
 def _print_inputs(inputs: list, warnings: list[str], base: Path) -> None:
+    from forecast.errors import printable
+
     for item in inputs:
-        print(f"  {item.site}: {os.path.relpath(item.path, base)}")
+        print(f"  {item.site}: {printable(os.path.relpath(item.path, base))}")
     for warning in warnings:
         print(f"  note: {warning}")
 
@@ -277,30 +331,56 @@ def _chart(arguments: argparse.Namespace) -> int:
 
     from forecast.ingest import read_files
     from forecast.nightly import EXIT_NOTHING_USABLE, EXIT_SOME_SET_ASIDE, chart_files
+    from forecast.stopping import stopping_cleanly
 
     settings = _chart_settings(arguments)
+    names = _names(arguments) or None
     points = None
     if arguments.point:
         latitude, longitude = _point(arguments.point)
         points = [(f"{latitude:g}, {longitude:g}", latitude, longitude)]
-    with _reporter(arguments) as reporter:
+    with _reporter(arguments) as reporter, stopping_cleanly():
         reading = read_files(
-            arguments.files,
-            names=_names(arguments) or None,
+            dict.fromkeys(arguments.files),
+            names=names,
             points=points,
             progress=lambda done, total, label: reporter(done, total, "read profiles"),
         )
         for note in reading.notes:
             reporter.line(f"note: {note}")
         for item in reading.set_aside:
-            print(f"set aside: {item.file}: {item.reason}", file=sys.stderr)
+            _complain(f"set aside: {item.file}: {item.reason}")
         if reading.profiles is None:
-            print("bendcast: nothing usable among the files given", file=sys.stderr)
+            _complain("bendcast: nothing usable among the files given")
             return EXIT_NOTHING_USABLE
-        products = chart_files(reading.profiles, settings, Path(arguments.output), reporter)
-    for path in products:
-        print(path)
+        profiles = _of_stations(reading.profiles, arguments.station)
+        products = chart_files(profiles, settings, Path(arguments.output), reporter)
+    _report("\n".join(str(path) for path in products))
     return EXIT_SOME_SET_ASIDE if reading.set_aside else 0
+
+
+def _of_stations(profiles: Dataset, wanted: list[str]) -> Dataset:
+    """Profiles of the stations asked for; few enough for a chart each."""
+    from forecast.errors import SettingsError, printable
+
+    stations = profiles["station"].values.astype(str)
+    known = list(dict.fromkeys(stations))
+    shown = ", ".join(printable(name, 60) for name in known[:_MOST_CHARTS])
+    more = f" and {len(known) - _MOST_CHARTS} more" if len(known) > _MOST_CHARTS else ""
+    missing = [name for name in wanted if name not in known]
+    if missing:
+        raise SettingsError(
+            "--station", [f"found {name!r}; the files hold {shown}{more}" for name in missing]
+        )
+    if not wanted and more:
+        raise SettingsError(
+            "command line",
+            [
+                f"the files hold {len(known)} stations or columns; at most {_MOST_CHARTS} are "
+                "charted at once: choose with --station, or with --point where to take columns"
+            ],
+        )
+    return profiles.isel(profile=[name in wanted for name in stations]) if wanted else profiles
 
 
 def _point(text: str) -> tuple[float, float]:

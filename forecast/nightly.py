@@ -2,6 +2,11 @@
 
 Settings → inputs → profiles → outlook → products. A bad input is set aside with its reason and
 the rest goes on. How products are put in place is told in `forecast.products`.
+
+Nothing of an outlook hangs on when it is made. A second run on the same inputs gives the same bytes
+but for: ``started``, ``seconds`` and ``products_made`` in ``run.json`` (and the checksums of the
+two files that follow), ``history`` and ``date_created`` in ``outlook.nc``, and "made at" on the
+page. ``SOURCE_DATE_EPOCH`` fixes all but ``seconds``.
 """
 
 from __future__ import annotations
@@ -20,12 +25,23 @@ from typing import TYPE_CHECKING, Any
 
 from forecast import __version__
 from forecast.errors import BendcastError, printable
-from forecast.inputs import InputFile, find_inputs, fingerprint, join_profiles, match_to_site
+from forecast.inputs import (
+    InputFile,
+    Stray,
+    find_inputs,
+    fingerprint,
+    join_profiles,
+    reading_groups,
+    share_out,
+    unclaimed,
+)
 from forecast.products import (
     RECORD,
     Progress,
+    earlier_record,
     make_charts,
     make_products,
+    product_names,
     publish,
     staging_folder,
 )
@@ -33,7 +49,7 @@ from forecast.products import (
 if TYPE_CHECKING:
     import xarray as xr
 
-    from forecast.settings import Settings, Site
+    from forecast.settings import Settings
 
 __all__ = [
     "EXIT_ALL_DONE",
@@ -55,6 +71,12 @@ EXIT_OUTPUT_FAILED = 6
 
 #: Steps of a run, in order.
 STEPS = ("find inputs", "read profiles", "outlook", "products", "publish, the page last")
+
+_OUTCOMES = {
+    EXIT_ALL_DONE: "all done",
+    EXIT_SOME_SET_ASIDE: "done, some inputs set aside",
+    EXIT_NOTHING_USABLE: "nothing usable, earlier products left as they were",
+}
 
 _PACKAGES = ("numpy", "scipy", "numba", "xarray", "netCDF4", "matplotlib", "pyproj", "jinja2")
 
@@ -91,6 +113,7 @@ class RunResult:
 class _Record:
     """What run.json tells, gathered along the way."""
 
+    started: str
     inputs: list[dict[str, Any]] = field(default_factory=list)
     set_aside: list[dict[str, str]] = field(default_factory=list)
     warnings: list[str] = field(default_factory=list)
@@ -119,8 +142,9 @@ def plan_run(settings: Settings, output: Path | None = None) -> Plan:
     Plan
         Inputs in reading order, and warnings about patterns without files.
     """
-    inputs, warnings = find_inputs(settings)
-    return Plan(settings, inputs, warnings, (output or settings.output).resolve())
+    folder = (output or settings.output).resolve()
+    inputs, warnings = find_inputs(settings, folder, product_names(folder))
+    return Plan(settings, inputs, warnings, folder)
 
 
 def run_nightly(plan: Plan, progress: Progress | None = None) -> RunResult:
@@ -173,28 +197,29 @@ def _writing(output: Path) -> Iterator[None]:
 def _run(plan: Plan, tell: Progress) -> RunResult:
     from forecast.outlook import find_windows, make_outlook
 
-    record = _Record(warnings=list(plan.warnings))
+    record = _Record(_stamp(), warnings=list(plan.warnings))
     settings = plan.settings
     with record.timed("read profiles"):
         profiles = _read(plan, record, tell)
     result = RunResult(EXIT_NOTHING_USABLE, plan.output)
     result.set_aside, result.warnings = record.set_aside, record.warnings
     if profiles is None:
-        _write_record(plan, record, plan.output, {})
+        _write_record(plan, record, plan.output, result.exit_code, earlier_record(plan.output))
         return result
     with record.timed("outlook"):
         outlook = make_outlook(profiles, settings, tell)
         result.windows = find_windows(outlook, settings)
-    with staging_folder(plan.output) as staging:
+    result.profiles = int(profiles.sizes["profile"])
+    result.exit_code = EXIT_SOME_SET_ASIDE if record.set_aside else EXIT_ALL_DONE
+    with staging_folder(plan.output, alone=True) as staging:
         with record.timed("products"):
             products = make_products(
                 outlook, result.windows, settings, staging, set_aside=record.set_aside,
-                warnings=record.warnings, stamp=_stamp(), tell=tell,
+                warnings=record.warnings, stamp=record.started, tell=tell,
             )  # fmt: skip
-        _write_record(plan, record, staging, products)
+        made = {"products": products, "products_made": record.started}
+        _write_record(plan, record, staging, result.exit_code, made)
         result.products = [path.name for path in publish(staging, plan.output)]
-    result.profiles = int(profiles.sizes["profile"])
-    result.exit_code = EXIT_SOME_SET_ASIDE if record.set_aside else EXIT_ALL_DONE
     return result
 
 
@@ -202,58 +227,75 @@ def _read(plan: Plan, record: _Record, tell: Progress) -> xr.Dataset | None:
     """Profiles of every site, matched to it; None if nothing is usable."""
     from forecast.ingest import read_files
 
+    readable = _fingerprints(plan, record)
+    groups = reading_groups(
+        [item for item in plan.inputs if item.path in readable], plan.settings.sites
+    )
+    total = sum(len(paths) for _, paths in groups)
     parts: list[xr.Dataset] = []
+    strays = []
     done = 0
-    for site in plan.settings.sites:
-        paths = [item.path for item in plan.inputs if item.site == site.name]
-        readable = _fingerprints(plan, record, site, paths)
-        if not readable:
-            continue
-        offset = done
+    for sites, paths in groups:
+        label = printable(", ".join(site.name for site in sites))
 
-        def step(count: int, total: int, label: str, offset: int = offset) -> None:
-            tell(offset + count, len(plan.inputs), "read profiles")
+        def step(count: int, _: int, __: str, offset: int = done) -> None:
+            tell(offset + count, total, "read profiles")
 
         reading = read_files(
-            readable,
+            paths,
             names=plan.settings.names or None,
-            points=[(site.name, site.latitude, site.longitude)],
-            method=site.point_method,
+            points=[(site.name, site.latitude, site.longitude) for site in sites],
+            method=sites[0].point_method,
             progress=step,
         )
         done += len(paths)
         for item in reading.set_aside:
-            record.set_aside.append(
-                {"site": site.name, "file": printable(item.file), "reason": printable(item.reason)}
-            )
-        record.warnings += [f"site {site.name}: {printable(note)}" for note in reading.notes]
-        if reading.profiles is None:
-            continue
-        near, dropped = match_to_site(reading.profiles, site)
-        for file, reason in dropped:
-            record.set_aside.append(
-                {"site": site.name, "file": printable(file), "reason": printable(reason)}
-            )
-        if near.sizes["profile"]:
-            parts.append(near)
-        else:
-            record.warnings.append(f"site {site.name}: no usable profile")
+            record.set_aside.append({"site": label, "file": item.file, "reason": item.reason})
+        noun = "site" if len(sites) == 1 else "sites"
+        record.warnings += [f"{noun} {label}: {printable(note)}" for note in reading.notes]
+        if reading.profiles is not None:
+            served, left = share_out(reading.profiles, sites)
+            parts += served
+            strays += left
+    _settle(plan, record, parts, strays)
     return join_profiles(parts) if parts else None
 
 
-def _fingerprints(plan: Plan, record: _Record, site: Site, paths: list[Path]) -> list[Path]:
+def _settle(plan: Plan, record: _Record, parts: list[xr.Dataset], strays: list[Stray]) -> None:
+    """Record what was read but serves no site, and sites that nothing serves."""
+    used = {file for part in parts for file in part["source_file"].values.astype(str)}
+    refused, notes = unclaimed(strays, used)
+    for stray in refused:
+        record.set_aside.append(
+            {"site": stray.site, "file": printable(stray.file), "reason": printable(stray.reason)}
+        )
+    record.warnings += notes
+    served = {str(part["site"].values[0]) for part in parts}
+    record.warnings += [
+        f"site {site.name}: no usable profile"
+        for site in plan.settings.sites
+        if site.name not in served
+    ]
+
+
+def _fingerprints(plan: Plan, record: _Record) -> set[Path]:
     """Note size and sha256 of each input; one that cannot be opened is set aside here."""
-    readable = []
-    for path in paths:
-        name = printable(os.path.relpath(path, plan.settings.base))
+    sites: dict[Path, list[str]] = {}
+    for item in plan.inputs:
+        sites.setdefault(item.path, []).append(item.site)
+    readable = set()
+    for path, names in sites.items():
+        file = printable(os.path.relpath(path, plan.settings.base))
         try:
             size, digest = fingerprint(path)
         except OSError as error:
             reason = f"cannot be read: {error.strerror}"
-            record.set_aside.append({"site": site.name, "file": name, "reason": reason})
+            record.set_aside.append(
+                {"site": ", ".join(names), "file": printable(path.name), "reason": reason}
+            )
             continue
-        record.inputs.append({"site": site.name, "file": name, "bytes": size, "sha256": digest})
-        readable.append(path)
+        record.inputs.append({"sites": names, "file": file, "bytes": size, "sha256": digest})
+        readable.add(path)
     return readable
 
 
@@ -301,12 +343,14 @@ def chart_files(
 
 
 def _write_record(
-    plan: Plan, record: _Record, folder: Path, products: dict[str, dict[str, Any]]
+    plan: Plan, record: _Record, folder: Path, exit_code: int, made: dict[str, Any]
 ) -> None:
     settings = plan.settings
     body = {
-        "started": _stamp(),
+        "started": record.started,
         "seconds": {name: round(value, 3) for name, value in record.seconds.items()},
+        "outcome": _OUTCOMES[exit_code],
+        "exit_code": exit_code,
         "bendcast": __version__,
         "python": platform.python_version(),
         "packages": {name: _version(name) for name in _PACKAGES},
@@ -320,7 +364,7 @@ def _write_record(
         "inputs": record.inputs,
         "set_aside": record.set_aside,
         "warnings": record.warnings,
-        "products": products,
+        **made,
     }
     from forecast.output.files import write_text_atomic
 
@@ -336,7 +380,9 @@ def _version(package: str) -> str:
 
 
 def _stamp() -> str:
-    """Time of the run, UTC; SOURCE_DATE_EPOCH fixes it for reproducible builds."""
+    """Time now, UTC; SOURCE_DATE_EPOCH, where it is a time, stands for it."""
+    now = datetime.now(UTC)
     epoch = os.environ.get("SOURCE_DATE_EPOCH", "")
-    now = datetime.fromtimestamp(int(epoch), UTC) if epoch.isdigit() else datetime.now(UTC)
+    if epoch.isascii() and epoch.isdigit() and len(epoch) <= 11:
+        now = datetime.fromtimestamp(int(epoch), UTC)
     return now.strftime("%Y-%m-%dT%H:%M:%SZ")

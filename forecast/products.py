@@ -23,7 +23,14 @@ if TYPE_CHECKING:
 
     from forecast.settings import Settings, Site
 
-__all__ = ["make_charts", "make_products", "publish", "staging_folder"]
+__all__ = [
+    "earlier_record",
+    "make_charts",
+    "make_products",
+    "product_names",
+    "publish",
+    "staging_folder",
+]
 
 PAGE = "index.html"
 RECORD = "run.json"
@@ -33,10 +40,22 @@ Progress = Callable[[int, int, str], None]
 
 
 @contextmanager
-def staging_folder(output: Path) -> Iterator[Path]:
-    """Make a folder inside `output` for unfinished products; gone at the end, whatever happens."""
+def staging_folder(output: Path, *, alone: bool = False) -> Iterator[Path]:
+    """Make a folder inside `output` for unfinished products; gone at the end, whatever happens.
+
+    Parameters
+    ----------
+    output : Path
+        Folder of the products; made if need be.
+    alone : bool
+        The caller holds the lock of the folder: what a killed run left behind is cleared away.
+    """
     output.mkdir(parents=True, exist_ok=True)
-    staging = Path(tempfile.mkdtemp(prefix=".staging-", dir=output))
+    prefix = ".staging-" if alone else ".unfinished-"
+    if alone:
+        for left in output.glob(f"{prefix}*"):
+            shutil.rmtree(left, ignore_errors=True)
+    staging = Path(tempfile.mkdtemp(prefix=prefix, dir=output))
     try:
         yield staging
     finally:
@@ -158,19 +177,36 @@ def publish(staging: Path, output: Path) -> list[Path]:
         Files put in place, in order.
     """
     names = sorted(p.name for p in staging.iterdir())
-    stale = _earlier_products(output) - set(names)
     names.sort(key=lambda name: (name == PAGE, name == RECORD, name))
+    stale = set(earlier_record(output)["products"]) - set(names)
     for name in names:
+        if name == RECORD:
+            # Before the record that knows them goes; the old page carries its charts itself.
+            for old in stale:
+                (output / old).unlink(missing_ok=True)
         os.replace(staging / name, output / name)
-    for name in stale:
-        (output / name).unlink(missing_ok=True)
     return [output / name for name in names]
 
 
-def _earlier_products(output: Path) -> set[str]:
-    """Products that the last run.json names; only plain file names in the folder itself."""
+def earlier_record(output: Path) -> dict[str, Any]:
+    """What the last run.json says of the products that lie there.
+
+    Returns
+    -------
+    dict
+        ``products`` by file name, only plain names in the folder itself, and ``products_made``;
+        both empty if there is no record that can be read.
+    """
     try:
-        listed = json.loads((output / RECORD).read_text(encoding="utf-8"))["products"]
-    except (OSError, ValueError, KeyError, TypeError):
-        return set()
-    return {str(n) for n in listed if Path(str(n)).name == str(n) and not str(n).startswith(".")}
+        record = json.loads((output / RECORD).read_text(encoding="utf-8"))
+        listed, made = dict(record["products"]), str(record.get("products_made", ""))
+    except (OSError, ValueError, KeyError, TypeError, RecursionError):
+        return {"products": {}, "products_made": ""}
+    plain = {n: v for n, v in listed.items() if Path(n).name == n and not n.startswith(".")}
+    return {"products": plain, "products_made": made}
+
+
+def product_names(output: Path) -> set[str]:
+    """Names of files in a folder that runs write there, so that none is taken for an input."""
+    fixed = {PAGE, RECORD, "outlook.nc", "windows.csv", "windows.json"}
+    return fixed | set(earlier_record(output)["products"])

@@ -77,5 +77,9 @@ class Reporter:
             return
         if self._bar is not None:
             self._bar.console.print(text, markup=False, highlight=False, soft_wrap=True)
-        else:
+            return
+        try:
             print(text, file=sys.stderr, flush=True)
+        except OSError:
+            # Who reads the log has gone; the run goes on without telling.
+            self.quiet = True

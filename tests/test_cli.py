@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import subprocess
 import sys
 from pathlib import Path
@@ -146,14 +147,81 @@ def test_a_defect_is_told_without_traceback_unless_asked(monkeypatch, capsys, tm
     error = capsys.readouterr().err
     assert "unexpected KeyError" in error
     assert "Traceback" not in error
-    with pytest.raises(KeyError):
-        main(["check", "--debug", str(tmp_path / "s.toml")])
+    # The exit code is the same with --debug: a scheduler must not be misled by it.
+    assert main(["check", "--debug", str(tmp_path / "s.toml")]) == 1
+    assert "Traceback" in capsys.readouterr().err
+    monkeypatch.undo()
+    (tmp_path / "s.toml").write_text("")
+    assert main(["check", "--debug", str(tmp_path / "s.toml")]) == 5
+
+
+def in_shell(command):
+    script = command.replace("bendcast", f"{sys.executable} -m forecast")
+    return subprocess.run(
+        ["bash", "-c", script], capture_output=True, text=True, check=False, timeout=120
+    )
 
 
 def test_a_closed_pipe_is_no_error():
-    command = f"{sys.executable} -m forecast check {SAMPLES / 'outlook.toml'} | head -c 1"
-    done = subprocess.run(
-        ["bash", "-c", f"set -o pipefail; {command}"], capture_output=True, text=True, check=False
-    )
+    done = in_shell(f"set -o pipefail; bendcast check {SAMPLES / 'outlook.toml'} | head -c 1")
     assert "Traceback" not in done.stderr
     assert "BrokenPipe" not in done.stderr
+
+
+def test_a_reader_that_goes_away_does_not_stop_the_chart_nor_hide_its_exit_code(tmp_path):
+    ascent = sorted((SAMPLES / "ascents").glob("*.nc"))[0]
+    (tmp_path / "empty.nc").write_bytes(b"")
+    done = in_shell(
+        f"bendcast chart --members 8 {tmp_path / 'empty.nc'} {ascent} -o {tmp_path / 'out'} 2>&1 "
+        "| true; exit ${PIPESTATUS[0]}"
+    )
+    assert done.returncode == 3
+    assert (tmp_path / "out" / "outlook.nc").is_file()
+
+
+def test_closed_standard_streams_are_no_error():
+    done = in_shell(f"bendcast check {SAMPLES / 'outlook.toml'} >&- 2>&-")
+    assert done.returncode == 0
+
+
+def test_a_file_name_that_no_encoding_can_print_is_escaped(tmp_path):
+    (tmp_path / "s.toml").write_text(GOOD)
+    with open(os.fsencode(tmp_path) + b"/sonde\xff.nc", "wb"):
+        pass
+    done = in_shell(f"PYTHONIOENCODING=ascii bendcast nightly --dry-run {tmp_path / 's.toml'}")
+    assert done.returncode == 0, done.stderr
+    assert "sonde\\udcff.nc" in done.stdout
+
+
+def test_a_wrong_mapping_is_told_as_such(tmp_path, capsys):
+    ascent = sorted((SAMPLES / "ascents").glob("*.nc"))[0]
+    wrong = ["--name", "air_temprature=T", "--name", "T", "--name", "air_pressure=p [hPa"]
+    for command in ("inspect", "chart"):
+        assert main([command, str(ascent), *wrong]) == 5
+        error = capsys.readouterr().err
+        assert "3 faults" in error
+        assert "did you mean air_temperature" in error
+
+
+def test_a_file_given_twice_is_read_once(tmp_path):
+    ascent = str(sorted((SAMPLES / "ascents").glob("*.nc"))[0])
+    assert main(["chart", ascent, ascent, "-o", str(tmp_path), "--members", "8", "-q"]) == 0
+
+
+def test_charts_of_one_call_are_bounded_and_chosen(tmp_path, monkeypatch, capsys):
+    # The sample forecast is a grid of nine columns; without a place each is a station of its own.
+    model = str(sorted((SAMPLES / "model").glob("*.nc"))[0])
+    monkeypatch.setattr("forecast.cli._MOST_CHARTS", 8)
+    assert main(["chart", model, "-o", str(tmp_path / "a"), "-q"]) == 5
+    error = capsys.readouterr().err
+    assert "9 stations or columns" in error
+    assert "--point" in error
+    assert not (tmp_path / "a").exists()
+    assert main(["chart", model, "-o", str(tmp_path / "a"), "-q", "--station", "Atlantis"]) == 5
+    assert "found 'Atlantis'; the files hold lat 46.25 lon -27.65," in capsys.readouterr().err
+    chosen = ["--station", "lat 46.50 lon -27.90", "--members", "8"]
+    assert main(["chart", model, "-o", str(tmp_path / "b"), "-q", *chosen]) == 0
+    assert len(list((tmp_path / "b").glob("*.png"))) == 1
+    at = ["--point", "46.5,-27.9", "--members", "8"]
+    assert main(["chart", model, "-o", str(tmp_path / "c"), "-q", *at]) == 0
+    assert len(list((tmp_path / "c").glob("*.png"))) == 1

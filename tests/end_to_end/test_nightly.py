@@ -6,8 +6,10 @@ import hashlib
 import json
 import os
 import re
+import signal
 import subprocess
 import sys
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -16,7 +18,7 @@ import xarray as xr
 from forecast.cli import main
 from forecast.nightly import plan_run, run_nightly
 from forecast.settings import load_settings
-from tests.end_to_end.build import lay_out
+from tests.end_to_end.build import SETTINGS, lay_out, write_ascent
 
 PRODUCTS = {
     "cape.png", "cape.svg", "index.html", "outlook.nc", "run.json", "windows.csv", "windows.json",
@@ -68,6 +70,7 @@ def test_the_record_is_true(done):
     assert record["settings"]["sha256"] == hashlib.sha256(settings.read_bytes()).hexdigest()
     assert record["started"] == "2030-03-17T17:46:40Z"
     assert record["set_aside"] == []
+    assert (record["exit_code"], record["outcome"]) == (0, "all done")
 
 
 def test_page_tables_and_netcdf_agree(done):
@@ -103,7 +106,7 @@ def test_a_second_run_gives_the_same_bytes_but_for_the_stamps(done):
     assert stamp.sub(b"", after["index.html"]) == stamp.sub(b"", before["index.html"])
     old, new = (json.loads(files["run.json"]) for files in (before, after))
     for record in (old, new):
-        del record["started"], record["seconds"]
+        del record["started"], record["seconds"], record["products_made"]
         for name in ("index.html", "outlook.nc"):
             del record["products"][name]["sha256"]
     assert old == new
@@ -159,6 +162,30 @@ def test_an_interrupt_leaves_the_old_products(ready, monkeypatch):
     assert contents(out) == before
 
 
+def test_a_stop_signal_leaves_the_old_products(ready, monkeypatch):
+    out = ready.parent / "out"
+    before = contents(out)
+    ignored = signal.getsignal(signal.SIGTERM)
+
+    def stop(*_, **__):
+        os.kill(os.getpid(), signal.SIGTERM)
+
+    monkeypatch.setattr("forecast.output.tables.write_windows_json", stop)
+    with pytest.raises(SystemExit) as caught:
+        main(["nightly", str(ready), "-q"])
+    assert caught.value.code == 128 + signal.SIGTERM
+    assert contents(out) == before
+    assert signal.getsignal(signal.SIGTERM) == ignored
+
+
+def test_what_a_killed_run_left_behind_is_cleared_away(ready):
+    out = ready.parent / "out"
+    (out / ".staging-dead").mkdir()
+    (out / ".staging-dead" / "index.html").write_text("half")
+    assert main(["nightly", str(ready), "-q"]) == 0
+    assert not list(out.glob(".staging-*"))
+
+
 def test_two_runs_do_not_collide(ready, capsys):
     from filelock import FileLock
 
@@ -189,6 +216,62 @@ def test_nothing_usable_keeps_the_old_products_and_says_so(ready, capsys):
     record = json.loads(after["run.json"])
     assert len(record["set_aside"]) == 2
     assert "nothing usable" in capsys.readouterr().err
+
+
+def test_a_night_without_inputs_does_not_make_the_next_forget_old_charts(ready):
+    out, inputs = ready.parent / "out", ready.parent / "in"
+    inputs.rename(ready.parent / "away")
+    assert main(["nightly", str(ready), "-q"]) == 4
+    record = json.loads((out / "run.json").read_text())
+    assert record["exit_code"] == 4
+    for name, item in record["products"].items():  # it tells what lies there
+        assert hashlib.sha256((out / name).read_bytes()).hexdigest() == item["sha256"]
+    (ready.parent / "away").rename(inputs)
+    ready.write_text(ready.read_text().replace('"Cape"', '"Head"'))
+    assert main(["nightly", str(ready), "-q"]) == 0
+    assert "cape.png" not in products(out)
+
+
+def test_products_are_never_taken_for_inputs(tmp_path):
+    # The pattern finds out/outlook.nc of the run before.
+    settings = lay_out(tmp_path, slice(32, 34))
+    settings.write_text(settings.read_text().replace("in/*.nc", "**/*.nc"))
+    for _ in range(2):
+        assert main(["nightly", str(settings), "-q"]) == 0
+    record = json.loads((tmp_path / "out" / "run.json").read_text())
+    assert [Path(item["file"]).parent.name for item in record["inputs"]] == ["in", "in"]
+
+
+def test_one_time_stamp_for_the_whole_run(ready):
+    out = ready.parent / "out"
+    started = json.loads((out / "run.json").read_text())["started"]
+    with xr.open_dataset(out / "outlook.nc") as outlook:
+        assert outlook.attrs["date_created"] == started
+        assert outlook.attrs["history"].startswith(started)
+    assert started in (out / "index.html").read_text()
+
+
+def test_sites_that_share_a_pattern_share_the_files(tmp_path):
+    # Six ascents near Cape and one near Far, all found by both sites' patterns; one near neither.
+    settings = lay_out(tmp_path)
+    far = SETTINGS.split("[[site]]")[1].split("[[sightline]]")[0]
+    far = far.replace('"Cape"', '"Far"').replace("46.52", "50.0").replace("-27.90", "-20.0")
+    settings.write_text(SETTINGS + "\n[[site]]" + far)
+    nowhere = np.full(120, 10.0)
+    write_ascent(tmp_path / "in" / "far.nc", 3, lat=nowhere + 40.0, lon=nowhere - 30.0)
+    write_ascent(tmp_path / "in" / "lost.nc", 4, lat=nowhere, lon=nowhere)
+    (tmp_path / "in" / "empty.nc").write_bytes(b"")
+    assert main(["nightly", str(settings), "-q"]) == 3
+    record = json.loads((tmp_path / "out" / "run.json").read_text())
+    assert len(record["inputs"]) == 9
+    assert all(item["sites"] == ["Cape", "Far"] for item in record["inputs"])
+    reasons = {item["file"]: item["reason"] for item in record["set_aside"]}
+    assert len(record["set_aside"]) == 2
+    assert set(reasons) == {"lost.nc", "empty.nc"}
+    assert "km from site Far" in reasons["lost.nc"]  # the nearer of the two
+    with xr.open_dataset(tmp_path / "out" / "outlook.nc") as outlook:
+        sites = list(outlook["site"].values)
+    assert (sites.count("Cape"), sites.count("Far")) == (6, 1)
 
 
 def test_a_sounding_from_elsewhere_is_set_aside_with_its_distance(tmp_path):
