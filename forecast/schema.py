@@ -215,6 +215,26 @@ _ROWS = [
         "rad",
         SIGHT,
     ),
+    Variable("upright_images", "directions in which that part appears upright", "1", SIGHT),
+    Variable("inverted_images", "directions in which that part appears inverted", "1", SIGHT),
+    Variable(
+        "horizon_elevation",
+        "elevation of the highest ray that meets the surface, less than 0 by the dip",
+        "rad",
+        SIGHT,
+    ),
+    Variable(
+        "visible_bottom",
+        "lower ends of the visible heights at the target's distance",
+        "m",
+        ("profile", "sightline", "interval"),
+    ),
+    Variable(
+        "visible_top",
+        "upper ends of the visible heights at the target's distance",
+        "m",
+        ("profile", "sightline", "interval"),
+    ),
     Variable(
         "hidden_height_straight", "hidden height with straight rays (no air)", "m", ("sightline",)
     ),

@@ -5,8 +5,8 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
-from numba import njit, prange
 
+from forecast.physics.compiled import njit, prange
 from forecast.physics.ducts import DuctTable
 
 __all__ = ["duct_cover", "duct_under"]

@@ -59,7 +59,15 @@ def trace_paths(
     codes = np.full(shape, -1, dtype=np.int8)
     floats = {
         name: np.full(shape, np.nan)
-        for name in ("hidden_height", "visible_extent", "apparent_elevation")
+        for name in (
+            "hidden_height",
+            "visible_extent",
+            "apparent_elevation",
+            "horizon_elevation",
+        )
+    }
+    images = {
+        name: np.zeros(shape, dtype=np.int16) for name in ("upright_images", "inverted_images")
     }
     refractivity: dict[tuple[str, str, float], np.ndarray] = {}
     for i, line in enumerate(lines):
@@ -78,10 +86,11 @@ def trace_paths(
             line.target_base_height,
         )  # fmt: skip
         codes[own, i] = table.state[:, 0]
-        for name, values in floats.items():
+        for name, values in (*floats.items(), *images.items()):
             values[own, i] = getattr(table, name)[:, 0]
     both = ("profile", "sightline")
-    return {"sightline_state": (both, codes), **{n: (both, a) for n, a in floats.items()}}
+    named = {"sightline_state": codes, **floats, **images}
+    return {name: (both, values) for name, values in named.items()}
 
 
 def _refractivity(air: dict[str, np.ndarray], line: Sightline) -> np.ndarray:

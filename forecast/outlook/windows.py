@@ -192,6 +192,10 @@ def _sightline_reason(outlook: xr.Dataset, row: int, item: int) -> str:
     elif top > standard:
         parts.append("It is open in standard air too.")
     if str(outlook["sightline_wave"].values[item]) == "optical":
+        inverted = int(outlook["inverted_images"].values[row, item])
+        if inverted:
+            images = inverted + int(outlook["upright_images"].values[row, item])
+            parts.append(f"It appears in {images} images, {inverted} of them upside down.")
         parts.append(_warming(outlook, row))
     parts.append(_water(outlook, row))
     parts.append(_lowest_layer(outlook, row))

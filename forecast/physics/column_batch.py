@@ -12,8 +12,8 @@ from __future__ import annotations
 from typing import Any, NamedTuple
 
 import numpy as np
-from numba import njit, prange
 
+from forecast.physics.compiled import njit, prange
 from forecast.physics.ducts import DuctTable, count_trapping_layers, duct_table
 from forecast.physics.refractive_index import refractivity_from_state
 

@@ -167,8 +167,10 @@ def trace_sightlines(
     Returns
     -------
     xarray.Dataset
-        ``sightline_state``, ``hidden_height``, ``visible_extent``, ``apparent_elevation`` on
-        (profile, sightline), and for comparison on (sightline): hidden height and elevation with
+        ``sightline_state``, ``hidden_height``, ``visible_extent``, ``apparent_elevation``, images
+        upright and inverted, ``horizon_elevation`` on (profile, sightline); the visible heights
+        as intervals ``visible_bottom`` to ``visible_top`` with a third dimension; for comparison
+        on (sightline): hidden height and elevation with
         straight rays and in the standard atmosphere.
 
     Raises
@@ -201,6 +203,11 @@ def trace_sightlines(
         "hidden_height": (both, table.hidden_height),
         "visible_extent": (both, table.visible_extent),
         "apparent_elevation": (both, table.apparent_elevation),
+        "upright_images": (both, table.upright_images),
+        "inverted_images": (both, table.inverted_images),
+        "horizon_elevation": (both, table.horizon_elevation),
+        "visible_bottom": ((*both, "interval"), table.visible_bottom),
+        "visible_top": ((*both, "interval"), table.visible_top),
         "observer_height": (line, observer),
         "target_height": (line, target),
         "target_base_height": (line, base),

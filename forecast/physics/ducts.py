@@ -24,9 +24,13 @@ from __future__ import annotations
 from typing import Any, NamedTuple
 
 import numpy as np
-from numba import njit, prange
+
+from forecast.physics.compiled import njit, prange
 
 __all__ = ["DuctTable", "count_trapping_layers", "duct_table", "find_ducts"]
+
+#: Columns worked on together: their levels stay in the processor's cache.
+BLOCK = 64
 
 _SURFACE, _ELEVATED_SURFACE, _ELEVATED = 1, 2, 3
 _FIELDS = 8  # base, top, strength, trapping base, height of maximum, angle, wavelength, enclosed
@@ -116,19 +120,21 @@ def duct_table(z: np.ndarray, m: np.ndarray, count: np.ndarray) -> DuctTable:
 
 
 @njit(cache=True, nogil=True)
-def compress_levels(z, m, out_z, out_m):  # pragma: no cover - compiled
-    """Copy the usable levels of one column (finite, rising) and return how many there are."""
-    n = 0
-    last = -np.inf
-    for i in range(z.shape[0]):
-        zi = np.float64(z[i])
-        mi = np.float64(m[i])
-        if zi > last and np.isfinite(zi) and np.isfinite(mi):
-            out_z[n] = zi
-            out_m[n] = mi
-            last = zi
-            n += 1
-    return n
+def _compress_block(z, m, first, width, tile_z, tile_m, used):  # pragma: no cover - compiled
+    """Gather the usable levels (finite, rising) of a block of columns into rows of the tiles.
+
+    Level by level, so that a grid stored (level, column) is read along its lines.
+    """
+    used[:] = 0
+    for i in range(z.shape[1]):
+        for j in range(width):
+            zi = np.float64(z[first + j, i])
+            mi = np.float64(m[first + j, i])
+            n = used[j]
+            if np.isfinite(zi) and np.isfinite(mi) and (n == 0 or zi > tile_z[j, n - 1]):
+                tile_z[j, n] = zi
+                tile_m[j, n] = mi
+                used[j] = n + 1
 
 
 @njit(cache=True, nogil=True)
@@ -215,20 +221,30 @@ def _fill_column(z, m, n, kind, table, column):  # pragma: no cover - compiled
 def _count_all(z, m):  # pragma: no cover - compiled
     columns, levels = z.shape
     count = np.zeros(columns, dtype=np.int32)
-    for c in prange(columns):
-        zc = np.empty(levels)
-        mc = np.empty(levels)
-        n = compress_levels(z[c], m[c], zc, mc)
-        count[c] = count_trapping_layers(mc, n)
+    for b in prange((columns + BLOCK - 1) // BLOCK):
+        first = b * BLOCK
+        width = min(BLOCK, columns - first)
+        tile_z = np.empty((BLOCK, levels))
+        tile_m = np.empty((BLOCK, levels))
+        used = np.empty(BLOCK, dtype=np.int64)
+        _compress_block(z, m, first, width, tile_z, tile_m, used)
+        for j in range(width):
+            count[first + j] = count_trapping_layers(tile_m[j], used[j])
     return count
 
 
 @njit(cache=True, nogil=True, parallel=True)
 def _fill_all(z, m, count, kind, table):  # pragma: no cover - compiled
     columns, levels = z.shape
-    for c in prange(columns):
-        if count[c] > 0:
-            zc = np.empty(levels)
-            mc = np.empty(levels)
-            n = compress_levels(z[c], m[c], zc, mc)
-            _fill_column(zc, mc, n, kind, table, c)
+    for b in prange((columns + BLOCK - 1) // BLOCK):
+        first = b * BLOCK
+        width = min(BLOCK, columns - first)
+        if not np.any(count[first : first + width] > 0):
+            continue
+        tile_z = np.empty((BLOCK, levels))
+        tile_m = np.empty((BLOCK, levels))
+        used = np.empty(BLOCK, dtype=np.int64)
+        _compress_block(z, m, first, width, tile_z, tile_m, used)
+        for j in range(width):
+            if count[first + j] > 0:
+                _fill_column(tile_z[j], tile_m[j], used[j], kind, table, first + j)

@@ -9,8 +9,8 @@ from __future__ import annotations
 from typing import Any, NamedTuple
 
 import numpy as np
-from numba import njit, prange
 
+from forecast.physics.compiled import njit, prange
 from forecast.physics.earth import MEAN_EARTH_RADIUS
 from forecast.physics.refractive_index import refractivity_from_state
 from forecast.physics.stability import psi_heat

@@ -20,8 +20,8 @@ from __future__ import annotations
 from typing import Any, NamedTuple
 
 import numpy as np
-from numba import njit, prange
 
+from forecast.physics.compiled import njit, prange
 from forecast.physics.curvature import STANDARD_GRADIENT
 
 __all__ = ["EXTENSIONS", "Medium", "RayEnds", "build_medium", "trace_rays"]

@@ -9,15 +9,17 @@ from __future__ import annotations
 from typing import Any, NamedTuple
 
 import numpy as np
-from numba import njit, prange
 
+from forecast.physics.compiled import njit, prange
 from forecast.physics.curvature import STANDARD_GRADIENT
 from forecast.physics.earth import MEAN_EARTH_RADIUS
 from forecast.physics.rays import Medium, build_medium, locate
 from forecast.physics.visible_heights import (
     MAX_LIT,
     MAX_SAMPLES,
+    count_images,
     elevation_of,
+    horizon_energy,
     merge_intervals,
     survey_heights,
 )
@@ -27,6 +29,8 @@ __all__ = ["GRAZING_MARGIN", "SightlineTable", "standard_medium", "trace_sightli
 
 #: A target of which less than this (m) shows is grazing, not open; ours, no source.
 GRAZING_MARGIN = 1.0
+
+_INTERVALS = 12  # visible intervals kept per sightline, the lowest ones
 
 _SHUT = SIGHTLINE_STATES["shut"]
 _GRAZING = SIGHTLINE_STATES["grazing"]
@@ -39,13 +43,22 @@ class SightlineTable(NamedTuple):
     ``state``: codes of `forecast.schema.SIGHTLINE_STATES`, −1 without air. ``hidden_height``:
     lowest visible height at the target's distance, m. ``visible_extent``: height of the part of
     the target that shows, m. ``apparent_elevation``: elevation angle of the highest part that
-    shows, rad, NaN if none does.
+    shows, rad, NaN if none does. ``upright_images``, ``inverted_images``: in how many directions
+    that part appears. ``horizon_elevation``: elevation of the highest ray that meets the surface,
+    rad; less than 0 by the dip of the horizon, and 0 or more where a duct holds rays down.
+    ``visible_bottom``, ``visible_top``: the visible heights at the target's distance as a union of
+    intervals, lowest first, m, (column, sightline, interval); the highest may be infinite.
     """
 
     state: np.ndarray
     hidden_height: np.ndarray
     visible_extent: np.ndarray
     apparent_elevation: np.ndarray
+    upright_images: np.ndarray
+    inverted_images: np.ndarray
+    horizon_elevation: np.ndarray
+    visible_bottom: np.ndarray
+    visible_top: np.ndarray
 
 
 def trace_sightlines(
@@ -99,9 +112,22 @@ def trace_sightlines(
         raise ValueError("trace_sightlines: distance must be above 0 and below 2,000 km")
     columns = medium.z.shape[0]
     state = np.full((columns, *shape), -1, dtype=np.int8)
-    floats = np.full((3, columns, *shape), np.nan)
-    _trace_all(*medium, observer, base, top, far, grazing_margin, state, floats)
-    return SightlineTable(state, floats[0], floats[1], floats[2])
+    floats = np.full((4, columns, *shape), np.nan)
+    images = np.zeros((2, columns, *shape), dtype=np.int16)
+    visible = np.full((2, columns, *shape, _INTERVALS), np.nan)
+    _trace_all(*medium, observer, base, top, far, grazing_margin, state, floats, images, visible)
+    width = max(1, int(np.isfinite(visible[0]).sum(axis=-1).max(initial=1)))
+    return SightlineTable(
+        state,
+        floats[0],
+        floats[1],
+        floats[2],
+        images[0],
+        images[1],
+        floats[3],
+        visible[0, ..., :width],
+        visible[1, ..., :width],
+    )
 
 
 def standard_medium(wave: str = "radio", earth_radius: float = MEAN_EARTH_RADIUS) -> Medium:
@@ -149,7 +175,7 @@ def standard_medium(wave: str = "radio", earth_radius: float = MEAN_EARTH_RADIUS
 
 @njit(cache=True, nogil=True, parallel=True, error_model="numpy")
 def _trace_all(
-    z, mu, count, radius, observer, base, top, distance, margin, state, floats
+    z, mu, count, radius, observer, base, top, distance, margin, state, floats, images, visible
 ):  # pragma: no cover
     columns = z.shape[0]
     lines = observer.size
@@ -187,7 +213,13 @@ def _trace_all(
                     above_edge = upper - lit[0, i]
             if lits > 0:
                 floats[0, c, s] = a * np.expm1(lit[0, 0] / a)
+            for i in range(min(lits, _INTERVALS)):
+                visible[0, c, s, i] = a * np.expm1(lit[0, i] / a)
+                visible[1, c, s, i] = a * np.expm1(lit[1, i] / a)
             floats[1, c, s] = extent
+            horizon = horizon_energy(mu[c], layer, start == z[c, layer], mu_start, count[c])
+            angle = np.arcsin(np.sqrt(abs(horizon) / (1.0 + mu_start)))
+            floats[3, c, s] = angle if horizon > 0.0 else -angle
             if np.isnan(highest):
                 state[c, s] = _SHUT
                 continue
@@ -195,6 +227,7 @@ def _trace_all(
                 z[c], mu[c], count[c], layer, start, mu_start, distance[s], highest, sample,
                 branch_of, samples,
             )  # fmt: skip
+            images[0, c, s], images[1, c, s] = count_images(highest, sample, branch_of, samples)
             if z_top == z_base:
                 clear = above_edge >= margin
             else:

@@ -10,7 +10,8 @@ Meteor. 124, 315–333).
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
+
+from forecast.physics.compiled import njit
 
 __all__ = ["STABLE_FUNCTIONS", "psi_heat", "psi_momentum"]
 

@@ -16,8 +16,8 @@ from __future__ import annotations
 from typing import Any, NamedTuple
 
 import numpy as np
-from numba import njit, prange
 
+from forecast.physics.compiled import njit, prange
 from forecast.physics.moisture import (
     CELSIUS_OFFSET,
     saturation_vapour_pressure,

@@ -15,18 +15,28 @@ ground shows as such.
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 
+from forecast.physics.compiled import njit
 from forecast.physics.rays import advance
 
-__all__ = ["MAX_LIT", "MAX_SAMPLES", "elevation_of", "merge_intervals", "survey_heights"]
+__all__ = [
+    "MAX_LIT",
+    "MAX_SAMPLES",
+    "count_images",
+    "elevation_of",
+    "horizon_energy",
+    "merge_intervals",
+    "survey_heights",
+]
 
 _MAX_CRITICAL = 64  # critical energies per observer; beyond, kinks are thinned, jumps kept first
-MAX_SAMPLES = 4096  # rays kept per sightline for the elevation; two are for those past all cuts
+MAX_SAMPLES = 4096  # rays kept per sightline for the elevation; three are for those past all cuts
 MAX_LIT = 256  # visible intervals before merging
 _OFFSET = 1e-10  # distance of the end samples from a critical energy, relative to its interval
 _SHAPE_ABSOLUTE, _SHAPE_RELATIVE = 2.0, 0.02  # m and share: misfit that calls for finer sampling
 _FINE_STEPS = 10
+_LEVEL = 1e-24  # energy of a level launch, 1e-12 rad
+_SEAM = 1e-5  # m; visible intervals that come this near each other are one
 _HEIGHT_TOLERANCE = 1e-4  # m, for extremes and for the target's elevation
 
 
@@ -178,6 +188,16 @@ def survey_heights(
                     low_lit, high_lit = np.inf, -np.inf
                 low = edges[k]
                 span = edges[k + 1] - low
+                if k == 0:
+                    # Nothing happens at level: both sides start with the same ray.
+                    fa, _, _ = _pass_height(
+                        z, mu, count, layer, start, mu_start, _LEVEL, upward, distance
+                    )
+                    low_lit, high_lit = fa, fa
+                    if samples < MAX_SAMPLES - 3:
+                        sample[0, samples], sample[1, samples] = sign * _LEVEL, fa
+                        branch_of[samples] = branch
+                        samples += 1
                 t_end = 2.0 / np.pi * np.sqrt(_OFFSET)
                 steps = 2
                 ta, fa, ga, turns_a = t_end, 0.0, 0.0, 0
@@ -203,7 +223,7 @@ def survey_heights(
                 steps += min(2 * abs(turns_l - turns_a), 30)
                 low_lit = min(low_lit, fa, fl)
                 high_lit = max(high_lit, fa, fl)
-                if samples < MAX_SAMPLES - 2:
+                if samples < MAX_SAMPLES - 3:
                     sample[0, samples], sample[1, samples] = sign * energy, fa
                     branch_of[samples] = branch
                     samples += 1
@@ -233,13 +253,13 @@ def survey_heights(
                             )  # fmt: skip
                             low_lit = min(low_lit, extreme)
                             high_lit = max(high_lit, extreme)
-                            if samples < MAX_SAMPLES - 2:
+                            if samples < MAX_SAMPLES - 3:
                                 sample[0, samples], sample[1, samples] = sign * at, extreme
                                 branch_of[samples] = branch
                                 samples += 1
                     low_lit = min(low_lit, fb)
                     high_lit = max(high_lit, fb)
-                    if samples < MAX_SAMPLES - 2:
+                    if samples < MAX_SAMPLES - 3:
                         sample[0, samples], sample[1, samples] = sign * energy, fb
                         branch_of[samples] = branch
                         samples += 1
@@ -249,7 +269,7 @@ def survey_heights(
                     lits += 1
                     lowest = min(lowest, max(low_lit, 0.0))
         # Just past the last critical energy: down to the ground, or up and away.
-        energy = limit * (1.0 + _OFFSET) if limit > 0.0 else 1e-24
+        energy = limit * (1.0 + _OFFSET) if limit > 0.0 else _LEVEL
         height, _, _ = _pass_height(z, mu, count, layer, start, mu_start, energy, upward, distance)
         branch += 1
         if height > 0.0 and lits < MAX_LIT:
@@ -261,6 +281,17 @@ def survey_heights(
             sample[0, samples], sample[1, samples] = sign * energy, height
             branch_of[samples] = branch
             samples += 1
+        if not upward:
+            # A near target is also seen straight down its front, as far as the water's edge.
+            while height > 0.0 and energy < 0.5:
+                energy = 4.0 * energy + 1e-8
+                height, _, _ = _pass_height(
+                    z, mu, count, layer, start, mu_start, energy, upward, distance
+                )
+            if samples < MAX_SAMPLES - 1:
+                sample[0, samples], sample[1, samples] = sign * energy, height
+                branch_of[samples] = branch
+                samples += 1
     return lits, samples
 
 
@@ -276,7 +307,7 @@ def merge_intervals(lit, lits):  # pragma: no cover - compiled
         lit[0, j + 1], lit[1, j + 1] = a, b
     n = 0
     for i in range(lits):
-        if n > 0 and lit[0, i] <= lit[1, n - 1]:
+        if n > 0 and lit[0, i] <= lit[1, n - 1] + _SEAM:
             lit[1, n - 1] = max(lit[1, n - 1], lit[1, i])
         else:
             lit[0, n], lit[1, n] = lit[0, i], lit[1, i]
@@ -322,3 +353,45 @@ def elevation_of(
         return np.nan
     angle = np.arcsin(np.sqrt(abs(best) / (1.0 + mu_start)))
     return angle if best > 0.0 else -angle
+
+
+@njit(cache=True, nogil=True)
+def count_images(height, sample, branch_of, samples):  # pragma: no cover - compiled
+    """Count the directions in which `height` appears: upright ones and inverted ones.
+
+    An image is upright where a higher line of sight meets a greater height. Extremes of each
+    branch are among the samples, so that between neighbours the height runs one way.
+    """
+    upright = 0
+    inverted = 0
+    for i in range(samples):
+        ea, fa = sample[0, i], sample[1, i]
+        if i + 1 == samples:
+            # The rays that leave for good rise with their elevation without end.
+            if fa < height:
+                upright += 1
+        elif branch_of[i + 1] == branch_of[i]:
+            eb, fb = sample[0, i + 1], sample[1, i + 1]
+            if (fa - height) * (fb - height) < 0.0 or (fa == height and fb != height):
+                if (fb > fa) == (eb > ea):
+                    upright += 1
+                else:
+                    inverted += 1
+    return upright, inverted
+
+
+@njit(cache=True, nogil=True)
+def horizon_energy(mu, layer, start_on_node, mu_start, count):  # pragma: no cover - compiled
+    """Signed energy of the highest ray that ever meets the surface (negative: below level).
+
+    Rays launched downwards meet it if they have more energy than every node below takes away;
+    those launched upwards if a node above turns them back with more energy than that.
+    """
+    lowest = mu_start
+    for j in range((layer - 1 if start_on_node else layer), -1, -1):
+        lowest = min(lowest, mu[j])
+    least = mu_start
+    for j in range(layer + 1, count):
+        least = min(least, mu[j])
+    below, above = mu_start - lowest, mu_start - least
+    return above if above > below else -below

@@ -338,7 +338,9 @@ def test_many_sightlines_and_columns_at_once_equal_each_alone():
         for s in range(2):
             alone = trace_sightlines(medium, observer[s], top[s], far[s])
             for first, second in zip(together, alone, strict=True):
-                np.testing.assert_array_equal(first[c, s], second[0, 0])
+                # Intervals are padded to the most that any sightline of the batch has.
+                width = np.size(second[0, 0])
+                np.testing.assert_array_equal(np.ravel(first[c, s])[:width], np.ravel(second[0, 0]))
 
 
 def test_columns_without_air_have_no_state():
