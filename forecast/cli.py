@@ -15,10 +15,7 @@ TYPE_CHECKING = False  # what typing defines; importing typing costs a fifth of 
 if TYPE_CHECKING:
     from pathlib import Path
 
-    from xarray import Dataset
-
     from forecast.progress import Reporter
-    from forecast.settings import Settings
 
 __all__ = ["main"]
 
@@ -41,8 +38,6 @@ Not for navigation or safety of life. Never point optics near the Sun.
 EXIT_UNEXPECTED = 1
 EXIT_SETTINGS_WRONG = 5
 EXIT_INTERRUPTED = 130
-
-_MOST_CHARTS = 24  # of one `chart`; a regional grid would make thousands
 
 
 def main(argv: list[str] | None = None) -> int:
@@ -329,16 +324,21 @@ def _check(arguments: argparse.Namespace) -> int:
 def _chart(arguments: argparse.Namespace) -> int:
     from pathlib import Path
 
+    from forecast.charting import ChartRequest, chart_files, check_request, choose_stations
     from forecast.ingest import read_files
-    from forecast.nightly import EXIT_NOTHING_USABLE, EXIT_SOME_SET_ASIDE, chart_files
+    from forecast.nightly import EXIT_NOTHING_USABLE, EXIT_SOME_SET_ASIDE
     from forecast.stopping import stopping_cleanly
 
-    settings = _chart_settings(arguments)
+    settings, points = check_request(
+        ChartRequest(
+            output=Path(arguments.output),
+            timezone=arguments.timezone,
+            top=arguments.top,
+            members=arguments.members,
+            point=arguments.point,
+        )
+    )
     names = _names(arguments) or None
-    points = None
-    if arguments.point:
-        latitude, longitude = _point(arguments.point)
-        points = [(f"{latitude:g}, {longitude:g}", latitude, longitude)]
     with _reporter(arguments) as reporter, stopping_cleanly():
         reading = read_files(
             dict.fromkeys(arguments.files),
@@ -353,74 +353,10 @@ def _chart(arguments: argparse.Namespace) -> int:
         if reading.profiles is None:
             _complain("bendcast: nothing usable among the files given")
             return EXIT_NOTHING_USABLE
-        profiles = _of_stations(reading.profiles, arguments.station)
-        products = chart_files(profiles, settings, Path(arguments.output), reporter)
+        profiles = choose_stations(reading.profiles, arguments.station)
+        products = chart_files(profiles, settings, settings.output, reporter)
     _report("\n".join(str(path) for path in products))
     return EXIT_SOME_SET_ASIDE if reading.set_aside else 0
-
-
-def _of_stations(profiles: Dataset, wanted: list[str]) -> Dataset:
-    """Profiles of the stations asked for; few enough for a chart each."""
-    from forecast.errors import SettingsError, printable
-
-    stations = profiles["station"].values.astype(str)
-    known = list(dict.fromkeys(stations))
-    shown = ", ".join(printable(name, 60) for name in known[:_MOST_CHARTS])
-    more = f" and {len(known) - _MOST_CHARTS} more" if len(known) > _MOST_CHARTS else ""
-    missing = [name for name in wanted if name not in known]
-    if missing:
-        raise SettingsError(
-            "--station", [f"found {name!r}; the files hold {shown}{more}" for name in missing]
-        )
-    if not wanted and more:
-        raise SettingsError(
-            "command line",
-            [
-                f"the files hold {len(known)} stations or columns; at most {_MOST_CHARTS} are "
-                "charted at once: choose with --station, or with --point where to take columns"
-            ],
-        )
-    return profiles.isel(profile=[name in wanted for name in stations]) if wanted else profiles
-
-
-def _point(text: str) -> tuple[float, float]:
-    from forecast.errors import SettingsError
-
-    try:
-        latitude, longitude = (float(part) for part in text.split(","))
-    except ValueError:
-        raise SettingsError("--point", [f"found {text!r}; expected LAT,LON in degrees"]) from None
-    if not (abs(latitude) <= 90.0 and -180.0 <= longitude <= 360.0):
-        raise SettingsError("--point", [f"found {text!r}; expected -90..90, -180..360 degrees"])
-    return latitude, longitude
-
-
-def _chart_settings(arguments: argparse.Namespace) -> Settings:
-    from pathlib import Path
-    from zoneinfo import ZoneInfo
-
-    from forecast.errors import SettingsError
-    from forecast.settings import Settings
-
-    faults = []
-    try:
-        ZoneInfo(arguments.timezone)
-    except (KeyError, ValueError, OSError):
-        faults.append(f"--timezone: found {arguments.timezone!r}; expected an IANA time zone")
-    if not 100.0 <= arguments.top <= 15000.0:
-        faults.append(f"--top: found {arguments.top:g}; expected 100 to 15000 m")
-    if not 8 <= arguments.members <= 4096:
-        faults.append(f"--members: found {arguments.members}; expected 8 to 4096")
-    if faults:
-        raise SettingsError("command line", faults)
-    return Settings(
-        title="Soundings",
-        output=Path(arguments.output),
-        sites=(),
-        members=arguments.members,
-        chart_top=arguments.top,
-        timezone=arguments.timezone,
-    )
 
 
 _COMMANDS = {

@@ -39,7 +39,6 @@ from forecast.products import (
     RECORD,
     Progress,
     earlier_record,
-    make_charts,
     make_products,
     product_names,
     publish,
@@ -59,9 +58,10 @@ __all__ = [
     "OutputError",
     "Plan",
     "RunResult",
-    "chart_files",
     "plan_run",
     "run_nightly",
+    "time_stamp",
+    "writing",
 ]
 
 EXIT_ALL_DONE = 0
@@ -171,7 +171,7 @@ def run_nightly(plan: Plan, progress: Progress | None = None) -> RunResult:
     from filelock import FileLock, Timeout
 
     tell = progress or (lambda done, total, label: None)
-    with _writing(plan.output):
+    with writing(plan.output):
         plan.output.mkdir(parents=True, exist_ok=True)
         try:
             with FileLock(plan.output / ".bendcast.lock", timeout=0):
@@ -183,7 +183,7 @@ def run_nightly(plan: Plan, progress: Progress | None = None) -> RunResult:
 
 
 @contextmanager
-def _writing(output: Path) -> Iterator[None]:
+def writing(output: Path) -> Iterator[None]:
     """Turn a failure to write into one clear error."""
     try:
         yield
@@ -197,7 +197,7 @@ def _writing(output: Path) -> Iterator[None]:
 def _run(plan: Plan, tell: Progress) -> RunResult:
     from forecast.outlook import find_windows, make_outlook
 
-    record = _Record(_stamp(), warnings=list(plan.warnings))
+    record = _Record(time_stamp(), warnings=list(plan.warnings))
     settings = plan.settings
     with record.timed("read profiles"):
         profiles = _read(plan, record, tell)
@@ -299,49 +299,6 @@ def _fingerprints(plan: Plan, record: _Record) -> set[Path]:
     return readable
 
 
-def chart_files(
-    profiles: xr.Dataset, settings: Settings, output: Path, tell: Progress
-) -> list[Path]:
-    """Chart and outlook of some profiles without settings, every station a site of its own.
-
-    Parameters
-    ----------
-    profiles : xarray.Dataset
-        Profiles.
-    settings : forecast.settings.Settings
-        Members, chart top; its sites are ignored.
-    output : Path
-        Folder; ``outlook.nc`` and a PNG and SVG per station go there.
-    tell : callable
-        Progress.
-
-    Returns
-    -------
-    list of Path
-        Files written.
-
-    Raises
-    ------
-    OutputError
-        If the folder cannot be written.
-    """
-    from forecast.outlook import find_windows, make_outlook
-    from forecast.output.netcdf import write_outlook
-    from forecast.settings import Site
-
-    outlook = make_outlook(profiles, settings, tell)
-    windows = find_windows(outlook, settings)
-    sites = []
-    for name in dict.fromkeys(outlook["site"].values.astype(str)):
-        row = int((outlook["site"].values.astype(str) == name).argmax())
-        latitude, longitude = (float(outlook[n].values[row]) for n in ("latitude", "longitude"))
-        sites.append(Site(str(name), latitude, longitude, timezone=settings.timezone))
-    with _writing(output), staging_folder(output) as staging:
-        write_outlook(outlook, staging / "outlook.nc", _stamp())
-        make_charts(outlook, windows, settings, sites, staging, tell)
-        return publish(staging, output)
-
-
 def _write_record(
     plan: Plan, record: _Record, folder: Path, exit_code: int, made: dict[str, Any]
 ) -> None:
@@ -379,7 +336,7 @@ def _version(package: str) -> str:
         return "not installed"
 
 
-def _stamp() -> str:
+def time_stamp() -> str:
     """Time now, UTC; SOURCE_DATE_EPOCH, where it is a time, stands for it."""
     now = datetime.now(UTC)
     epoch = os.environ.get("SOURCE_DATE_EPOCH", "")

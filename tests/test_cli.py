@@ -77,11 +77,12 @@ def test_wrong_settings_are_exit_code_5(tmp_path, capsys):
     (tmp_path / "s.toml").write_text(GOOD.replace("[run]", "[rum]"))
     assert main(["check", str(tmp_path / "s.toml")]) == 5
     assert main(["nightly", str(tmp_path / "s.toml")]) == 5
-    assert main(["chart", "x.nc", "--top", "-4", "--timezone", "Moon"]) == 5
+    assert main(["chart", "x.nc", "--top", "-4", "--timezone", "Moon", "--point", "95,1"]) == 5
     error = capsys.readouterr().err
     assert "did you mean run?" in error
     assert "--top" in error
     assert "--timezone" in error
+    assert "--point: found '95,1'" in error
     assert "Traceback" not in error
 
 
@@ -211,10 +212,10 @@ def test_a_file_given_twice_is_read_once(tmp_path):
 def test_charts_of_one_call_are_bounded_and_chosen(tmp_path, monkeypatch, capsys):
     # The sample forecast is a grid of nine columns; without a place each is a station of its own.
     model = str(sorted((SAMPLES / "model").glob("*.nc"))[0])
-    monkeypatch.setattr("forecast.cli._MOST_CHARTS", 8)
+    monkeypatch.setattr("forecast.charting.MOST_CHARTS", 8)
     assert main(["chart", model, "-o", str(tmp_path / "a"), "-q"]) == 5
     error = capsys.readouterr().err
-    assert "9 stations or columns" in error
+    assert "there are 9 stations or columns" in error
     assert "--point" in error
     assert not (tmp_path / "a").exists()
     assert main(["chart", model, "-o", str(tmp_path / "a"), "-q", "--station", "Atlantis"]) == 5
