@@ -16,7 +16,7 @@ RADIUS = 6371e3
 OBSERVER, TARGET, DISTANCE = 10.0, 60.0, 80e3
 MEMBERS = 48_000
 SIGHTLINES = 20_000
-FAN = 60  # rays of the script's fan
+FAN = 30  # rays of the script's fan
 
 
 def make_members(count: int) -> tuple[np.ndarray, np.ndarray]:
