@@ -137,7 +137,7 @@ def perturb(
     out_rh = np.clip(out_rh, 0.0, layer["largest_relative_humidity"])
     pressure = np.broadcast_to(air_pressure[:, None, :], out_t.shape)
     out_q = specific_humidity_from_relative_humidity(out_rh, out_t, pressure)
-    return MemberProfiles(out_z, np.ascontiguousarray(pressure), out_t, out_q)
+    return MemberProfiles(out_z, np.array(pressure), out_t, out_q)
 
 
 def generator(seed: int, identity: str) -> np.random.Generator:

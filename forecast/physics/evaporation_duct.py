@@ -60,7 +60,7 @@ def evaporation_duct(
         Arrays (column,).
     """
     columns = layer.friction_velocity.shape[0]
-    p = np.ascontiguousarray(np.broadcast_to(np.asarray(pressure, dtype=float), (columns,)))
+    p = np.array(np.broadcast_to(np.asarray(pressure, dtype=float), (columns,)))
     height, strength = np.full(columns, np.nan), np.full(columns, np.nan)
     _find_duct(*layer[1:8], layer.stable_function, p, earth_radius, height, strength)
     return EvaporationDuct(height, strength)

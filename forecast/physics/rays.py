@@ -125,7 +125,7 @@ def trace_rays(
         np.shape(launch_height), np.shape(elevation), np.shape(distance), (medium.z.shape[0], 1)
     )
     args = [
-        np.ascontiguousarray(np.broadcast_to(np.asarray(a, dtype=float), shape))
+        np.array(np.broadcast_to(np.asarray(a, dtype=float), shape))
         for a in (launch_height, elevation, distance)
     ]
     floats = np.full((3, *shape), np.nan)

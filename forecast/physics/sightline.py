@@ -101,7 +101,7 @@ def trace_sightlines(
         (1,),
     )
     observer, top, far, base = (
-        np.ascontiguousarray(np.broadcast_to(np.asarray(a, dtype=float), shape))
+        np.array(np.broadcast_to(np.asarray(a, dtype=float), shape))
         for a in (observer_height, target_height, distance, target_base_height)
     )
     if not (np.all(observer >= 0.0) and np.all(base >= 0.0)):

@@ -186,7 +186,7 @@ def surface_profile(layer: SurfaceLayer, height: Any) -> tuple[np.ndarray, np.nd
     """
     columns = layer.friction_velocity.shape[0]
     z = np.asarray(height, dtype=float)
-    z = np.ascontiguousarray(np.broadcast_to(z, (columns, z.shape[-1])))
+    z = np.array(np.broadcast_to(z, (columns, z.shape[-1])))
     temperature, humidity = np.empty(z.shape), np.empty(z.shape)
     _profile(z, *layer[1:8], layer.stable_function, temperature, humidity)
     return temperature, humidity
@@ -225,7 +225,7 @@ def _solve(
             )
         )
     )
-    flat = [np.ascontiguousarray(np.ravel(a)) for a in arrays]
+    flat = [np.array(np.ravel(a)) for a in arrays]
     size = flat[0].size
     out = np.full((6, size), np.nan)
     converged = np.zeros(size, dtype=np.bool_)
