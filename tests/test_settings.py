@@ -218,3 +218,27 @@ def test_the_sample_settings_are_right():
 
     path = Path(__file__).parents[1] / "sample_soundings" / "outlook.toml"
     assert len(load_settings(path).sightlines) == 3
+
+
+ODD_VALUES = [
+    "-1", "1.5", "true", '""', '"x"', "[]", "[1, 2]", "[[1]]", "{}", "{a = 1}", "inf", "nan",
+    "1979-05-27", "07:32:00", "1e308", "0x" + 400 * "f", '"' + 400 * "y" + '"', "'''a\nb'''",
+    "[true, false]", "[{}]",
+]  # fmt: skip
+
+
+@pytest.mark.parametrize("value", ODD_VALUES)
+def test_any_value_for_any_key_is_taken_or_told_in_plain_words(tmp_path, value):
+    lines = GOOD.split("\n")
+    for number, line in enumerate(lines):
+        if "=" not in line:
+            continue
+        key = line.split("=")[0]
+        try:
+            load(tmp_path, "\n".join([*lines[:number], f"{key}= {value}", *lines[number + 1 :]]))
+        except SettingsError as error:
+            assert error.faults
+            for fault in error.faults:
+                assert fault.isprintable()
+                # No words of the validating library, no Python names for TOML things.
+                assert not any(word in fault for word in ("Input should", "None", "dict", "http"))
