@@ -165,6 +165,12 @@ def _cross_faults(table: dict[str, Any], base: Path) -> list[tuple[Where, str]]:
                     ((label, i, "name"), f"found {_found(name)} a second time; names must differ")
                 )
             seen.add(name)
+    key = "sea_surface_temperature_c"
+    faults += [
+        (("site", i, key), 'is for sites with surface = "sea" only; leave it out or set that')
+        for i, row in sites
+        if key in row and row.get("surface", "none") == "none"
+    ]
     names = [row["name"] for _, row in sites if isinstance(row.get("name"), str)]
     for i, row in sightlines:
         faults += [(("sightline", i, key), words) for key, words in _sightline_faults(row, names)]

@@ -67,6 +67,9 @@ def test_values_are_si_inside(tmp_path):
     assert (site.altitude, site.match_radius) == (3.0, 50e3)
     assert relay.distance == 70e3
     assert relay.azimuth == 250.0
+    assert (site.surface, site.sea_surface_temperature) == ("none", None)
+    sea = GOOD.replace("[[site]]", '[[site]]\nsurface = "sea"\nsea_surface_temperature_c = 15.0')
+    assert load(tmp_path, sea).sites[0].sea_surface_temperature == 288.15
     assert hill.wavelength == pytest.approx(633e-9)
     assert settings.names == {"air_temperature": "tdry [degC]"}
     assert len(settings.digest) == 64
@@ -138,6 +141,9 @@ def test_every_fault_is_told_at_once_with_its_line(tmp_path):
         ("target = [51.0, -3.0]", "target = [50.0, -5.0]", "lies 0 km from the observer"),
         ("target = [51.0, -3.0]", "target = [-50.0, 170.0]", "allowed: 0.01 to 1500 km"),
         ('wave = "radio"', 'wave = "radio"\nwavelength_nm = 600.0', "optical sightlines only"),
+        ("altitude_m = 3.0", "sea_surface_temperature_c = 15.0", 'with surface = "sea" only'),
+        ("altitude_m = 3.0", "sea_surface_temperature_c = 288.15", "from -3 to 40 °C"),
+        ("altitude_m = 3.0", 'surface = "lake"', '"none" or "sea"'),
         ("air_temperature =", "air_temprature =", "did you mean air_temperature?"),
         ('"tdry [degC]"', '"tdry [degC"', "'variable [unit]'"),
         ('output = "out"', 'output = "s.toml"', "which is a file; expected a folder"),
