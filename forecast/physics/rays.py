@@ -78,7 +78,7 @@ def build_medium(height: Any, refractivity: Any, earth_radius: Any, wave: str = 
     Returns
     -------
     Medium
-        Columns with fewer than two usable levels have ``count`` 0.
+        Columns with fewer than two usable levels, or without a positive radius, have ``count`` 0.
 
     Raises
     ------
@@ -119,7 +119,8 @@ def trace_rays(
     Returns
     -------
     RayEnds
-        Arrays (column, ray); NaN where the column has no air.
+        Arrays (column, ray); NaN where the column has no air, or a height, angle or distance is
+        missing or out of range.
     """
     shape = np.broadcast_shapes(
         np.shape(launch_height), np.shape(elevation), np.shape(distance), (medium.z.shape[0], 1)
@@ -145,6 +146,8 @@ def conformal(height, refractivity, radius):  # pragma: no cover - compiled
 @njit(cache=True, nogil=True, parallel=True)
 def _build(z, n, radius, gradient, scale, steps, out_z, out_mu, count):  # pragma: no cover
     for c in prange(z.shape[0]):
+        if not 0.0 < radius[c] < np.inf:
+            continue
         k = 0
         last_z = -np.inf
         last_n = np.nan
@@ -310,7 +313,9 @@ def _trace_all(
     for task in prange(columns * rays):
         c = task // rays
         r = task % rays
-        if count[c] < 2 or not (height[c, r] >= 0.0):
+        if count[c] < 2 or not 0.0 <= height[c, r] < np.inf:
+            continue
+        if not (abs(elevation[c, r]) < 0.5 * np.pi and 0.0 <= distance[c, r] < np.inf):
             continue
         start = radius[c] * np.log1p(height[c, r] / radius[c])
         layer, start, mu_start = locate(z[c], mu[c], count[c], start)

@@ -391,6 +391,37 @@ def test_columns_without_air_give_nothing():
     assert np.all(np.isfinite(end.height[1]))
 
 
+@pytest.mark.parametrize(
+    ("launch", "elevation", "distance"),
+    [
+        (np.nan, 0.0, 1e4),
+        (-1.0, 0.0, 1e4),
+        (np.inf, 0.0, 1e4),
+        (10.0, np.nan, 1e4),
+        (10.0, 1.5707963267948966, 1e4),
+        (10.0, 3.0, 1e4),
+        (10.0, 0.0, np.nan),
+        (10.0, 0.0, np.inf),
+        (10.0, 0.0, -1.0),
+    ],
+)
+def test_rays_that_cannot_be_give_nothing_and_do_not_hang(launch, elevation, distance):
+    medium = build_medium(*_duct_over_water(), EARTH_RADIUS)
+    end = trace_rays(medium, launch, np.array([[elevation, 1e-3]]), distance)
+    assert np.isnan(end.height[0, 0])
+    assert np.isnan(end.blocked_at[0, 0])
+
+
+@pytest.mark.parametrize("radius", [np.nan, 0.0, -6.4e6, np.inf])
+def test_columns_without_a_radius_have_no_air(radius):
+    """A profile without a latitude has none: it must not stop the others, or never end."""
+    z, n = _duct_over_water()
+    medium = build_medium(np.stack([z, z]), np.stack([n, n]), np.array([radius, EARTH_RADIUS]))
+    assert medium.count.tolist() == [0, medium.count[1]]
+    end = trace_rays(medium, 10.0, np.zeros((2, 1)), 1e4)
+    assert np.isnan(end.height[:, 0]).tolist() == [True, False]
+
+
 def test_columns_are_independent():
     rng = np.random.default_rng(3)
     columns = [random_refractivity_column(rng) for _ in range(4)]
