@@ -130,6 +130,7 @@ def make_products(
     """
     from forecast.output.netcdf import write_outlook
     from forecast.output.page import write_page
+    from forecast.output.phone_chart import phone_chart
     from forecast.output.tables import write_windows_csv, write_windows_json
 
     write_outlook(outlook, folder / "outlook.nc", stamp)
@@ -139,6 +140,14 @@ def make_products(
     present = set(outlook["site"].values.astype(str))
     sites = [site for site in settings.sites if site.name in present]
     charts = make_charts(outlook, windows, settings, sites, folder, tell)
+    for site in sites:
+        charts[site.name]["phone"] = phone_chart(
+            outlook,
+            site.name,
+            timezone=site.timezone,
+            top=settings.chart_top,
+            windows=windows,
+        )
     write_page(
         folder / PAGE,
         outlook=outlook,

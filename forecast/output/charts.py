@@ -27,15 +27,26 @@ from forecast.schema import CAUTION
 if TYPE_CHECKING:
     from forecast.outlook import Window
 
-__all__ = ["draw_time_height", "save_chart"]
+__all__ = [
+    "CHART_STYLE",
+    "INK",
+    "chosen_strips",
+    "draw_bars",
+    "draw_gradient",
+    "draw_light",
+    "draw_likelihood",
+    "draw_time_height",
+    "mark_forecast",
+    "save_chart",
+]
 
 _GRADIENT_RANGE = (-150.0, 260.0)  # dM/dz per km; trapping below 0
 _STANDARD = 118.0  # dM/dz per km in standard air, k = 4/3
 _LIKELY = (0.3, 0.6, 0.9)  # outlines of the likelihood of lying inside a duct
 _MOST_STRIPS = 12
-_INK = "#1b1b1b"
+INK = "#1b1b1b"
 _FAINT = "#6b6b6b"
-_STYLE: Any = {
+CHART_STYLE: Any = {
     "font.family": "DejaVu Sans",
     "font.size": 9.5,
     "svg.hashsalt": "bendcast",
@@ -77,8 +88,8 @@ def draw_time_height(
     """
     data = time_height(outlook, site, top)
     zone = ZoneInfo(timezone)
-    with matplotlib.rc_context(_STYLE):
-        strips, left_out = _chosen(data.strips)
+    with matplotlib.rc_context(CHART_STYLE):
+        strips, left_out = chosen_strips(data.strips)
         single = data.time.size == 1
         tall = 3.9 + 0.36 * len(strips)
         figure = Figure(figsize=(11.0, tall + 2.2), dpi=110, facecolor="white")
@@ -96,16 +107,17 @@ def draw_time_height(
         )
         axis = figure.add_subplot(grid[0, 0])
         span = mdates.date2num([data.left.min(), data.right.max()])
-        mesh = _draw_gradient(axis, data, low_stretch)
-        _draw_likelihood(axis, data)
+        mesh = draw_gradient(axis, data, low_stretch)
+        draw_likelihood(axis, data)
         _mark_profiles(axis, data)
+        mark_forecast(axis, data)
         axis.set_xlim(*span)
         axis.set_ylabel("height above ground (m)")
         _colour_bar(figure, axis, mesh, height)
         if single:
             _draw_profile(figure.add_subplot(grid[0, 1]), outlook, int(data.rows[0]), top)
         light = figure.add_subplot(grid[1, 0])
-        _draw_light(light, data)
+        draw_light(light, data)
         below = [light]
         for i, strip in enumerate(strips):
             row = figure.add_subplot(grid[2 + i, 0])
@@ -138,7 +150,7 @@ def save_chart(figure: Figure, stem: str | Path) -> dict[str, Any]:
         "alt": getattr(figure, "text_alternative", ""),
         "file": f"{Path(stem).name}.svg",
     }
-    with matplotlib.rc_context(_STYLE):
+    with matplotlib.rc_context(CHART_STYLE):
         for ending, meta in (("png", {"Software": None}), ("svg", {"Date": None, "Creator": None})):
             buffer = io.BytesIO()
             figure.savefig(buffer, format=ending, metadata=meta)
@@ -148,7 +160,7 @@ def save_chart(figure: Figure, stem: str | Path) -> dict[str, Any]:
     return out
 
 
-def _chosen(strips: list[Strip]) -> tuple[list[Strip], int]:
+def chosen_strips(strips: list[Strip]) -> tuple[list[Strip], int]:
     """Keep the likeliest strips where there are more than a chart can hold."""
     if len(strips) <= _MOST_STRIPS:
         return strips, 0
@@ -161,7 +173,8 @@ def _colours() -> ListedColormap:
     return ListedColormap(matplotlib.colormaps["cividis"](np.linspace(0.0, 1.0, 256)))
 
 
-def _draw_gradient(axis: Axes, data: TimeHeight, low_stretch: bool) -> QuadMesh:
+def draw_gradient(axis: Axes, data: TimeHeight, low_stretch: bool) -> QuadMesh:
+    """Shade dM/dz of every native layer; one image artist, gaps left open."""
     edges = np.empty(2 * data.time.size)
     edges[0::2] = mdates.date2num(data.left)
     edges[1::2] = mdates.date2num(data.right)
@@ -189,7 +202,7 @@ def _root(height: Any) -> Any:
     return np.sqrt(np.maximum(height, 0.0))
 
 
-def _draw_likelihood(axis: Axes, data: TimeHeight) -> None:
+def draw_likelihood(axis: Axes, data: TimeHeight) -> None:
     """Outline where ducts lie: thicker and whiter the likelier."""
     x = np.empty(2 * data.time.size)
     x[0::2] = mdates.date2num(data.left)
@@ -209,7 +222,7 @@ def _draw_likelihood(axis: Axes, data: TimeHeight) -> None:
 
 
 def _mark_profiles(axis: Axes, data: TimeHeight) -> None:
-    """Ticks for ascents and model times, and a line where the forecast begins."""
+    """Ticks for ascents and model times."""
     when = mdates.date2num(data.time)
     across = axis.get_xaxis_transform()
     for mask, marker, size, label in (
@@ -219,13 +232,9 @@ def _mark_profiles(axis: Axes, data: TimeHeight) -> None:
         if mask.any():
             axis.scatter(
                 when[mask], np.full(mask.sum(), 0.012), s=size, marker=marker, color="white",
-                edgecolors=_INK if marker == "^" else None, linewidths=0.6, transform=across,
+                edgecolors=INK if marker == "^" else None, linewidths=0.6, transform=across,
                 label=label, zorder=5,
             )  # fmt: skip
-    if data.ascent.any() and not data.ascent.all():
-        latest = mdates.date2num(data.right[data.ascent].max())
-        axis.axvline(latest, color="white", lw=1.4)
-        axis.text(latest, 0.9, " forecast →", color="white", fontsize=8.5, transform=across)
     handles, labels = axis.get_legend_handles_labels()
     lines = [
         matplotlib.lines.Line2D([], [], color="white", lw=w, ls=s)
@@ -246,6 +255,17 @@ def _mark_profiles(axis: Axes, data: TimeHeight) -> None:
     )
 
 
+def mark_forecast(axis: Axes, data: TimeHeight) -> None:
+    """Draw a line where the forecast begins, after the latest ascent."""
+    if data.ascent.any() and not data.ascent.all():
+        latest = mdates.date2num(data.right[data.ascent].max())
+        axis.axvline(latest, color="white", lw=1.4)
+        axis.text(
+            latest, 0.9, " forecast →", color="white", fontsize=8.5,
+            transform=axis.get_xaxis_transform(),
+        )  # fmt: skip
+
+
 def _colour_bar(figure: Figure, axis: Axes, mesh: QuadMesh, height: float) -> None:
     box = axis.get_position()
     bar_axis = figure.add_axes((0.925, box.y0, 0.013, box.height))
@@ -262,7 +282,7 @@ def _draw_profile(axis: Axes, outlook: xr.Dataset, row: int, top: float) -> None
     z = outlook["height"].values[row]
     m = outlook["modified_refractivity"].values[row]
     good = np.isfinite(z) & (z <= top)
-    axis.plot(m[good], z[good], color=_INK, lw=1.2)
+    axis.plot(m[good], z[good], color=INK, lw=1.2)
     least = float(outlook.attrs.get("minimum_duct_strength", 0.0))
     base, end = outlook["duct_base"].values[row], outlook["duct_top"].values[row]
     for b, e, s in zip(base, end, outlook["duct_strength"].values[row], strict=True):
@@ -275,7 +295,7 @@ def _draw_profile(axis: Axes, outlook: xr.Dataset, row: int, top: float) -> None
     axis.grid(color="#dddddd", lw=0.5)
 
 
-def _draw_light(axis: Axes, data: TimeHeight) -> None:
+def draw_light(axis: Axes, data: TimeHeight) -> None:
     """Night, twilight and day as a strip of greys."""
     x = mdates.date2num(data.light_time)
     step = x[1] - x[0]
@@ -293,8 +313,11 @@ def _draw_light(axis: Axes, data: TimeHeight) -> None:
     axis.set_ylabel("night · twilight · day", rotation=0, ha="right", va="center", fontsize=8)
 
 
-def _draw_strip(axis: Axes, data: TimeHeight, strip: Strip) -> None:
-    """Probability as bars, with the interval as a lighter band around their ends."""
+def draw_bars(axis: Axes, data: TimeHeight, strip: Strip) -> float:
+    """Probability as bars, with the interval as a lighter band around their ends.
+
+    Returns the largest probability, −1 if none is known.
+    """
     x = mdates.date2num(data.left)
     width = mdates.date2num(data.right) - x
     known = np.isfinite(strip.probability)
@@ -324,7 +347,12 @@ def _draw_strip(axis: Axes, data: TimeHeight, strip: Strip) -> None:
     axis.tick_params(axis="y", labelleft=False, length=0)
     axis.grid(axis="y", color="white", lw=0.8)
     axis.set_axisbelow(False)
-    best = float(np.nanmax([*strip.probability, -1.0]))
+    return float(np.nanmax([*strip.probability, -1.0]))
+
+
+def _draw_strip(axis: Axes, data: TimeHeight, strip: Strip) -> None:
+    """Draw the bars with their label on the left and the largest on the right."""
+    best = draw_bars(axis, data, strip)
     label = shorten(strip.label, 44)
     weight = "bold" if strip.kind == "sightline" else "normal"
     axis.set_ylabel(
@@ -332,7 +360,7 @@ def _draw_strip(axis: Axes, data: TimeHeight, strip: Strip) -> None:
         fontweight=weight,
     )  # fmt: skip
     most = f"max {percent(best)}" if best >= 0.0 else "unknown"
-    axis.text(1.008, 0.5, most, transform=axis.transAxes, va="center", fontsize=8, color=_INK)
+    axis.text(1.008, 0.5, most, transform=axis.transAxes, va="center", fontsize=8, color=INK)
 
 
 def _time_axes(
@@ -374,7 +402,7 @@ def _title(
     mine = [w for w in windows if w.site == data.site]
     figure.text(
         0.02, 1.0 - 0.26 / height, shorten(f"{outlook.attrs.get('title', '')} · {data.site}", 90),
-        fontsize=13, fontweight="bold", va="center", color=_INK, parse_math=False,
+        fontsize=13, fontweight="bold", va="center", color=INK, parse_math=False,
     )  # fmt: skip
     if mine:
         w = mine[0]
@@ -386,7 +414,7 @@ def _title(
     else:
         answer = "No window: nothing reaches the threshold."
     figure.text(
-        0.02, 1.0 - 0.55 / height, answer, fontsize=10.5, va="center", color=_INK, parse_math=False
+        0.02, 1.0 - 0.55 / height, answer, fontsize=10.5, va="center", color=INK, parse_math=False
     )
     figure.text_alternative = chart_text(outlook, data, mine, zone)  # type: ignore[attr-defined]
 

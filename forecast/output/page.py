@@ -59,7 +59,8 @@ def write_page(
     windows : list of Window
         Best first.
     charts : dict
-        By site: ``png`` (bytes), ``alt``, ``file``, as `forecast.output.charts.save_chart` gives.
+        By site: ``png`` (bytes), ``alt``, ``file``, as `forecast.output.charts.save_chart` gives,
+        and ``phone`` (bytes), as `forecast.output.phone_chart.phone_chart` gives.
     settings_title : str
         Title of the run.
     sites : list of (str, str)
@@ -196,10 +197,15 @@ def _site(outlook: xr.Dataset, name: str, chart: dict[str, Any]) -> dict[str, An
     for s in range(outlook.sizes["sightline"]):
         if str(outlook["sightline_site"].values[s]) == name:
             lines.append(_line(outlook, rows, latest, s))
-    width, height = struct.unpack(">II", chart["png"][16:24])  # PNG header, ISO/IEC 15948 11.2.2
+    # Width and height stand in the PNG header, ISO/IEC 15948 section 11.2.2.
+    width, height = struct.unpack(">II", chart["png"][16:24])
+    phone_width, phone_height = struct.unpack(">II", chart["phone"][16:24])
     return {
         "name": printable(name, _NAME),
         "png": base64.b64encode(chart["png"]).decode(),
+        "phone": base64.b64encode(chart["phone"]).decode(),
+        "phone_width": phone_width,
+        "phone_height": phone_height,
         "alt": chart["alt"],
         "file": chart["file"],
         "width": width,

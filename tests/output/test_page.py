@@ -12,6 +12,7 @@ import pytest
 
 from forecast.output.charts import draw_time_height, save_chart
 from forecast.output.page import write_page
+from forecast.output.phone_chart import phone_chart
 from tests.output.conftest import HOSTILE
 
 
@@ -24,6 +25,8 @@ def page(case, tmp_path_factory):
         name: save_chart(draw_time_height(outlook, name, windows=windows), folder / f"c{i}")
         for i, (name, _) in enumerate(sites)
     }
+    for name, zone in sites:
+        charts[name]["phone"] = phone_chart(outlook, name, timezone=zone, windows=windows)
 
     def write(name="index.html", windows=windows):
         write_page(
@@ -118,6 +121,15 @@ def test_the_answer_comes_first_and_agrees_with_the_windows(page, case):
 
 def test_a_page_without_windows_says_so(page):
     assert "Nothing worth going for" in page("none.html", windows=[])
+
+
+def test_a_narrow_screen_gets_its_own_chart(page, case):
+    outlook, windows, _ = case
+    sources = [attrs for tag, attrs in Tags(page()).tags if tag == "source"]
+    assert len(sources) == 2
+    assert all(int(a["height"]) > int(a["width"]) for a in sources)
+    png = phone_chart(outlook, "cape", timezone="Atlantic/Azores", windows=windows)
+    assert any(base64.b64encode(png).decode() in a["srcset"] for a in sources)
 
 
 def test_same_content_same_bytes(page):
