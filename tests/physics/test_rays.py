@@ -149,14 +149,11 @@ def test_random_rays_agree_with_thirty_digit_arithmetic():
         assert (found.turns[0, 0], found.reflections[0, 0]) == (turns, bounces)
 
 
-@pytest.mark.parametrize(
-    ("launch", "elevation"), [r for r in RAYS if r != (25.0, 0.0) and r != (12.0, 0.2)]
-)
+@pytest.mark.parametrize(("launch", "elevation"), [r for r in RAYS if r != (12.0, 0.2)])
 def test_rays_agree_with_an_ode_solver(launch, elevation):
     """0.02 m after 100 km through N linear in height: `solve_ivp` DOP853, rtol 1e-11.
 
-    Left out: the ray that rests on the kink of largest M (its layer is undecided for the
-    solver) and the steep one, which ends above the given levels.
+    Left out: the steep ray, which ends above the given levels.
     """
     z, n = _duct_over_water()
     height, theta, turns, bounces = integrate_ray(z, n, EARTH_RADIUS, launch, elevation, 100e3)
