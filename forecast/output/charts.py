@@ -16,10 +16,22 @@ from matplotlib import dates as mdates
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.collections import QuadMesh
-from matplotlib.colors import ListedColormap, Normalize
 from matplotlib.figure import Figure
 
 from forecast.output.chart_data import Strip, TimeHeight, time_height, utc
+from forecast.output.chart_layers import (
+    CHART_STYLE,
+    FAINT,
+    INK,
+    LIKELY,
+    STANDARD_GRADIENT,
+    chosen_strips,
+    draw_bars,
+    draw_gradient,
+    draw_light,
+    draw_likelihood,
+    mark_forecast,
+)
 from forecast.output.files import write_bytes_atomic
 from forecast.output.text import chart_text, local_time, percent, shorten
 from forecast.schema import CAUTION
@@ -27,32 +39,7 @@ from forecast.schema import CAUTION
 if TYPE_CHECKING:
     from forecast.outlook import Window
 
-__all__ = [
-    "CHART_STYLE",
-    "INK",
-    "chosen_strips",
-    "draw_bars",
-    "draw_gradient",
-    "draw_light",
-    "draw_likelihood",
-    "draw_time_height",
-    "mark_forecast",
-    "save_chart",
-]
-
-_GRADIENT_RANGE = (-150.0, 260.0)  # dM/dz per km; trapping below 0
-_STANDARD = 118.0  # dM/dz per km in standard air, k = 4/3
-_LIKELY = (0.3, 0.6, 0.9)  # outlines of the likelihood of lying inside a duct
-_MOST_STRIPS = 12
-INK = "#1b1b1b"
-_FAINT = "#6b6b6b"
-CHART_STYLE: Any = {
-    "font.family": "DejaVu Sans",
-    "font.size": 9.5,
-    "svg.hashsalt": "bendcast",
-    "svg.fonttype": "none",
-    "path.simplify": True,
-}
+__all__ = ["draw_time_height", "save_chart"]
 
 
 def draw_time_height(
@@ -160,67 +147,6 @@ def save_chart(figure: Figure, stem: str | Path) -> dict[str, Any]:
     return out
 
 
-def chosen_strips(strips: list[Strip]) -> tuple[list[Strip], int]:
-    """Keep the likeliest strips where there are more than a chart can hold."""
-    if len(strips) <= _MOST_STRIPS:
-        return strips, 0
-    best = sorted(strips, key=lambda s: -float(np.nanmax([*s.probability, -1.0])))[:_MOST_STRIPS]
-    return [s for s in strips if s in best], len(strips) - len(best)
-
-
-def _colours() -> ListedColormap:
-    """Cividis (Nuñez, Anderton & Renslow 2018): light where rays bend little, dark if trapped."""
-    return ListedColormap(matplotlib.colormaps["cividis"](np.linspace(0.0, 1.0, 256)))
-
-
-def draw_gradient(axis: Axes, data: TimeHeight, low_stretch: bool) -> QuadMesh:
-    """Shade dM/dz of every native layer; one image artist, gaps left open."""
-    edges = np.empty(2 * data.time.size)
-    edges[0::2] = mdates.date2num(data.left)
-    edges[1::2] = mdates.date2num(data.right)
-    # Between the columns stand columns of no width or, where there is a gap, of nothing.
-    values = np.full((data.edges.size - 1, edges.size - 1), np.nan)
-    values[:, 0::2] = data.gradient.T
-    mesh = axis.pcolormesh(
-        edges,
-        data.edges,
-        np.ma.masked_invalid(values),
-        cmap=_colours(),
-        norm=Normalize(*_GRADIENT_RANGE),
-        rasterized=True,
-        shading="flat",
-    )
-    axis.set_facecolor("#e9e9e9")
-    axis.set_ylim(0.0, data.edges[-1])
-    if low_stretch:
-        axis.set_yscale("function", functions=(_root, np.square))
-        axis.set_ylim(0.0, data.edges[-1])
-    return mesh
-
-
-def _root(height: Any) -> Any:
-    return np.sqrt(np.maximum(height, 0.0))
-
-
-def draw_likelihood(axis: Axes, data: TimeHeight) -> None:
-    """Outline where ducts lie: thicker and whiter the likelier."""
-    x = np.empty(2 * data.time.size)
-    x[0::2] = mdates.date2num(data.left)
-    x[1::2] = mdates.date2num(data.right)
-    values = np.repeat(np.nan_to_num(data.likelihood), 2, axis=0).T
-    if values.max(initial=0.0) < _LIKELY[0]:
-        return
-    axis.contour(
-        x,
-        data.bins,
-        values,
-        levels=_LIKELY,
-        colors="white",
-        linewidths=[0.7, 1.2, 1.9],
-        linestyles=["dotted", "dashed", "solid"],
-    )
-
-
 def _mark_profiles(axis: Axes, data: TimeHeight) -> None:
     """Ticks for ascents and model times."""
     when = mdates.date2num(data.time)
@@ -242,7 +168,7 @@ def _mark_profiles(axis: Axes, data: TimeHeight) -> None:
     ]
     axis.legend(
         [*handles, *lines],
-        [*labels, *[f"in a duct, {100 * p:.0f} % of members" for p in _LIKELY]],
+        [*labels, *[f"in a duct, {100 * p:.0f} % of members" for p in LIKELY]],
         loc="upper left",
         ncols=5,
         fontsize=7.5,
@@ -255,22 +181,11 @@ def _mark_profiles(axis: Axes, data: TimeHeight) -> None:
     )
 
 
-def mark_forecast(axis: Axes, data: TimeHeight) -> None:
-    """Draw a line where the forecast begins, after the latest ascent."""
-    if data.ascent.any() and not data.ascent.all():
-        latest = mdates.date2num(data.right[data.ascent].max())
-        axis.axvline(latest, color="white", lw=1.4)
-        axis.text(
-            latest, 0.9, " forecast →", color="white", fontsize=8.5,
-            transform=axis.get_xaxis_transform(),
-        )  # fmt: skip
-
-
 def _colour_bar(figure: Figure, axis: Axes, mesh: QuadMesh, height: float) -> None:
     box = axis.get_position()
     bar_axis = figure.add_axes((0.925, box.y0, 0.013, box.height))
     bar = figure.colorbar(mesh, cax=bar_axis, extend="both", extendfrac=0.03)
-    bar.set_ticks([-100.0, 0.0, _STANDARD, 200.0])
+    bar.set_ticks([-100.0, 0.0, STANDARD_GRADIENT, 200.0])
     bar.set_ticklabels(["−100", "0", "118", "200"])
     bar.ax.axhline(0.0, color="white", lw=1.6)
     bar.ax.tick_params(labelsize=8)
@@ -293,61 +208,6 @@ def _draw_profile(axis: Axes, outlook: xr.Dataset, row: int, top: float) -> None
     axis.tick_params(labelleft=False, labelsize=8)
     axis.set_title("M of the profile; ducts shaded", fontsize=8.5)
     axis.grid(color="#dddddd", lw=0.5)
-
-
-def draw_light(axis: Axes, data: TimeHeight) -> None:
-    """Night, twilight and day as a strip of greys."""
-    x = mdates.date2num(data.light_time)
-    step = x[1] - x[0]
-    edges = np.append(x - 0.5 * step, x[-1] + 0.5 * step)
-    axis.pcolormesh(
-        edges,
-        [0.0, 1.0],
-        data.light[None, :],
-        cmap=ListedColormap(["#30343b", "#9aa1ab", "#f7f3df"]),
-        vmin=0,
-        vmax=2,
-        rasterized=True,
-    )
-    axis.set_yticks([])
-    axis.set_ylabel("night · twilight · day", rotation=0, ha="right", va="center", fontsize=8)
-
-
-def draw_bars(axis: Axes, data: TimeHeight, strip: Strip) -> float:
-    """Probability as bars, with the interval as a lighter band around their ends.
-
-    Returns the largest probability, −1 if none is known.
-    """
-    x = mdates.date2num(data.left)
-    width = mdates.date2num(data.right) - x
-    known = np.isfinite(strip.probability)
-    axis.set_facecolor("#f5f5f5")
-    axis.bar(
-        x[known], strip.probability[known], width[known], align="edge", color="#00224e", lw=0,
-        rasterized=True,
-    )  # fmt: skip
-    axis.bar(
-        x[known],
-        (strip.upper - strip.lower)[known],
-        width[known],
-        bottom=strip.lower[known],
-        align="edge",
-        color="#d3b13b",
-        alpha=0.75,
-        lw=0,
-        rasterized=True,
-    )
-    if (~known).any():
-        axis.bar(
-            x[~known], np.ones((~known).sum()), width[~known], align="edge", color="none",
-            edgecolor="#aaaaaa", hatch="////", lw=0, rasterized=True,
-        )  # fmt: skip
-    axis.set_ylim(0.0, 1.0)
-    axis.set_yticks([0.5])
-    axis.tick_params(axis="y", labelleft=False, length=0)
-    axis.grid(axis="y", color="white", lw=0.8)
-    axis.set_axisbelow(False)
-    return float(np.nanmax([*strip.probability, -1.0]))
 
 
 def _draw_strip(axis: Axes, data: TimeHeight, strip: Strip) -> None:
@@ -431,6 +291,6 @@ def _footer(
         f"Source: {outlook.attrs.get('source', '')}. {CAUTION}",
     ]
     figure.text(
-        0.02, 0.08 / height, "\n".join(lines), fontsize=7, va="bottom", color=_FAINT,
+        0.02, 0.08 / height, "\n".join(lines), fontsize=7, va="bottom", color=FAINT,
         parse_math=False, wrap=True,
     )  # fmt: skip

@@ -15,7 +15,7 @@ from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 
 from forecast.output.chart_data import time_height
-from forecast.output.charts import (
+from forecast.output.chart_layers import (
     CHART_STYLE,
     INK,
     chosen_strips,
