@@ -86,7 +86,12 @@ def make_charts(
         stem = safe_stem(site.name, stems)
         stems.add(stem)
         figure = draw_time_height(
-            outlook, site.name, timezone=site.timezone, top=settings.chart_top, windows=windows
+            outlook,
+            site.name,
+            timezone=site.timezone,
+            top=settings.chart_top,
+            low_stretch=settings.chart_stretch_low,
+            windows=windows,
         )
         charts[site.name] = save_chart(figure, folder / stem)
         tell(i + 1, len(sites), "charts")
@@ -146,6 +151,7 @@ def make_products(
             site.name,
             timezone=site.timezone,
             top=settings.chart_top,
+            low_stretch=settings.chart_stretch_low,
             windows=windows,
         )
     write_page(

@@ -67,6 +67,7 @@ class Settings:
     window_threshold: float = 0.5
     minimum_duct_strength: float = 2.0
     chart_top: float = 3000.0
+    chart_stretch_low: bool = False
     timezone: str = "UTC"
     names: dict[str, str] = field(default_factory=dict)
     base: Path = Path()
@@ -150,6 +151,7 @@ def _settings(checked: SettingsFile, base: Path, digest: str) -> Settings:
         window_threshold=run.window_threshold,
         minimum_duct_strength=run.minimum_duct_strength,
         chart_top=run.chart_top_m,
+        chart_stretch_low=run.chart_stretch_low,
         names=dict(checked.ingest.names),
         base=base,
         digest=digest,

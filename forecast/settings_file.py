@@ -72,6 +72,7 @@ class _RunTable(_Table):
     window_threshold: Annotated[float, _number(0.01, 1.0, "")] = 0.5
     minimum_duct_strength: Annotated[float, _number(0.0, 100.0, "M-units")] = 2.0
     chart_top_m: Annotated[float, _number(100.0, 15000.0, "m")] = 3000.0
+    chart_stretch_low: Annotated[bool, Field(strict=True, description="true or false")] = False
 
 
 class _SiteTable(_Table):

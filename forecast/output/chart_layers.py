@@ -76,6 +76,9 @@ def draw_gradient(axis: Axes, data: TimeHeight, low_stretch: bool) -> QuadMesh:
     axis.set_ylim(0.0, data.edges[-1])
     if low_stretch:
         axis.set_yscale("function", functions=(_root, np.square))
+        axis.set_yticks(
+            [h for h in (0, 50, 100, 250, 500, 1000, 2000, 3000) if h <= data.edges[-1]]
+        )
         axis.set_ylim(0.0, data.edges[-1])
     return mesh
 

@@ -44,6 +44,7 @@ def phone_chart(
     *,
     timezone: str = "UTC",
     top: float = 3000.0,
+    low_stretch: bool = False,
     windows: list[Window] | None = None,
 ) -> bytes:
     """Draw the chart of one site for a narrow screen.
@@ -58,6 +59,8 @@ def phone_chart(
         IANA zone of the local time.
     top : float
         Top of the chart, m above ground.
+    low_stretch : bool
+        Stretch the lowest heights (square-root axis).
     windows : list of Window, optional
         Windows; the best of this site stands on top.
 
@@ -81,7 +84,7 @@ def phone_chart(
             return (left, 1.0 - (from_top + tall) / height, width, tall / height)
 
         axis = figure.add_axes(place(head, main))
-        draw_gradient(axis, data, low_stretch=False)
+        draw_gradient(axis, data, low_stretch)
         draw_likelihood(axis, data)
         mark_forecast(axis, data)
         axis.set_ylabel("height (m)", fontsize=8, labelpad=1.0)
