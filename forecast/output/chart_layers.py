@@ -8,7 +8,7 @@ import matplotlib
 import numpy as np
 from matplotlib import dates as mdates
 from matplotlib.axes import Axes
-from matplotlib.collections import QuadMesh
+from matplotlib.collections import PolyCollection, QuadMesh
 from matplotlib.colors import ListedColormap, Normalize
 
 from forecast.output.chart_data import Strip, TimeHeight
@@ -135,6 +135,25 @@ def draw_light(axis: Axes, data: TimeHeight) -> None:
     axis.set_ylabel("night · twilight · day", rotation=0, ha="right", va="center", fontsize=8)
 
 
+def _add_bars(
+    axis: Axes,
+    left: np.ndarray,
+    width: np.ndarray,
+    bottom: np.ndarray,
+    top: np.ndarray,
+    shown: np.ndarray,
+    **style: Any,
+) -> None:
+    """Bars as one collection: hundreds of patches of their own would take most of the drawing."""
+    if not shown.any():
+        return
+    x0, x1, y0, y1 = (a[shown] for a in (left, left + width, bottom, top))
+    corners = np.stack(
+        [np.stack([x, y], axis=1) for x, y in ((x0, y0), (x0, y1), (x1, y1), (x1, y0))], axis=1
+    )
+    axis.add_collection(PolyCollection(list(corners), linewidth=0.0, rasterized=True, **style))
+
+
 def draw_bars(axis: Axes, data: TimeHeight, strip: Strip) -> float:
     """Probability as bars, with the interval as a lighter band around their ends.
 
@@ -144,26 +163,12 @@ def draw_bars(axis: Axes, data: TimeHeight, strip: Strip) -> float:
     width = mdates.date2num(data.right) - x
     known = np.isfinite(strip.probability)
     axis.set_facecolor("#f5f5f5")
-    axis.bar(
-        x[known], strip.probability[known], width[known], align="edge", color="#00224e", lw=0,
-        rasterized=True,
-    )  # fmt: skip
-    axis.bar(
-        x[known],
-        (strip.upper - strip.lower)[known],
-        width[known],
-        bottom=strip.lower[known],
-        align="edge",
-        color="#d3b13b",
-        alpha=0.75,
-        lw=0,
-        rasterized=True,
+    none, whole = np.zeros(x.size), np.ones(x.size)
+    _add_bars(axis, x, width, none, strip.probability, known, color="#00224e")
+    _add_bars(axis, x, width, strip.lower, strip.upper, known, color="#d3b13b", alpha=0.75)
+    _add_bars(
+        axis, x, width, none, whole, ~known, facecolor="none", edgecolor="#aaaaaa", hatch="////"
     )
-    if (~known).any():
-        axis.bar(
-            x[~known], np.ones((~known).sum()), width[~known], align="edge", color="none",
-            edgecolor="#aaaaaa", hatch="////", lw=0, rasterized=True,
-        )  # fmt: skip
     axis.set_ylim(0.0, 1.0)
     axis.set_yticks([0.5])
     axis.tick_params(axis="y", labelleft=False, length=0)
