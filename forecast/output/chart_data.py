@@ -10,12 +10,15 @@ import xarray as xr
 
 from forecast.output.sun import CIVIL_TWILIGHT, sun_altitude
 
-__all__ = ["Strip", "TimeHeight", "time_height"]
+__all__ = ["Strip", "TimeHeight", "best_profile", "column_edges", "time_height", "utc"]
 
 _GAP = 1.5  # a pause longer than this many usual steps is shown as a gap
+_NEAR = 4  # steps on either side that tell which step is usual
+_WIDEST = np.timedelta64(24 * 3600, "s")  # no profile stands for more than a day
 _ROWS = 420  # heights at which the layers are looked up; about one per pixel
 _LONE_WIDTH = np.timedelta64(6 * 3600, "s")  # width of a profile that stands alone
-_SUN_STEPS = 600
+_SUN_STEP = np.timedelta64(600, "s")
+_MOST_SUN_STEPS = 6000
 
 
 @dataclass(frozen=True)
@@ -36,7 +39,8 @@ class TimeHeight:
     ``left``, ``right``: edges of each profile's column in time; ``edges``: height edges (m) of the
     rows; ``gradient``: dM/dz (per km) of the native layer that covers each row, (profile, row),
     NaN outside the profile; ``likelihood`` of lying inside a duct at ``bins`` (m), (profile, bin);
-    ``light``: 0 night, 1 twilight, 2 day at ``light_time``.
+    ``light``: 0 night, 1 twilight, 2 day at ``light_time``, −1 if the place is not known;
+    ``ahead``: profiles after the latest ascent, or all where there is no ascent.
     """
 
     site: str
@@ -44,6 +48,7 @@ class TimeHeight:
     left: np.ndarray
     right: np.ndarray
     ascent: np.ndarray
+    ahead: np.ndarray
     edges: np.ndarray
     gradient: np.ndarray
     bins: np.ndarray
@@ -92,22 +97,16 @@ def time_height(outlook: xr.Dataset, site: str, top: float) -> TimeHeight:
     for c, ceiling in enumerate(outlook["ceiling"].values):
         under = f"{ceiling:.0f} m" if ceiling < 1000 else f"{ceiling / 1000:g} km"
         strips.append(_strip(outlook, rows, "duct", c, f"duct under {under}"))
-    light_time = left.min() + (
-        np.linspace(0.0, 1.0, _SUN_STEPS) * (right.max() - left.min()).astype(float)
-    ).astype("timedelta64[s]")
-    altitude = sun_altitude(
-        light_time,
-        float(outlook["latitude"].values[rows[0]]),
-        float(outlook["longitude"].values[rows[0]]),
-    )
-    # The Sun's upper limb is seen on the horizon at -0.833°: 34' refraction, 16' radius.
-    light = (altitude > CIVIL_TWILIGHT).astype(int) + (altitude > -0.833)
+    light_time, light = _daylight(outlook, rows, left.min(), right.max())
+    ascent = outlook["source_kind"].values[rows].astype(str) == "ascent"
+    latest = time[ascent].max(initial=np.datetime64("0001-01-01", "s"))
     return TimeHeight(
         site=site,
         time=time,
         left=left,
         right=right,
-        ascent=outlook["source_kind"].values[rows].astype(str) == "ascent",
+        ascent=ascent,
+        ahead=time > latest,
         edges=edges,
         gradient=_rows_gradient(outlook, rows, edges),
         bins=bins[keep],
@@ -117,6 +116,28 @@ def time_height(outlook: xr.Dataset, site: str, top: float) -> TimeHeight:
         light=light,
         rows=rows,
     )
+
+
+def best_profile(data: TimeHeight, strip: Strip) -> int | None:
+    """Which profile to name for a strip: the likeliest ahead, or of late if none lies ahead.
+
+    Parameters
+    ----------
+    data : TimeHeight
+        Data of the chart.
+    strip : Strip
+        One of its strips.
+
+    Returns
+    -------
+    int or None
+        Index along ``profile``, the earliest of equals; None if no probability is known.
+    """
+    known = np.isfinite(strip.probability)
+    choice = known & data.ahead if data.ahead.any() else known
+    if not choice.any():
+        return None
+    return int(np.argmax(np.where(choice, strip.probability, -1.0)))
 
 
 def column_edges(time: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -131,17 +152,20 @@ def column_edges(time: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     -------
     tuple of ndarray
         Left and right edges.
+
+    Notes
+    -----
+    A gap is a step longer than 1.5 times the median of the steps around it, so that both a missing
+    ascent and the change from ascents to hourly model times show as they are.
     """
     if time.size == 1:
         return time - _LONE_WIDTH // 2, time + _LONE_WIDTH // 2
     step = np.diff(time).astype(float)
-    # A step is judged against the shorter of its neighbours' steps, so that both a missing ascent
-    # and the change from ascents to hourly model times show as they are.
-    around = np.stack([np.append(step[1:], np.inf), np.insert(step[:-1], 0, np.inf)])
-    usual = np.maximum(np.where(np.isinf(around), -np.inf, around).max(axis=0), 0.0)
-    usual = np.where(usual > 0.0, usual, step)
-    gap = step > _GAP * usual
-    half = 0.5 * np.where(gap, np.minimum(usual, step), step)
+    around = np.pad(step, _NEAR, constant_values=np.nan)
+    around = np.sort(np.lib.stride_tricks.sliding_window_view(around, 2 * _NEAR + 1), axis=1)
+    middle = (np.isfinite(around).sum(axis=1) - 1) // 2  # of an even number, the shorter
+    usual = around[np.arange(step.size), middle]
+    half = 0.5 * np.minimum(np.where(step > _GAP * usual, usual, step), _WIDEST.astype(float))
     right = time + np.append(half, half[-1]).astype("timedelta64[s]")
     left = time - np.insert(half, 0, half[0]).astype("timedelta64[s]")
     return left, right
@@ -160,15 +184,34 @@ def _strip(outlook: xr.Dataset, rows: np.ndarray, kind: str, item: int, label: s
     return Strip(label, kind, *values)
 
 
+def _daylight(
+    outlook: xr.Dataset, rows: np.ndarray, start: np.datetime64, end: np.datetime64
+) -> tuple[np.ndarray, np.ndarray]:
+    """Times and whether it is night (0), twilight (1) or day (2) then; −1 without a position."""
+    length = end - start
+    steps = min(max(int(length / _SUN_STEP), 2), _MOST_SUN_STEPS)
+    seconds = (np.arange(steps) + 0.5) * length.astype(float) / steps
+    time = start + seconds.astype("timedelta64[s]")
+    latitude, longitude = (outlook[n].values[rows] for n in ("latitude", "longitude"))
+    placed = np.flatnonzero(np.isfinite(latitude) & np.isfinite(longitude))
+    if placed.size == 0:
+        return time, np.full(steps, -1)
+    altitude = sun_altitude(time, float(latitude[placed[0]]), float(longitude[placed[0]]))
+    # The Sun's upper limb is seen on the horizon at -0.833°: 34' refraction, 16' radius.
+    return time, (altitude > CIVIL_TWILIGHT).astype(int) + (altitude > -0.833)
+
+
 def _rows_gradient(outlook: xr.Dataset, rows: np.ndarray, edges: np.ndarray) -> np.ndarray:
     """Gradient dM/dz (per km) of the native layer around the middle of each row."""
     middle = 0.5 * (edges[1:] + edges[:-1])
     out = np.full((rows.size, middle.size), np.nan)
     height = outlook["height"].values
+    refractivity = outlook["refractivity"].values
     gradient = outlook["refractivity_gradient"].values
     radius = outlook["earth_radius"].values
     for i, row in enumerate(rows):
-        good = np.isfinite(height[row])
+        # The gradient of a level is that to the next one with a refractivity.
+        good = np.isfinite(height[row]) & np.isfinite(refractivity[row])
         z = height[row][good]
         steepness = gradient[row][good] + 1e9 / radius[row]
         layer = np.searchsorted(z, middle, side="right") - 1

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import io
+import warnings
 from typing import Any
 
 import matplotlib
@@ -10,6 +12,7 @@ from matplotlib import dates as mdates
 from matplotlib.axes import Axes
 from matplotlib.collections import PolyCollection, QuadMesh
 from matplotlib.colors import ListedColormap, Normalize
+from matplotlib.figure import Figure
 
 from forecast.output.chart_data import Strip, TimeHeight
 
@@ -24,6 +27,7 @@ __all__ = [
     "draw_gradient",
     "draw_light",
     "draw_likelihood",
+    "figure_bytes",
     "mark_forecast",
 ]
 
@@ -40,6 +44,17 @@ CHART_STYLE: Any = {
     "svg.fonttype": "none",
     "path.simplify": True,
 }
+
+
+def figure_bytes(figure: Figure, ending: str) -> bytes:
+    """The figure as ``png`` or ``svg``: the same bytes for the same figure."""
+    stamps = {"png": {"Software": None}, "svg": {"Date": None, "Creator": None}}
+    buffer = io.BytesIO()
+    with matplotlib.rc_context(CHART_STYLE), warnings.catch_warnings():
+        # Names may hold letters that the font lacks: they are drawn as boxes, no news for a log.
+        warnings.filterwarnings("ignore", message="Glyph .* missing from")
+        figure.savefig(buffer, format=ending, metadata=stamps[ending])
+    return buffer.getvalue()
 
 
 def chosen_strips(strips: list[Strip]) -> tuple[list[Strip], int]:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import io
 import textwrap
 from datetime import UTC
 from pathlib import Path
@@ -30,6 +29,7 @@ from forecast.output.chart_layers import (
     draw_gradient,
     draw_light,
     draw_likelihood,
+    figure_bytes,
     mark_forecast,
 )
 from forecast.output.files import write_bytes_atomic
@@ -137,12 +137,9 @@ def save_chart(figure: Figure, stem: str | Path) -> dict[str, Any]:
         "alt": getattr(figure, "text_alternative", ""),
         "file": f"{Path(stem).name}.svg",
     }
-    with matplotlib.rc_context(CHART_STYLE):
-        for ending, meta in (("png", {"Software": None}), ("svg", {"Date": None, "Creator": None})):
-            buffer = io.BytesIO()
-            figure.savefig(buffer, format=ending, metadata=meta)
-            out[ending] = buffer.getvalue()
-            write_bytes_atomic(Path(f"{stem}.{ending}"), out[ending])
+    for ending in ("png", "svg"):
+        out[ending] = figure_bytes(figure, ending)
+        write_bytes_atomic(Path(f"{stem}.{ending}"), out[ending])
     figure.clear()
     return out
 
@@ -217,7 +214,7 @@ def _draw_strip(axis: Axes, data: TimeHeight, strip: Strip) -> None:
     weight = "bold" if strip.kind == "sightline" else "normal"
     axis.set_ylabel(
         "\n".join(textwrap.wrap(label, 25)), rotation=0, ha="right", va="center", fontsize=8.5,
-        fontweight=weight,
+        fontweight=weight, parse_math=False,
     )  # fmt: skip
     most = f"max {percent(best)}" if best >= 0.0 else "unknown"
     axis.text(1.008, 0.5, most, transform=axis.transAxes, va="center", fontsize=8, color=INK)

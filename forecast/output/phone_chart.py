@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import io
 import textwrap
 from datetime import UTC
 from typing import TYPE_CHECKING
@@ -23,6 +22,7 @@ from forecast.output.chart_layers import (
     draw_gradient,
     draw_light,
     draw_likelihood,
+    figure_bytes,
     mark_forecast,
 )
 from forecast.output.text import local_time, percent, shorten
@@ -134,6 +134,4 @@ def phone_chart(
             0.02, 1.0 - 0.3 / height, "\n".join(textwrap.wrap(answer, 58)), fontsize=8, va="top",
             color=INK, parse_math=False,
         )  # fmt: skip
-        buffer = io.BytesIO()
-        figure.savefig(buffer, format="png", metadata={"Software": None})
-    return buffer.getvalue()
+    return figure_bytes(figure, "png")

@@ -17,7 +17,7 @@ if TYPE_CHECKING:
     from forecast.outlook import Window
     from forecast.output.chart_data import TimeHeight
 
-__all__ = ["chart_text", "local_time", "metres", "percent", "shorten"]
+__all__ = ["chart_text", "day_and_month", "local_time", "metres", "percent", "shorten"]
 
 _MONTHS = ("Jan", "Feb", "Mar", "Apr", "May", "Jun", "Jul", "Aug", "Sep", "Oct", "Nov", "Dec")
 
@@ -37,7 +37,12 @@ def metres(height: float) -> str:
 def local_time(time: datetime, zone: tzinfo) -> str:
     """Day, month and time, such as 3 Jun 18:07; English month names in any locale."""
     there = time.astimezone(zone)
-    return f"{there.day} {_MONTHS[there.month - 1]} {there:%H:%M}"
+    return f"{day_and_month(there)} {there:%H:%M}"
+
+
+def day_and_month(time: datetime) -> str:
+    """Day and month, such as 3 Jun; English month names in any locale."""
+    return f"{time.day} {_MONTHS[time.month - 1]}"
 
 
 def shorten(text: str, limit: int) -> str:

@@ -3,13 +3,15 @@
 from __future__ import annotations
 
 import io
+from dataclasses import replace
 
 import numpy as np
 import pytest
 from matplotlib.image import imread
 
-from forecast.output.chart_data import column_edges, time_height
+from forecast.output.chart_data import best_profile, column_edges, time_height
 from forecast.output.charts import draw_time_height, save_chart
+from forecast.output.phone_chart import phone_chart
 from tests.output.conftest import HOSTILE
 
 
@@ -55,6 +57,59 @@ def test_columns_meet_half_way_and_leave_gaps_open():
     # 12 h without an ascent: neither neighbour is smeared over it.
     assert right[2] == seconds(15)[()]
     assert left[3] == seconds(21)[()]
+
+
+def test_ascents_missing_on_both_sides_leave_two_gaps():
+    # The usual step is 6 h however many of its neighbours are missing too.
+    left, right = column_edges(seconds(0, 6, 12, 24, 36, 42, 48))
+    assert right[3] - left[3] == np.timedelta64(6, "h")
+    assert (left[[3, 4]] > right[[2, 3]]).all()
+
+
+def test_hourly_then_three_hourly_model_times_leave_no_gap():
+    left, right = column_edges(seconds(*range(12), *range(12, 40, 3)))
+    assert (right[:-1] == left[1:]).all()
+
+
+def test_no_profile_stands_for_more_than_a_day():
+    left, right = column_edges(seconds(0, 24 * 7, 24 * 14))
+    assert (right - left == np.timedelta64(24, "h")).all()
+
+
+def test_a_level_without_refractivity_leaves_no_hole(case):
+    outlook = case[0].isel(profile=case[0]["site"].values == "cape").copy(deep=True)
+    # The gradient of a level is that to the next one with a refractivity (schema).
+    outlook["refractivity"][0, 5] = np.nan
+    outlook["refractivity_gradient"][0, 5] = np.nan
+    data = time_height(outlook, "cape", 3000.0)
+    middle = 0.5 * (data.edges[1:] + data.edges[:-1])
+    z = outlook["height"].values[0]
+    hole = (middle > z[4]) & (middle < z[6])
+    steepness = outlook["refractivity_gradient"].values[0, 4] + 1e9 / float(
+        outlook["earth_radius"][0]
+    )
+    np.testing.assert_allclose(data.gradient[0, hole], steepness)
+
+
+def test_day_and_night_are_not_told_where_the_place_is_unknown(case):
+    outlook = case[0].isel(profile=case[0]["site"].values == "cape").copy(deep=True)
+    assert set(time_height(outlook, "cape", 3000.0).light) == {0, 1, 2}
+    outlook["latitude"][:] = np.nan
+    assert set(time_height(outlook, "cape", 3000.0).light) == {-1}
+
+
+def test_the_time_named_for_a_strip_lies_ahead(case):
+    data = time_height(case[0], "cape", 3000.0)
+    strip = data.strips[-1]
+    # Past ascents were surer; the planner is told of the forecast.
+    assert np.nanmax(strip.probability[data.ascent]) >= np.nanmax(strip.probability[~data.ascent])
+    best = best_profile(data, strip)
+    assert data.ahead[best]
+    assert strip.probability[best] == np.nanmax(strip.probability[data.ahead])
+    past = replace(data, ahead=np.zeros_like(data.ahead))
+    assert strip.probability[best_profile(past, strip)] == np.nanmax(strip.probability)
+    unknown = replace(strip, probability=np.full_like(strip.probability, np.nan))
+    assert best_profile(data, unknown) is None
 
 
 def test_change_from_six_hourly_to_hourly_is_no_gap():
@@ -113,3 +168,15 @@ def test_one_or_two_profiles_are_enough(case, tmp_path, rows):
 def test_an_unknown_site_is_a_clear_error(case):
     with pytest.raises(ValueError, match="no profile of site 'nowhere'"):
         time_height(case[0], "nowhere", 3000.0)
+
+
+@pytest.mark.parametrize("name", ["mast $\\frac{$ & co", "$x$", "灯台 \N{OCTOPUS}"])
+def test_names_are_drawn_as_they_are(case, tmp_path, name, recwarn):
+    # Between dollar signs stands a formula for the drawing library; names are none.
+    outlook = case[0].isel(profile=case[0]["site"].values == "cape").copy()
+    outlook["sightline_name"] = ("sightline", np.array([name, "other"]))
+    made = save_chart(draw_time_height(outlook, "cape"), tmp_path / "c")
+    phone_chart(outlook, "cape")
+    assert name.replace("&", "&amp;") in made["svg"].decode()
+    # A letter that the font lacks is no news for the log of every night.
+    assert not recwarn.list
