@@ -21,7 +21,7 @@ _SUN_STEP = np.timedelta64(600, "s")
 _MOST_SUN_STEPS = 6000
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Strip:
     """Probability of one thing over time: label and arrays (profile,)."""
 

@@ -14,7 +14,8 @@ from matplotlib.collections import PolyCollection, QuadMesh
 from matplotlib.colors import ListedColormap, Normalize
 from matplotlib.figure import Figure
 
-from forecast.output.chart_data import Strip, TimeHeight
+from forecast.output.chart_data import Strip, TimeHeight, best_profile
+from forecast.output.text import percent
 
 __all__ = [
     "CHART_STYLE",
@@ -29,6 +30,7 @@ __all__ = [
     "draw_likelihood",
     "figure_bytes",
     "mark_forecast",
+    "most_of",
 ]
 
 _GRADIENT_RANGE = (-150.0, 260.0)  # dM/dz per km; trapping below 0
@@ -169,11 +171,17 @@ def _add_bars(
     axis.add_collection(PolyCollection(list(corners), linewidth=0.0, rasterized=True, **style))
 
 
-def draw_bars(axis: Axes, data: TimeHeight, strip: Strip) -> float:
-    """Probability as bars, with the interval as a lighter band around their ends.
+def most_of(data: TimeHeight, strip: Strip) -> str:
+    """Say the largest probability of a strip in a few letters: of what lies ahead, if any does."""
+    best = best_profile(data, strip)
+    if best is None:
+        return "unknown"
+    most = percent(float(strip.probability[best]))
+    return f"{most} ahead" if data.ahead.any() and not data.ahead.all() else f"max {most}"
 
-    Returns the largest probability, −1 if none is known.
-    """
+
+def draw_bars(axis: Axes, data: TimeHeight, strip: Strip) -> None:
+    """Probability as bars, with the interval as a lighter band around their ends."""
     x = mdates.date2num(data.left)
     width = mdates.date2num(data.right) - x
     known = np.isfinite(strip.probability)
@@ -189,4 +197,3 @@ def draw_bars(axis: Axes, data: TimeHeight, strip: Strip) -> float:
     axis.tick_params(axis="y", labelleft=False, length=0)
     axis.grid(axis="y", color="white", lw=0.8)
     axis.set_axisbelow(False)
-    return float(np.nanmax([*strip.probability, -1.0]))

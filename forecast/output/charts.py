@@ -31,6 +31,7 @@ from forecast.output.chart_layers import (
     draw_likelihood,
     figure_bytes,
     mark_forecast,
+    most_of,
 )
 from forecast.output.files import write_bytes_atomic
 from forecast.output.text import chart_text, local_time, percent, shorten
@@ -209,15 +210,22 @@ def _draw_profile(axis: Axes, outlook: xr.Dataset, row: int, top: float) -> None
 
 def _draw_strip(axis: Axes, data: TimeHeight, strip: Strip) -> None:
     """Draw the bars with their label on the left and the largest on the right."""
-    best = draw_bars(axis, data, strip)
+    draw_bars(axis, data, strip)
     label = shorten(strip.label, 44)
     weight = "bold" if strip.kind == "sightline" else "normal"
     axis.set_ylabel(
         "\n".join(textwrap.wrap(label, 25)), rotation=0, ha="right", va="center", fontsize=8.5,
         fontweight=weight, parse_math=False,
     )  # fmt: skip
-    most = f"max {percent(best)}" if best >= 0.0 else "unknown"
-    axis.text(1.008, 0.5, most, transform=axis.transAxes, va="center", fontsize=8, color=INK)
+    axis.text(
+        1.008,
+        0.5,
+        most_of(data, strip),
+        transform=axis.transAxes,
+        va="center",
+        fontsize=8,
+        color=INK,
+    )
 
 
 def _time_axes(

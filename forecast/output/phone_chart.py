@@ -24,6 +24,7 @@ from forecast.output.chart_layers import (
     draw_likelihood,
     figure_bytes,
     mark_forecast,
+    most_of,
 )
 from forecast.output.text import local_time, percent, shorten
 
@@ -96,13 +97,12 @@ def phone_chart(
         at = head + main + 0.2
         for strip in strips:
             row = figure.add_axes(place(at + _LABEL, _STRIP))
-            best = draw_bars(row, data, strip)
+            draw_bars(row, data, strip)
             weight = "bold" if strip.kind == "sightline" else "normal"
-            most = f"max {percent(best)}" if best >= 0.0 else "unknown"
+            label = f"{shorten(strip.label, 40)}: {most_of(data, strip)}"
             row.set_title(
-                f"{shorten(strip.label, 40)}: {most}", fontsize=8, loc="left", pad=2.0,
-                fontweight=weight, parse_math=False,
-            )  # fmt: skip
+                label, fontsize=8, loc="left", pad=2.0, fontweight=weight, parse_math=False
+            )
             rows.append(row)
             at += _LABEL + _STRIP
         span = mdates.date2num([data.left.min(), data.right.max()])
