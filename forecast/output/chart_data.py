@@ -131,13 +131,16 @@ def best_profile(data: TimeHeight, strip: Strip) -> int | None:
     Returns
     -------
     int or None
-        Index along ``profile``, the earliest of equals; None if no probability is known.
+        Index along ``profile``, of equals the surest and then the earliest; None if no probability
+        is known.
     """
     known = np.isfinite(strip.probability)
     choice = known & data.ahead if data.ahead.any() else known
     if not choice.any():
         return None
-    return int(np.argmax(np.where(choice, strip.probability, -1.0)))
+    lower = np.nan_to_num(strip.lower, nan=-1.0)
+    chance = np.where(choice, strip.probability, -1.0)
+    return int(np.lexsort((data.time, -lower, -chance))[0])
 
 
 def column_edges(time: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import io
 import warnings
+from datetime import UTC
 from typing import Any
+from zoneinfo import ZoneInfo
 
 import matplotlib
 import numpy as np
@@ -13,15 +15,26 @@ from matplotlib.axes import Axes
 from matplotlib.collections import PolyCollection, QuadMesh
 from matplotlib.colors import ListedColormap, Normalize
 from matplotlib.figure import Figure
+from matplotlib.patheffects import withStroke
 
-from forecast.output.chart_data import Strip, TimeHeight, best_profile
-from forecast.output.text import percent
+from forecast.output.chart_data import Strip, TimeHeight, best_profile, utc
+from forecast.output.colours import (
+    GRADIENT_RANGE,
+    INK,
+    INTERVAL,
+    LIGHT,
+    LIKELIHOOD,
+    NO_DATA,
+    gradient_colours,
+)
+from forecast.output.text import local_time, percent
+from forecast.output.time_axis import time_ticks
 
 __all__ = [
     "CHART_STYLE",
-    "FAINT",
-    "INK",
     "LIKELY",
+    "LIKELY_STYLES",
+    "LIKELY_WIDTHS",
     "STANDARD_GRADIENT",
     "chosen_strips",
     "draw_bars",
@@ -30,15 +43,17 @@ __all__ = [
     "draw_likelihood",
     "figure_bytes",
     "mark_forecast",
-    "most_of",
+    "mark_profiles",
+    "set_time_axes",
+    "strip_remark",
 ]
 
-_GRADIENT_RANGE = (-150.0, 260.0)  # dM/dz per km; trapping below 0
 STANDARD_GRADIENT = 118.0  # dM/dz per km in standard air, k = 4/3
-LIKELY = (0.3, 0.6, 0.9)  # outlines of the likelihood of lying inside a duct
+_STRETCHED_TICKS = (0, 30, 100, 200, 300, 500, 750, 1000, 1500, 2000, 3000, 4000, 5000)
+LIKELY = (0.3, 0.9)  # outlines of the likelihood of lying inside a duct
+LIKELY_WIDTHS = (0.9, 1.4)
+LIKELY_STYLES = ("dashed", "solid")
 _MOST_STRIPS = 12
-INK = "#1b1b1b"
-FAINT = "#6b6b6b"
 CHART_STYLE: Any = {
     "font.family": "DejaVu Sans",
     "font.size": 9.5,
@@ -67,11 +82,6 @@ def chosen_strips(strips: list[Strip]) -> tuple[list[Strip], int]:
     return [s for s in strips if s in best], len(strips) - len(best)
 
 
-def _colours() -> ListedColormap:
-    """Cividis (Nuñez, Anderton & Renslow 2018): light where rays bend little, dark if trapped."""
-    return ListedColormap(matplotlib.colormaps["cividis"](np.linspace(0.0, 1.0, 256)))
-
-
 def draw_gradient(axis: Axes, data: TimeHeight, low_stretch: bool) -> QuadMesh:
     """Shade dM/dz of every native layer; one image artist, gaps left open."""
     edges = np.empty(2 * data.time.size)
@@ -84,12 +94,12 @@ def draw_gradient(axis: Axes, data: TimeHeight, low_stretch: bool) -> QuadMesh:
         edges,
         data.edges,
         np.ma.masked_invalid(values),
-        cmap=_colours(),
-        norm=Normalize(*_GRADIENT_RANGE),
+        cmap=gradient_colours(),
+        norm=Normalize(*GRADIENT_RANGE),
         rasterized=True,
         shading="flat",
     )
-    axis.set_facecolor("#e9e9e9")
+    axis.set_facecolor(NO_DATA)
     axis.set_ylim(0.0, data.edges[-1])
     if low_stretch:
         axis.set_yscale("function", functions=(_root, np.square))
@@ -97,6 +107,7 @@ def draw_gradient(axis: Axes, data: TimeHeight, low_stretch: bool) -> QuadMesh:
             [h for h in (0, 50, 100, 250, 500, 1000, 2000, 3000) if h <= data.edges[-1]]
         )
         axis.set_ylim(0.0, data.edges[-1])
+        axis.set_yticks([z for z in _STRETCHED_TICKS if z <= data.edges[-1]])
     return mesh
 
 
@@ -104,34 +115,51 @@ def _root(height: Any) -> Any:
     return np.sqrt(np.maximum(height, 0.0))
 
 
-def draw_likelihood(axis: Axes, data: TimeHeight) -> None:
-    """Outline where ducts lie: thicker and whiter the likelier."""
-    x = np.empty(2 * data.time.size)
-    x[0::2] = mdates.date2num(data.left)
-    x[1::2] = mdates.date2num(data.right)
-    values = np.repeat(np.nan_to_num(data.likelihood), 2, axis=0).T
+def draw_likelihood(axis: Axes, data: TimeHeight, weight: float = 1.0) -> None:
+    """Outline where ducts lie, the heavier the likelier; a gap in time ends an outline."""
+    values = np.nan_to_num(data.likelihood)
     if values.max(initial=0.0) < LIKELY[0]:
         return
-    axis.contour(
+    edges = np.stack([data.left, data.right], axis=1)
+    # Two points per profile, and two of nothing in every gap.
+    gaps = np.flatnonzero(data.left[1:] > data.right[:-1]) + 1
+    empty = np.stack([data.right[gaps - 1], data.left[gaps]], axis=1)
+    x = mdates.date2num(np.insert(edges, gaps, empty, axis=0).ravel())
+    values = np.repeat(np.insert(values, gaps, 0.0, axis=0), 2, axis=0)
+    lines = axis.contour(
         x,
         data.bins,
-        values,
+        values.T,
         levels=LIKELY,
-        colors="white",
-        linewidths=[0.7, 1.2, 1.9],
-        linestyles=["dotted", "dashed", "solid"],
+        colors=LIKELIHOOD,
+        linewidths=[weight * width for width in LIKELY_WIDTHS],
+        linestyles=LIKELY_STYLES,
     )
+    # A pale rim keeps the lines apart from dark layers.
+    lines.set_path_effects([withStroke(linewidth=2.2 * weight, foreground="white")])
 
 
 def mark_forecast(axis: Axes, data: TimeHeight) -> None:
     """Draw a line where the forecast begins, after the latest ascent."""
-    if data.ascent.any() and not data.ascent.all():
+    if data.ascent.any() and data.ahead.any():
         latest = mdates.date2num(data.right[data.ascent].max())
-        axis.axvline(latest, color="white", lw=1.4)
+        axis.axvline(latest, color=INK, lw=1.2)
         axis.text(
-            latest, 0.9, " forecast →", color="white", fontsize=8.5,
+            latest, 0.955, " forecast →", color=INK, fontsize=8.5, va="center",
             transform=axis.get_xaxis_transform(),
         )  # fmt: skip
+
+
+def mark_profiles(axis: Axes, data: TimeHeight, weight: float = 1.0) -> None:
+    """A strip with a triangle for every ascent and a dash for every model profile."""
+    when = mdates.date2num(data.time)
+    for mask, marker, size in ((data.ascent, "^", 16), (~data.ascent, "|", 14)):
+        axis.scatter(
+            when[mask], np.full(mask.sum(), 0.5), s=size * weight**2, marker=marker,
+            color=INK, linewidths=0.7 * weight, clip_on=False,
+        )  # fmt: skip
+    axis.set_ylim(0.0, 1.0)
+    axis.set_axis_off()
 
 
 def draw_light(axis: Axes, data: TimeHeight) -> None:
@@ -143,13 +171,12 @@ def draw_light(axis: Axes, data: TimeHeight) -> None:
         edges,
         [0.0, 1.0],
         data.light[None, :],
-        cmap=ListedColormap(["#30343b", "#9aa1ab", "#f7f3df"]),
-        vmin=0,
+        cmap=ListedColormap([NO_DATA, *LIGHT]),
+        vmin=-1,
         vmax=2,
         rasterized=True,
     )
     axis.set_yticks([])
-    axis.set_ylabel("night · twilight · day", rotation=0, ha="right", va="center", fontsize=8)
 
 
 def _add_bars(
@@ -171,29 +198,53 @@ def _add_bars(
     axis.add_collection(PolyCollection(list(corners), linewidth=0.0, rasterized=True, **style))
 
 
-def most_of(data: TimeHeight, strip: Strip) -> str:
-    """Say the largest probability of a strip in a few letters: of what lies ahead, if any does."""
-    best = best_profile(data, strip)
-    if best is None:
-        return "unknown"
-    most = percent(float(strip.probability[best]))
-    return f"{most} ahead" if data.ahead.any() and not data.ahead.all() else f"max {most}"
-
-
 def draw_bars(axis: Axes, data: TimeHeight, strip: Strip) -> None:
     """Probability as bars, with the interval as a lighter band around their ends."""
     x = mdates.date2num(data.left)
     width = mdates.date2num(data.right) - x
     known = np.isfinite(strip.probability)
-    axis.set_facecolor("#f5f5f5")
+    axis.set_facecolor(NO_DATA)
     none, whole = np.zeros(x.size), np.ones(x.size)
-    _add_bars(axis, x, width, none, strip.probability, known, color="#00224e")
-    _add_bars(axis, x, width, strip.lower, strip.upper, known, color="#d3b13b", alpha=0.75)
+    _add_bars(axis, x, width, none, whole, whole > 0.0, color="#f5f5f5")
+    _add_bars(axis, x, width, none, strip.probability, known, color=LIKELIHOOD)
+    _add_bars(axis, x, width, strip.lower, strip.upper, known, color=INTERVAL, alpha=0.8)
     _add_bars(
         axis, x, width, none, whole, ~known, facecolor="none", edgecolor="#aaaaaa", hatch="////"
     )
     axis.set_ylim(0.0, 1.0)
     axis.set_yticks([0.5])
     axis.tick_params(axis="y", labelleft=False, length=0)
-    axis.grid(axis="y", color="white", lw=0.8)
+    axis.grid(axis="y", color="#bbbbbb", lw=0.6)
     axis.set_axisbelow(False)
+
+
+def strip_remark(data: TimeHeight, strip: Strip) -> str:
+    """How likely, how sure and when, for the time of the strip worth naming."""
+    best = best_profile(data, strip)
+    if best is None:
+        return "cannot tell"
+    if not strip.probability[best] >= 0.005:
+        return percent(0.0)
+    lower, upper = (f"{100.0 * a[best]:.0f}" for a in (strip.lower, strip.upper))
+    when = local_time(utc(data.time[best]), UTC)
+    return f"{percent(strip.probability[best])} ({lower}–{upper})\n{when}"
+
+
+def set_time_axes(
+    axes: list[Axes], data: TimeHeight, zone: ZoneInfo, most: int, size: float
+) -> Axes:
+    """Give stacked axes one span of time: UTC at the lowest, local time above the first.
+
+    Returns the axis of local time, for its name.
+    """
+    ends = utc(data.left.min()), utc(data.right.max())
+    for axis in axes:
+        axis.set_xlim(*mdates.date2num(ends))
+        axis.set_xticks(mdates.date2num([time for time, _ in time_ticks(*ends, UTC, most)]))
+        axis.tick_params(axis="x", labelbottom=False, length=0)
+    upper: Any = axes[0].secondary_xaxis("top")
+    for axis, tz in ((axes[-1], UTC), (upper, zone)):
+        ticks = time_ticks(*ends, tz, most)
+        axis.set_xticks(mdates.date2num([time for time, _ in ticks]), [text for _, text in ticks])
+        axis.tick_params(axis="x", labelsize=size, labelbottom=axis is axes[-1], length=3)
+    return upper

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import textwrap
-from datetime import UTC
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 from zoneinfo import ZoneInfo
@@ -11,18 +10,19 @@ from zoneinfo import ZoneInfo
 import matplotlib
 import numpy as np
 import xarray as xr
-from matplotlib import dates as mdates
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.collections import QuadMesh
 from matplotlib.figure import Figure
+from matplotlib.lines import Line2D
+from matplotlib.patches import Patch
 
-from forecast.output.chart_data import Strip, TimeHeight, time_height, utc
+from forecast.output.chart_data import TimeHeight, time_height, utc
 from forecast.output.chart_layers import (
     CHART_STYLE,
-    FAINT,
-    INK,
     LIKELY,
+    LIKELY_STYLES,
+    LIKELY_WIDTHS,
     STANDARD_GRADIENT,
     chosen_strips,
     draw_bars,
@@ -31,16 +31,25 @@ from forecast.output.chart_layers import (
     draw_likelihood,
     figure_bytes,
     mark_forecast,
-    most_of,
+    mark_profiles,
+    set_time_axes,
+    strip_remark,
 )
+from forecast.output.colours import FAINT, INK, LIKELIHOOD, NO_DATA, gradient_colours
 from forecast.output.files import write_bytes_atomic
-from forecast.output.text import chart_text, local_time, percent, shorten
+from forecast.output.text import answer_lines, chart_text, percent, shorten
 from forecast.schema import CAUTION
 
 if TYPE_CHECKING:
     from forecast.outlook import Window
 
 __all__ = ["draw_time_height", "save_chart"]
+
+# Inches, from the left and from the top.
+_WIDTH = 11.0
+_LEFT, _MIDDLE, _BESIDE, _RIGHT = 2.3, 4.7, 5.95, 9.75
+_HEAD, _MAIN, _STRIP, _SPACE, _FOOT = 1.58, 3.7, 0.34, 0.08, 0.98
+_TICKS = 13
 
 
 def draw_time_height(
@@ -76,46 +85,56 @@ def draw_time_height(
     """
     data = time_height(outlook, site, top)
     zone = ZoneInfo(timezone)
+    mine = [w for w in windows or [] if w.site == site]
+    strips, left_out = chosen_strips(data.strips)
+    single = data.time.size == 1
     with matplotlib.rc_context(CHART_STYLE):
-        strips, left_out = chosen_strips(data.strips)
-        single = data.time.size == 1
-        tall = 3.9 + 0.36 * len(strips)
-        figure = Figure(figsize=(11.0, tall + 2.2), dpi=110, facecolor="white")
+        height = _HEAD + _MAIN + 0.42 + len(strips) * (_STRIP + _SPACE) + _FOOT
+        figure = Figure(figsize=(_WIDTH, height), dpi=110, facecolor="white")
         FigureCanvasAgg(figure)
-        height = figure.get_figheight()
-        grid = figure.add_gridspec(
-            len(strips) + 2,
-            2 if single else 1,
-            height_ratios=[3.7, 0.16, *[0.36] * len(strips)],
-            left=0.225,
-            right=0.915,
-            top=1.0 - 1.22 / height,
-            bottom=1.0 / height,
-            hspace=0.12,
-        )
-        axis = figure.add_subplot(grid[0, 0])
-        span = mdates.date2num([data.left.min(), data.right.max()])
+        right = _MIDDLE if single else _RIGHT
+
+        def add(from_top: float, tall: float, ends: tuple[float, float] = (_LEFT, right)) -> Axes:
+            wide = (ends[1] - ends[0]) / _WIDTH
+            bottom = 1.0 - (from_top + tall) / height
+            return figure.add_axes((ends[0] / _WIDTH, bottom, wide, tall / height))
+
+        axis = add(_HEAD, _MAIN)
         mesh = draw_gradient(axis, data, low_stretch)
         draw_likelihood(axis, data)
-        _mark_profiles(axis, data)
         mark_forecast(axis, data)
-        axis.set_xlim(*span)
         axis.set_ylabel("height above ground (m)")
-        _colour_bar(figure, axis, mesh, height)
+        _colour_bar(add(_HEAD, _MAIN, (_RIGHT + 0.12, _RIGHT + 0.26)), mesh)
         if single:
-            _draw_profile(figure.add_subplot(grid[0, 1]), outlook, int(data.rows[0]), top)
-        light = figure.add_subplot(grid[1, 0])
+            beside = add(_HEAD, _MAIN, (_BESIDE, _RIGHT))
+            _draw_profile(beside, outlook, int(data.rows[0]), data.edges[-1], axis)
+        marks = add(_HEAD + _MAIN + 0.03, 0.14)
+        mark_profiles(marks, data)
+        light = add(_HEAD + _MAIN + 0.19, 0.15)
         draw_light(light, data)
-        below = [light]
+        _label(marks, "ascents ▲  model times |")
+        _label(light, "night · twilight · day")
+        best = "best ahead (UTC)" if data.ahead.any() and data.ascent.any() else "best (UTC)"
+        _remark(light, best, FAINT)
+        below = [marks, light]
         for i, strip in enumerate(strips):
-            row = figure.add_subplot(grid[2 + i, 0])
-            _draw_strip(row, data, strip)
+            row = add(_HEAD + _MAIN + 0.42 + i * (_STRIP + _SPACE), _STRIP)
+            draw_bars(row, data, strip)
+            name = "\n".join(textwrap.wrap(shorten(strip.label, 44), 25))
+            _label(row, name, "bold" if strip.kind == "sightline" else "normal")
+            _remark(row, strip_remark(data, strip))
             below.append(row)
-        for row in below:
-            row.set_xlim(*span)
-        _time_axes(axis, below[-1], [axis, *below[:-1]], span, zone)
-        _title(figure, outlook, data, windows or [], zone, height)
-        _footer(figure, outlook, data, left_out, height)
+        set_time_axes([axis, *below], data, zone, _TICKS // 3 if single else _TICKS, 8.0)
+        # Beside the ticks, in the margin: no line is lost to it.
+        for home, at, where, name in (
+            (axis, 1.012, "bottom", f"local time\n{zone.key}"),
+            (below[-1], -0.12, "top", "UTC"),
+        ):
+            home.text(1.012, at, name, transform=home.transAxes, va=where, fontsize=8, color=FAINT)
+        axis.grid(axis="x", color="white", lw=0.5, alpha=0.6)
+        _header(figure, outlook, data, mine, zone)
+        _footer(figure, outlook, data, left_out)
+    figure.text_alternative = chart_text(outlook, data, mine, zone)  # type: ignore[attr-defined]
     return figure
 
 
@@ -145,157 +164,104 @@ def save_chart(figure: Figure, stem: str | Path) -> dict[str, Any]:
     return out
 
 
-def _mark_profiles(axis: Axes, data: TimeHeight) -> None:
-    """Ticks for ascents and model times."""
-    when = mdates.date2num(data.time)
-    across = axis.get_xaxis_transform()
-    for mask, marker, size, label in (
-        (data.ascent, "^", 20, "ascent"),
-        (~data.ascent, "|", 12, "model profile"),
-    ):
-        if mask.any():
-            axis.scatter(
-                when[mask], np.full(mask.sum(), 0.012), s=size, marker=marker, color="white",
-                edgecolors=INK if marker == "^" else None, linewidths=0.6, transform=across,
-                label=label, zorder=5,
-            )  # fmt: skip
-    handles, labels = axis.get_legend_handles_labels()
-    lines = [
-        matplotlib.lines.Line2D([], [], color="white", lw=w, ls=s)
-        for w, s in ((0.7, "dotted"), (1.2, "dashed"), (1.9, "solid"))
-    ]
-    axis.legend(
-        [*handles, *lines],
-        [*labels, *[f"in a duct, {100 * p:.0f} % of members" for p in LIKELY]],
-        loc="upper left",
-        ncols=5,
-        fontsize=7.5,
-        framealpha=0.75,
-        facecolor="#3a3a3a",
-        labelcolor="white",
-        handlelength=1.8,
-        columnspacing=1.0,
-        borderpad=0.35,
-    )
+def _label(axis: Axes, text: str, weight: str = "normal") -> None:
+    """Name a strip on its left."""
+    axis.text(
+        -0.012, 0.5, text, transform=axis.transAxes, ha="right", va="center", fontsize=8.5,
+        fontweight=weight, color=INK, parse_math=False,
+    )  # fmt: skip
 
 
-def _colour_bar(figure: Figure, axis: Axes, mesh: QuadMesh, height: float) -> None:
-    box = axis.get_position()
-    bar_axis = figure.add_axes((0.925, box.y0, 0.013, box.height))
-    bar = figure.colorbar(mesh, cax=bar_axis, extend="both", extendfrac=0.03)
+def _remark(axis: Axes, text: str, colour: str = INK) -> None:
+    """Say a number on the right of a strip."""
+    axis.text(
+        1.012, 0.5, text, transform=axis.transAxes, va="center", fontsize=8, color=colour,
+        linespacing=1.05,
+    )  # fmt: skip
+
+
+def _colour_bar(axis: Axes, mesh: QuadMesh) -> None:
+    figure = axis.get_figure(root=True)
+    assert figure is not None
+    bar = figure.colorbar(mesh, cax=axis)
     bar.set_ticks([-100.0, 0.0, STANDARD_GRADIENT, 200.0])
     bar.set_ticklabels(["−100", "0", "118", "200"])
-    bar.ax.axhline(0.0, color="white", lw=1.6)
-    bar.ax.tick_params(labelsize=8)
+    axis.tick_params(labelsize=8)
     bar.set_label("dM/dz (per km): below 0 trapping, 118 standard air", fontsize=8)
 
 
-def _draw_profile(axis: Axes, outlook: xr.Dataset, row: int, top: float) -> None:
+def _draw_profile(axis: Axes, outlook: xr.Dataset, row: int, top: float, beside: Axes) -> None:
     """M by height, with ducts shaded, beside a lone profile."""
     z = outlook["height"].values[row]
     m = outlook["modified_refractivity"].values[row]
-    good = np.isfinite(z) & (z <= top)
+    good = np.isfinite(z) & np.isfinite(m) & (z <= top)
+    axis.sharey(beside)
     axis.plot(m[good], z[good], color=INK, lw=1.2)
     least = float(outlook.attrs.get("minimum_duct_strength", 0.0))
     base, end = outlook["duct_base"].values[row], outlook["duct_top"].values[row]
     for b, e, s in zip(base, end, outlook["duct_strength"].values[row], strict=True):
         if np.isfinite(s) and s >= least and b < top:
-            axis.axhspan(b, min(e, top), color="#00224e", alpha=0.25, lw=0)
-    axis.set_ylim(0.0, top)
-    axis.set_xlabel("modified refractivity M", fontsize=8.5)
-    axis.tick_params(labelleft=False, labelsize=8)
-    axis.set_title("M of the profile; ducts shaded", fontsize=8.5)
+            axis.axhspan(b, min(e, top), color=LIKELIHOOD, alpha=0.3, lw=0)
+    axis.set_xlabel("modified refractivity M", fontsize=8)
+    axis.xaxis.set_label_position("top")
+    axis.tick_params(labelleft=False, labelsize=8, top=True, labeltop=True, labelbottom=False)
     axis.grid(color="#dddddd", lw=0.5)
 
 
-def _draw_strip(axis: Axes, data: TimeHeight, strip: Strip) -> None:
-    """Draw the bars with their label on the left and the largest on the right."""
-    draw_bars(axis, data, strip)
-    label = shorten(strip.label, 44)
-    weight = "bold" if strip.kind == "sightline" else "normal"
-    axis.set_ylabel(
-        "\n".join(textwrap.wrap(label, 25)), rotation=0, ha="right", va="center", fontsize=8.5,
-        fontweight=weight, parse_math=False,
-    )  # fmt: skip
-    axis.text(
-        1.008,
-        0.5,
-        most_of(data, strip),
-        transform=axis.transAxes,
-        va="center",
-        fontsize=8,
-        color=INK,
-    )
-
-
-def _time_axes(
-    upper: Axes, lowest: Axes, others: list[Axes], span: np.ndarray, zone: ZoneInfo
+def _header(
+    figure: Figure, outlook: xr.Dataset, data: TimeHeight, windows: list[Window], zone: ZoneInfo
 ) -> None:
-    """UTC at the bottom, local time at the top."""
-    for axis in others:
-        axis.tick_params(axis="x", labelbottom=False, length=0)
-    days = span[1] - span[0]
-    scales: list[tuple[Any, Any, str]] = [
-        (lowest, UTC, "bottom"),
-        (upper.secondary_xaxis("top"), zone, "top"),
+    """Whose chart it is, the answer in words, and how to read the picture."""
+    height = figure.get_figheight()
+    title = f"{outlook.attrs.get('title', '')} · {data.site}"
+    lines = [title, *answer_lines(windows, zone)]
+    for text, at, size, weight in zip(
+        lines, (0.24, 0.53, 0.76), (10, 13, 10), ("normal", "bold", "normal"), strict=True
+    ):
+        figure.text(
+            0.02, 1.0 - at / height, shorten(text, 110), fontsize=size, fontweight=weight,
+            va="center", color=INK, parse_math=False,
+        )  # fmt: skip
+    dark = gradient_colours()(0.2)
+    handles = [
+        Patch(color=dark, label="layer that traps radio waves (dM/dz < 0)"),
+        *[
+            Line2D(
+                [],
+                [],
+                color=LIKELIHOOD,
+                lw=width,
+                ls=style,
+                label=f"in a duct: {percent(p)} of members",
+            )
+            for p, width, style in zip(LIKELY, LIKELY_WIDTHS, LIKELY_STYLES, strict=True)
+        ],
+        Patch(color=NO_DATA, label="no data"),
     ]
-    for axis, tz, where in scales:
-        hours = next(h for h in (1, 3, 6, 12, 24, 48, 96, 240) if days * 24 / h <= 13 or h == 240)
-        locator: mdates.DateLocator
-        if hours < 24:
-            locator = mdates.HourLocator(byhour=range(0, 24, hours), tz=tz)
-        else:
-            locator = mdates.DayLocator(interval=hours // 24, tz=tz)
-        axis.xaxis.set_major_locator(locator)
-        pattern = "%-d %b" if hours >= 24 else "%-d %b\n%H:%M"
-        axis.xaxis.set_major_formatter(mdates.DateFormatter(pattern, tz=tz))
-        axis.tick_params(axis="x", labelsize=8)
-        name = "UTC" if where == "bottom" else f"local time ({zone.key})"
-        axis.set_xlabel(name, fontsize=8.5, labelpad=2.0)
-    lowest.set_xlim(*span)
-    upper.grid(axis="x", color="white", lw=0.4, alpha=0.5)
-
-
-def _title(
-    figure: Figure,
-    outlook: xr.Dataset,
-    data: TimeHeight,
-    windows: list[Window],
-    zone: ZoneInfo,
-    height: float,
-) -> None:
-    mine = [w for w in windows if w.site == data.site]
-    figure.text(
-        0.02, 1.0 - 0.26 / height, shorten(f"{outlook.attrs.get('title', '')} · {data.site}", 90),
-        fontsize=13, fontweight="bold", va="center", color=INK, parse_math=False,
-    )  # fmt: skip
-    if mine:
-        w = mine[0]
-        answer = (
-            f"Best: {shorten(w.subject, 44)}, {local_time(w.best_time, UTC)} UTC "
-            f"({local_time(w.best_time, zone)} local): {percent(w.probability)} "
-            f"({percent(w.lower)} to {percent(w.upper)})"
-        )
-    else:
-        answer = "No window: nothing reaches the threshold."
-    figure.text(
-        0.02, 1.0 - 0.55 / height, answer, fontsize=10.5, va="center", color=INK, parse_math=False
+    figure.legend(
+        handles=handles,
+        loc="center left",
+        bbox_to_anchor=(0.014, 1.0 - 1.02 / height),
+        ncols=len(handles),
+        fontsize=8,
+        frameon=False,
+        handlelength=2.0,
+        columnspacing=1.4,
+        borderaxespad=0.0,
     )
-    figure.text_alternative = chart_text(outlook, data, mine, zone)  # type: ignore[attr-defined]
 
 
-def _footer(
-    figure: Figure, outlook: xr.Dataset, data: TimeHeight, left_out: int, height: float
-) -> None:
+def _footer(figure: Figure, outlook: xr.Dataset, data: TimeHeight, left_out: int) -> None:
     more = f" {left_out} more rows in the tables." if left_out else ""
     lines = [
         f"{data.ascent.sum()} ascents, {(~data.ascent).sum()} model profiles, "
         f"{utc(data.time[0]):%Y-%m-%d %H:%M} to {utc(data.time[-1]):%Y-%m-%d %H:%M} UTC. "
-        f"Bars: share of members (0 to 100 %), pale band: 90 % interval, hatched: cannot tell. "
+        f"Bars: share of members, 0 to 100 %; pale band: 90 % interval; hatched: cannot tell. "
         f"{str(outlook.attrs.get('calibration', '')).capitalize()}.{more}",
-        f"Source: {outlook.attrs.get('source', '')}. {CAUTION}",
+        f"Source: {outlook.attrs.get('source', '')}.",
+        CAUTION,
     ]
     figure.text(
-        0.02, 0.08 / height, "\n".join(lines), fontsize=7, va="bottom", color=FAINT,
-        parse_math=False, wrap=True,
+        0.02, 0.08 / figure.get_figheight(), "\n".join(lines), fontsize=7, va="bottom",
+        color=FAINT, parse_math=False, wrap=True,
     )  # fmt: skip

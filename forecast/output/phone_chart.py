@@ -3,20 +3,18 @@
 from __future__ import annotations
 
 import textwrap
-from datetime import UTC
 from typing import TYPE_CHECKING
 from zoneinfo import ZoneInfo
 
 import matplotlib
 import xarray as xr
-from matplotlib import dates as mdates
+from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 
 from forecast.output.chart_data import time_height
 from forecast.output.chart_layers import (
     CHART_STYLE,
-    INK,
     chosen_strips,
     draw_bars,
     draw_gradient,
@@ -24,9 +22,12 @@ from forecast.output.chart_layers import (
     draw_likelihood,
     figure_bytes,
     mark_forecast,
-    most_of,
+    mark_profiles,
+    set_time_axes,
+    strip_remark,
 )
-from forecast.output.text import local_time, percent, shorten
+from forecast.output.colours import INK
+from forecast.output.text import answer_lines, shorten
 
 if TYPE_CHECKING:
     from forecast.outlook import Window
@@ -35,8 +36,9 @@ __all__ = ["phone_chart"]
 
 _WIDTH = 4.3  # inches; 390 px of a phone at the dots below, twice as fine
 _DPI = 180
-_STRIP = 0.24  # inches
-_LABEL = 0.26
+_MAIN, _STRIP, _LABEL, _FOOT = 3.0, 0.24, 0.26, 0.55  # inches
+_LEFT, _WIDE = 0.125, 0.835
+_TICKS = 6
 
 
 def phone_chart(
@@ -75,63 +77,52 @@ def phone_chart(
     mine = [w for w in windows or [] if w.site == site]
     strips, _ = chosen_strips(data.strips)
     with matplotlib.rc_context(CHART_STYLE):
-        head, main, foot = 0.75, 3.0, 0.55
-        height = head + main + 0.42 + len(strips) * (_STRIP + _LABEL) + foot
+        answer = [
+            part
+            for line in answer_lines(mine, zone, 40)
+            for part in textwrap.wrap(shorten(line, 160), 50)
+        ]
+        head = 0.75 + 0.14 * len(answer)
+        height = head + _MAIN + 0.42 + len(strips) * (_STRIP + _LABEL) + _FOOT
         figure = Figure(figsize=(_WIDTH, height), dpi=_DPI, facecolor="white")
         FigureCanvasAgg(figure)
-        left, width = 0.125, 0.855
 
-        def place(from_top: float, tall: float) -> tuple[float, float, float, float]:
-            return (left, 1.0 - (from_top + tall) / height, width, tall / height)
+        def add(from_top: float, tall: float) -> Axes:
+            return figure.add_axes((_LEFT, 1.0 - (from_top + tall) / height, _WIDE, tall / height))
 
-        axis = figure.add_axes(place(head, main))
+        axis = add(head, _MAIN)
         draw_gradient(axis, data, low_stretch)
-        draw_likelihood(axis, data)
+        draw_likelihood(axis, data, 0.6)
         mark_forecast(axis, data)
-        axis.set_ylabel("height (m)", fontsize=8, labelpad=1.0)
+        axis.set_ylabel("height above ground (m)", fontsize=8, labelpad=1.0)
         axis.tick_params(labelsize=7.5)
-        light = figure.add_axes(place(head + main + 0.05, 0.1))
+        marks = add(head + _MAIN + 0.03, 0.1)
+        mark_profiles(marks, data, 0.6)
+        light = add(head + _MAIN + 0.15, 0.1)
         draw_light(light, data)
-        light.set_ylabel("")
-        rows = [axis, light]
-        at = head + main + 0.2
+        rows = [axis, marks, light]
+        at = head + _MAIN + 0.27
         for strip in strips:
-            row = figure.add_axes(place(at + _LABEL, _STRIP))
+            row = add(at + _LABEL, _STRIP)
             draw_bars(row, data, strip)
             weight = "bold" if strip.kind == "sightline" else "normal"
-            label = f"{shorten(strip.label, 40)}: {most_of(data, strip)}"
             row.set_title(
-                label, fontsize=8, loc="left", pad=2.0, fontweight=weight, parse_math=False
-            )
+                shorten(strip.label, 30), fontsize=7.5, loc="left", pad=2.0, fontweight=weight,
+                parse_math=False,
+            )  # fmt: skip
+            remark = strip_remark(data, strip).replace("\n", ", ")
+            row.set_title(remark, fontsize=7.5, loc="right", pad=2.0)
             rows.append(row)
             at += _LABEL + _STRIP
-        span = mdates.date2num([data.left.min(), data.right.max()])
-        for row in rows:
-            row.set_xlim(*span)
-            row.tick_params(axis="x", labelbottom=False, length=0)
-        last = rows[-1]
-        locator = mdates.AutoDateLocator(minticks=3, maxticks=6, tz=UTC)
-        last.xaxis.set_major_locator(locator)
-        short = span[1] - span[0] < 3.0
-        last.xaxis.set_major_formatter(
-            mdates.DateFormatter("%-d %b\n%H:%M" if short else "%-d %b", tz=UTC)
-        )
-        last.tick_params(axis="x", labelbottom=True, length=3, labelsize=7.5)
-        last.set_xlabel("UTC", fontsize=8, labelpad=1.0)
-        answer = "No window: nothing reaches the threshold."
-        if mine:
-            w = mine[0]
-            answer = (
-                f"{shorten(w.subject, 40)}: {percent(w.probability)} "
-                f"({percent(w.lower)} to {percent(w.upper)}), "
-                f"{local_time(w.best_time, UTC)} UTC, {local_time(w.best_time, zone)} local"
-            )
-        figure.text(
-            0.02, 1.0 - 0.16 / height, shorten(site, 44), fontsize=10, fontweight="bold",
-            va="center", color=INK, parse_math=False,
-        )  # fmt: skip
-        figure.text(
-            0.02, 1.0 - 0.3 / height, "\n".join(textwrap.wrap(answer, 58)), fontsize=8, va="top",
-            color=INK, parse_math=False,
-        )  # fmt: skip
+        upper = set_time_axes(rows, data, zone, _TICKS, 7.5)
+        for home, name in ((upper, f"local time ({zone.key})"), (rows[-1], "UTC")):
+            home.set_xlabel(name, fontsize=7.5, labelpad=1.5)
+        for text, lower, size, weight in (
+            (shorten(site, 44), 0.17, 10, "normal"),
+            ("\n".join(answer), 0.29, 8.5, "bold"),
+        ):
+            figure.text(
+                0.02, 1.0 - lower / height, text, fontsize=size, fontweight=weight,
+                va="center" if size == 10 else "top", color=INK, parse_math=False,
+            )  # fmt: skip
     return figure_bytes(figure, "png")

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from datetime import datetime, tzinfo
+from datetime import UTC, datetime, tzinfo
 from typing import TYPE_CHECKING
 from zoneinfo import ZoneInfo
 
@@ -17,7 +17,16 @@ if TYPE_CHECKING:
     from forecast.outlook import Window
     from forecast.output.chart_data import TimeHeight
 
-__all__ = ["chart_text", "day_and_month", "local_time", "metres", "percent", "shorten"]
+__all__ = [
+    "answer_lines",
+    "chart_text",
+    "day_and_month",
+    "local_time",
+    "metres",
+    "percent",
+    "shorten",
+    "time_span",
+]
 
 _MONTHS = ("Jan", "Feb", "Mar", "Apr", "May", "Jun", "Jul", "Aug", "Sep", "Oct", "Nov", "Dec")
 
@@ -43,6 +52,45 @@ def local_time(time: datetime, zone: tzinfo) -> str:
 def day_and_month(time: datetime) -> str:
     """Day and month, such as 3 Jun; English month names in any locale."""
     return f"{time.day} {_MONTHS[time.month - 1]}"
+
+
+def time_span(start: datetime, end: datetime, zone: tzinfo) -> str:
+    """From start to end, the day said twice only if there are two."""
+    if start == end:
+        return local_time(start, zone)
+    last = end.astimezone(zone)
+    if start.astimezone(zone).date() == last.date():
+        return f"{local_time(start, zone)} to {last:%H:%M}"
+    return f"{local_time(start, zone)} to {local_time(end, zone)}"
+
+
+def answer_lines(windows: list[Window], zone: tzinfo, limit: int = 60) -> tuple[str, str]:
+    """What to go for, how likely and how sure; and when.
+
+    Parameters
+    ----------
+    windows : list of Window
+        Best first.
+    zone : tzinfo
+        Local time.
+    limit : int
+        Most letters of the window's subject.
+
+    Returns
+    -------
+    tuple of str
+        Two lines; the second is empty if there is no window.
+    """
+    if not windows:
+        return "Nothing worth going for in the times covered.", ""
+    w = windows[0]
+    head = "Best ahead" if w.ahead else "Nothing ahead. Best of late"
+    return (
+        f"{head}: {shorten(w.subject, limit)}, {percent(w.probability)} likely "
+        f"({percent(w.lower)} to {percent(w.upper)})",
+        f"{time_span(w.start, w.end, UTC)} UTC, likeliest at {local_time(w.best_time, UTC)} UTC, "
+        f"{local_time(w.best_time, zone)} local time",
+    )
 
 
 def shorten(text: str, limit: int) -> str:

@@ -7,12 +7,19 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+from matplotlib.colors import Normalize
+from matplotlib.dates import date2num
+from matplotlib.figure import Figure
 from matplotlib.image import imread
 
 from forecast.output.chart_data import best_profile, column_edges, time_height
+from forecast.output.chart_layers import draw_likelihood
 from forecast.output.charts import draw_time_height, save_chart
+from forecast.output.colours import GRADIENT_RANGE, gradient_colours
 from forecast.output.phone_chart import phone_chart
 from tests.output.conftest import HOSTILE
+
+LUMA = np.array([0.299, 0.587, 0.114])  # weights of a grey print, Rec. ITU-R BT.601
 
 
 def seconds(*hours):
@@ -135,18 +142,44 @@ def test_same_chart_same_bytes(case, tmp_path, site):
     assert len(made[0]["svg"]) < 1_500_000
 
 
-def test_a_chart_is_not_blank_and_reads_in_grey(case, tmp_path):
+def test_a_chart_is_not_blank(case, tmp_path):
     outlook, windows, _ = case
     made = save_chart(draw_time_height(outlook, "cape", windows=windows), tmp_path / "c")
-    grey = imread(io.BytesIO(made["png"]))[..., :3] @ np.array([0.299, 0.587, 0.114])
-    # Trapping layers are the darkest colours of the map: they must differ from standard air by
-    # far more than a shade.
-    from matplotlib import colormaps
-
-    luminance = lambda x: np.dot(colormaps["cividis"](x)[:3], [0.299, 0.587, 0.114])  # noqa: E731
-    trapped, standard = luminance(150 / 410 * 0.5), luminance((118 + 150) / 410)
-    assert standard - trapped > 0.25
+    grey = imread(io.BytesIO(made["png"]))[..., :3] @ LUMA
     assert grey.std() > 0.1
+
+
+def test_trapping_layers_stand_out_in_grey():
+    colours = gradient_colours()(Normalize(*GRADIENT_RANGE)(np.arange(-149.5, 260.0)))[:, :3]
+    grey = colours @ LUMA
+    # Lighter all the way, so that lightness alone tells the gradient; a leap at 0.
+    assert (np.diff(grey) > -0.002).all()
+    assert grey[150] - grey[149] > 0.2
+    assert np.diff(grey).max() == grey[150] - grey[149]
+
+
+def test_outlines_end_at_gaps(case):
+    outlook, _, _ = case
+    data = time_height(outlook, "cape", 3000.0)
+    gap = int(np.flatnonzero(data.left[1:] > data.right[:-1])[0])
+    # A duct on both sides of the gap.
+    duct = np.where(data.bins < 500.0, 0.95, 0.0)
+    data = replace(data, likelihood=np.tile(duct, (data.time.size, 1)))
+    axis = Figure().add_subplot()
+    draw_likelihood(axis, data)
+    x = np.concatenate([path.vertices[:, 0] for path in axis.collections[0].get_paths()])
+    ends = date2num(data.right[gap]), date2num(data.left[gap + 1])
+    assert not ((x > ends[0] + 1e-6) & (x < ends[1] - 1e-6)).any()
+    # And there are outlines along both edges.
+    assert all(np.abs(x - end).min() < 1e-6 for end in ends)
+
+
+def test_answer_on_the_chart_says_whether_it_lies_ahead(case, tmp_path):
+    outlook, windows, _ = case
+    past = [w for w in windows if not w.ahead and w.site == "cape"]
+    for chosen, words in ((windows, "Best ahead: "), (past, "Nothing ahead. Best of late: ")):
+        svg = save_chart(draw_time_height(outlook, "cape", windows=chosen), tmp_path / "c")["svg"]
+        assert words in svg.decode()
 
 
 def test_alternative_text_says_what_the_chart_shows(case, tmp_path):
