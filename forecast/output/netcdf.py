@@ -16,6 +16,7 @@ __all__ = ["write_outlook"]
 
 _EPOCH = "seconds since 1970-01-01 00:00:00"
 _INTEGER_FILL = -1
+_DIFFERENCES = {"near_ground_warming", "air_sea_temperature_difference"}  # in K, of temperatures
 
 
 def write_outlook(outlook: xr.Dataset, path: str | Path, stamp: str) -> None:
@@ -54,8 +55,8 @@ def write_outlook(outlook: xr.Dataset, path: str | Path, stamp: str) -> None:
         if attrs.get("standard_name") == "height":
             attrs["positive"] = "up"
         if attrs.get("units") == "K":
-            warming = name == "near_ground_warming"
-            attrs["units_metadata"] = f"temperature: {'difference' if warming else 'on_scale'}"
+            meant = "difference" if name in _DIFFERENCES else "on_scale"
+            attrs["units_metadata"] = f"temperature: {meant}"
         if name == "time":
             attrs["units_metadata"] = "leap_seconds: none"
     data.attrs = {

@@ -36,6 +36,21 @@ def test_every_variable_says_what_it_is(case, tmp_path):
             assert raw[name].attrs.get("long_name") or name.startswith("sightline_"), name
 
 
+def test_differences_of_temperature_are_told_from_temperatures(case, tmp_path):
+    # CF-1.11 section 3.1.2: 1 K of difference is 1 degC, 1 K on the scale is not.
+    outlook, _, _ = case
+    write_outlook(outlook, tmp_path / "o.nc", STAMP)
+    with xr.open_dataset(tmp_path / "o.nc", decode_cf=False) as raw:
+        kinds = {
+            name: raw[name].attrs["units_metadata"].removeprefix("temperature: ")
+            for name in raw.variables
+            if raw[name].attrs.get("units") == "K"
+        }
+    assert kinds.pop("air_temperature") == "on_scale"
+    assert set(kinds) == {"near_ground_warming", "air_sea_temperature_difference"}
+    assert set(kinds.values()) == {"difference"}
+
+
 def test_two_writings_are_the_same_bytes_and_only_the_stamp_differs(case, tmp_path):
     outlook, _, _ = case
     write_outlook(outlook, tmp_path / "a.nc", STAMP)
