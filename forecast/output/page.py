@@ -9,7 +9,7 @@ from __future__ import annotations
 import base64
 import hashlib
 import struct
-from datetime import UTC, datetime
+from datetime import UTC
 from functools import cache
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -24,7 +24,7 @@ from forecast.errors import printable
 from forecast.output.chart_data import utc
 from forecast.output.files import write_text_atomic
 from forecast.output.tables import iso
-from forecast.output.text import local_time, metres, percent
+from forecast.output.text import answer_lines, local_time, metres, percent, time_span
 from forecast.schema import CAUTION, SIGHTLINE_STATES
 
 if TYPE_CHECKING:
@@ -83,7 +83,7 @@ def write_page(
             script=Markup(script),
             style_hash=_hash(style),
             script_hash=_hash(script),
-            answer=_answer(rows),
+            answer=_answer(windows, zones),
             span=f"Covers {_minute(times.min())} to {_minute(times.max())} UTC.",
             best=_best(rows),
             windows=rows,
@@ -105,13 +105,16 @@ def write_page(
 
 @cache
 def _environment() -> Environment:
-    return Environment(
+    environment = Environment(
         loader=PackageLoader("forecast.output"),
         autoescape=True,
         undefined=StrictUndefined,
         trim_blocks=True,
         lstrip_blocks=True,
     )
+    # Control characters are no valid HTML even where they are escaped.
+    environment.filters["printable"] = printable
+    return environment
 
 
 def _asset(name: str) -> str:
@@ -136,8 +139,9 @@ def _window(rank: int, w: Window, zones: dict[str, ZoneInfo]) -> dict[str, Any]:
         "kind": w.kind,
         "site": printable(w.site, _NAME),
         "subject": printable(w.subject, _NAME),
-        "when_utc": _span(w.start, w.end, UTC),
-        "when_local": _span(w.start, w.end, zone),
+        "when_utc": time_span(w.start, w.end, UTC),
+        "when_local": time_span(w.start, w.end, zone),
+        "zone": zone.key,
         "best": local_time(w.best_time, UTC),
         "best_local": local_time(w.best_time, zone),
         "start": local_time(w.start, UTC),
@@ -156,15 +160,6 @@ def _window(rank: int, w: Window, zones: dict[str, ZoneInfo]) -> dict[str, Any]:
     }
 
 
-def _span(start: datetime, end: datetime, zone: Any) -> str:
-    if start == end:
-        return local_time(start, zone)
-    last = end.astimezone(zone)
-    if start.astimezone(zone).date() == last.date():
-        return f"{local_time(start, zone)} to {last:%H:%M}"
-    return f"{local_time(start, zone)} to {local_time(end, zone)}"
-
-
 def _best(rows: list[dict[str, Any]]) -> list[dict[str, Any]]:
     """The cards: of what lies ahead, the best window of each thing first; else of late."""
     ahead = [row for row in rows if row["ahead"]] or rows
@@ -178,16 +173,13 @@ def _best(rows: list[dict[str, Any]]) -> list[dict[str, Any]]:
     return [*first, *later][:_CARDS]
 
 
-def _answer(rows: list[dict[str, Any]]) -> str:
-    """One line: the best thing to plan for, or else the best of late."""
-    if not rows:
-        return "Nothing worth going for in the times covered."
-    w = rows[0]
-    line = (
-        f"{w['subject']}: {w['chance']} ({w['interval']}) at {w['best']} UTC, "
-        f"{w['best_local']} local."
-    )
-    return line if w["ahead"] else f"Nothing ahead. Lately {line}"
+def _answer(windows: list[Window], zones: dict[str, ZoneInfo]) -> list[str]:
+    """The best thing to plan for, or else the best of late: what and how likely; when; where."""
+    if not windows:
+        return [*answer_lines(windows, UTC)[:1]]
+    site = windows[0].site
+    lines = answer_lines(windows, zones.get(site, ZoneInfo("UTC")), _NAME)
+    return [*lines, f"at {printable(site, _NAME)}"]
 
 
 def _site(outlook: xr.Dataset, name: str, chart: dict[str, Any]) -> dict[str, Any]:
@@ -215,27 +207,41 @@ def _site(outlook: xr.Dataset, name: str, chart: dict[str, Any]) -> dict[str, An
     }
 
 
-def _line(outlook: xr.Dataset, rows: np.ndarray, latest: int, s: int) -> dict[str, str]:
-    """One row of the sightlines' table: three hidden heights and the likeliest time."""
+def _line(outlook: xr.Dataset, rows: np.ndarray, latest: int, s: int) -> dict[str, Any]:
+    """One row of the sightlines' table: three hidden heights and the likeliest time.
+
+    Each number comes with the plain one to sort by.
+    """
     chance = np.nan_to_num(outlook["sightline_probability"].values[rows, s], nan=-1.0)
     best = int(rows[np.lexsort((rows, -chance))[0]])
     base = float(outlook["target_base_height"].values[s])
     top = float(outlook["target_height"].values[s])
     hidden = outlook["hidden_height"].values
+    numbers = {
+        "distance": float(outlook["distance"].values[s]),
+        "observer": float(outlook["observer_height"].values[s]),
+        "straight": float(outlook["hidden_height_straight"].values[s]),
+        "standard": float(outlook["hidden_height_standard"].values[s]),
+        "best_hidden": float(hidden[best, s]),
+        "now_hidden": float(hidden[latest, s]),
+    }
+    likely = float(outlook["sightline_probability"].values[best, s])
     return {
         "name": printable(str(outlook["sightline_name"].values[s]), _NAME),
         "wave": {"optical": "light", "radio": "radio"}[str(outlook["sightline_wave"].values[s])],
-        "distance": metres(float(outlook["distance"].values[s])),
-        "observer": metres(float(outlook["observer_height"].values[s])),
+        "numbers": [(metres(value), _key(value)) for value in numbers.values()],
         "target": metres(top) if base >= top else f"{base:.0f} to {metres(top)}",
-        "straight": metres(float(outlook["hidden_height_straight"].values[s])),
-        "standard": metres(float(outlook["hidden_height_standard"].values[s])),
-        "best_hidden": metres(float(hidden[best, s])),
-        "now_hidden": metres(float(hidden[latest, s])),
+        "target_key": _key(top),
         "state": _STATES[int(outlook["sightline_state"].values[best, s])],
-        "chance": percent(float(outlook["sightline_probability"].values[best, s])),
+        "chance": percent(likely),
+        "chance_key": _key(likely),
         "when": _minute(outlook["time"].values[best]),
     }
+
+
+def _key(value: float) -> str:
+    """A number to sort by; nothing where it is not known."""
+    return f"{value:.6g}" if np.isfinite(value) else ""
 
 
 def _resolution(outlook: xr.Dataset, name: str) -> str:

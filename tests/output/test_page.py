@@ -36,7 +36,10 @@ def page(case, tmp_path_factory):
             charts=charts,
             settings_title=chosen.title,
             sites=sites,
-            set_aside=[{"site": "cape", "file": HOSTILE, "reason": "cut <off>"}],
+            set_aside=[
+                {"site": "cape", "file": HOSTILE, "reason": "cut <off>"},
+                {"site": "cape", "file": "a\0\x1b[31m.nc", "reason": "bell\a and \u202eturn"},
+            ],
             meta={
                 "made_at": "2031-05-04T00:00:00Z",
                 "version": "0",
@@ -111,8 +114,11 @@ def test_ids_are_unique_and_charts_have_text(page):
 def test_the_answer_comes_first_and_agrees_with_the_windows(page, case):
     _, windows, _ = case
     text = page()
-    answer = re.search(r'<p class="answer">([^<]+)</p>', text).group(1)
+    answer = re.search(r'<p class="answer">(.+?)</p>', text).group(1)
     assert windows[0].ahead
+    assert answer.startswith("Best ahead: ")
+    assert answer.endswith("<br>at cape")
+    assert f"{windows[0].start:%H:%M}" in answer
     assert f"{100 * windows[0].probability:.0f} %" in answer
     assert text.index('class="answer"') < text.index("<table")
     for words in ("Never point optics near the Sun", "uncalibrated", "cut &lt;off&gt;"):
@@ -134,3 +140,30 @@ def test_a_narrow_screen_gets_its_own_chart(page, case):
 
 def test_same_content_same_bytes(page):
     assert page("a.html") == page("b.html")
+
+
+def test_the_text_of_a_chart_is_not_hidden_by_a_link(page):
+    # A link's own label would replace the text alternative of the picture inside it.
+    inside = re.findall(r"<a [^>]*>(.*?)</a>", page(), re.S)
+    assert inside
+    assert not any("<img" in content for content in inside)
+
+
+def test_columns_with_units_carry_plain_numbers_to_sort_by(page, case):
+    # 9 km is written in metres, 10 km in kilometres: their texts do not sort.
+    outlook, _, _ = case
+    rows = re.findall(r'<tr><th scope="row">.*?</tr>', page(), re.S)
+    keys = [re.findall(r'data-key="([^"]*)"', row) for row in rows if "data-key" in row]
+    assert len(keys) == outlook.sizes["sightline"]
+    for s, row in enumerate(keys):
+        for key, name in zip(
+            row, ("distance", "observer_height", "target_height", "hidden_height_straight"),
+            strict=False,
+        ):  # fmt: skip
+            assert float(key) == pytest.approx(float(outlook[name].values[s]), rel=1e-5)
+
+
+def test_control_characters_are_spelled_out(page):
+    text = page()
+    assert not re.search(r"[\0-\x08\x0b-\x1f\x7f\u202e]", text)
+    assert r"\u202eturn" in text

@@ -16,8 +16,14 @@ for (const table of document.querySelectorAll("table.sortable")) {
         return /^[-+]?[\d.]/.test(text) && !Number.isNaN(number) && !/^\d{4}-/.test(text) ? number : text;
       };
       const rows = [...body.rows].map((row) => [key(row), row]);
-      rows.sort(([a], [b]) => (typeof a === typeof b ? (a < b ? -1 : a > b ? 1 : 0) : typeof a === "number" ? -1 : 1));
-      if (!up) rows.reverse();
+      const sign = up ? 1 : -1;
+      // Numbers before words; what is not known stays at the end either way.
+      rows.sort(([a], [b]) => {
+        if (a === b) return 0;
+        if (a === "" || b === "") return a === "" ? 1 : -1;
+        if (typeof a !== typeof b) return sign * (typeof a === "number" ? -1 : 1);
+        return sign * (a < b ? -1 : 1);
+      });
       body.append(...rows.map(([, row]) => row));
     });
   });
