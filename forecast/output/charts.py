@@ -126,11 +126,8 @@ def draw_time_height(
             below.append(row)
         set_time_axes([axis, *below], data, zone, _TICKS // 3 if single else _TICKS, 8.0)
         # Beside the ticks, in the margin: no line is lost to it.
-        for home, at, where, name in (
-            (axis, 1.012, "bottom", f"local time\n{zone.key}"),
-            (below[-1], -0.12, "top", "UTC"),
-        ):
-            home.text(1.012, at, name, transform=home.transAxes, va=where, fontsize=8, color=FAINT)
+        _remark(axis, f"local time\n{zone.key}", FAINT, offset=20.0, at=1.0 + 0.16 / _MAIN)
+        _remark(below[-1], "UTC", FAINT, offset=20.0, at=-0.13 / _STRIP)
         axis.grid(axis="x", color="white", lw=0.5, alpha=0.6)
         _header(figure, outlook, data, mine, zone)
         _footer(figure, outlook, data, left_out)
@@ -166,17 +163,17 @@ def save_chart(figure: Figure, stem: str | Path) -> dict[str, Any]:
 
 def _label(axis: Axes, text: str, weight: str = "normal") -> None:
     """Name a strip on its left."""
-    axis.text(
-        -0.012, 0.5, text, transform=axis.transAxes, ha="right", va="center", fontsize=8.5,
-        fontweight=weight, color=INK, parse_math=False,
+    axis.annotate(
+        text, (0.0, 0.5), (-7.0, 0.0), xycoords="axes fraction", textcoords="offset points",
+        ha="right", va="center", fontsize=8.5, fontweight=weight, color=INK, parse_math=False,
     )  # fmt: skip
 
 
-def _remark(axis: Axes, text: str, colour: str = INK) -> None:
-    """Say a number on the right of a strip."""
-    axis.text(
-        1.012, 0.5, text, transform=axis.transAxes, va="center", fontsize=8, color=colour,
-        linespacing=1.05,
+def _remark(axis: Axes, text: str, colour: str = INK, offset: float = 7.0, at: float = 0.5) -> None:
+    """Say something on the right of an axis."""
+    axis.annotate(
+        text, (1.0, at), (offset, 0.0), xycoords="axes fraction", textcoords="offset points",
+        va="center", fontsize=8, color=colour, linespacing=1.05, parse_math=False,
     )  # fmt: skip
 
 
