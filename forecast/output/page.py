@@ -183,12 +183,15 @@ def _answer(windows: list[Window], zones: dict[str, ZoneInfo]) -> list[str]:
 
 
 def _site(outlook: xr.Dataset, name: str, chart: dict[str, Any]) -> dict[str, Any]:
+    """A site's chart and sightlines; "now" is its latest ascent or, without one, the first time."""
     rows = np.flatnonzero(outlook["site"].values.astype(str) == name)
-    latest = int(rows[-1])
+    ascents = rows[outlook["source_kind"].values[rows].astype(str) == "ascent"]
+    now = int(ascents[-1] if ascents.size else rows[0])
+    ahead = rows[rows > now] if ascents.size else rows
     lines = []
     for s in range(outlook.sizes["sightline"]):
         if str(outlook["sightline_site"].values[s]) == name:
-            lines.append(_line(outlook, rows, latest, s))
+            lines.append(_line(outlook, ahead if ahead.size else rows, now, s))
     # Width and height stand in the PNG header, ISO/IEC 15948 section 11.2.2.
     width, height = struct.unpack(">II", chart["png"][16:24])
     phone_width, phone_height = struct.unpack(">II", chart["phone"][16:24])
@@ -202,39 +205,48 @@ def _site(outlook: xr.Dataset, name: str, chart: dict[str, Any]) -> dict[str, An
         "file": chart["file"],
         "width": width,
         "height": height,
-        "latest": _minute(outlook["time"].values[latest]),
+        "now": f"the {'latest ascent' if ascents.size else 'first valid time'}, "
+        f"{_minute(outlook['time'].values[now])} UTC",
+        "best": "the likeliest time after it" if ahead.size else "the likeliest time of all",
         "lines": lines,
     }
 
 
-def _line(outlook: xr.Dataset, rows: np.ndarray, latest: int, s: int) -> dict[str, Any]:
-    """One row of the sightlines' table: three hidden heights and the likeliest time.
+def _line(outlook: xr.Dataset, rows: np.ndarray, now: int, s: int) -> dict[str, Any]:
+    """One row of the sightlines' table: hidden heights, now and at the likeliest of `rows`.
 
     Each number comes with the plain one to sort by.
     """
-    chance = np.nan_to_num(outlook["sightline_probability"].values[rows, s], nan=-1.0)
-    best = int(rows[np.lexsort((rows, -chance))[0]])
+    chance, lower = (
+        np.nan_to_num(outlook[f"sightline_probability{end}"].values[rows, s], nan=-1.0)
+        for end in ("", "_lower")
+    )
+    best = int(rows[np.lexsort((rows, -lower, -chance))[0]])
     base = float(outlook["target_base_height"].values[s])
     top = float(outlook["target_height"].values[s])
-    hidden = outlook["hidden_height"].values
-    numbers = {
-        "distance": float(outlook["distance"].values[s]),
-        "observer": float(outlook["observer_height"].values[s]),
-        "straight": float(outlook["hidden_height_straight"].values[s]),
-        "standard": float(outlook["hidden_height_standard"].values[s]),
-        "best_hidden": float(hidden[best, s]),
-        "now_hidden": float(hidden[latest, s]),
-    }
+
+    def number(value: float, more: str = "") -> tuple[str, str]:
+        return f"{metres(value)}{more}", _key(value)
+
+    def hidden(row: int) -> tuple[str, str]:
+        state = _STATES[int(outlook["sightline_state"].values[row, s])]
+        return number(float(outlook["hidden_height"].values[row, s]), f", {state}")
+
     likely = float(outlook["sightline_probability"].values[best, s])
+    target = metres(top) if base >= top else f"{base:.0f} to {metres(top)}"
     return {
         "name": printable(str(outlook["sightline_name"].values[s]), _NAME),
         "wave": {"optical": "light", "radio": "radio"}[str(outlook["sightline_wave"].values[s])],
-        "numbers": [(metres(value), _key(value)) for value in numbers.values()],
-        "target": metres(top) if base >= top else f"{base:.0f} to {metres(top)}",
-        "target_key": _key(top),
-        "state": _STATES[int(outlook["sightline_state"].values[best, s])],
-        "chance": percent(likely),
-        "chance_key": _key(likely),
+        "numbers": [
+            number(float(outlook["distance"].values[s])),
+            number(float(outlook["observer_height"].values[s])),
+            (target, _key(top)),
+            number(float(outlook["hidden_height_straight"].values[s])),
+            number(float(outlook["hidden_height_standard"].values[s])),
+            hidden(now),
+            hidden(best),
+            (percent(likely), _key(likely)),
+        ],
         "when": _minute(outlook["time"].values[best]),
     }
 

@@ -8,11 +8,14 @@ import re
 from html.parser import HTMLParser
 
 import html5lib
+import numpy as np
 import pytest
 
 from forecast.output.charts import draw_time_height, save_chart
 from forecast.output.page import write_page
 from forecast.output.phone_chart import phone_chart
+from forecast.output.text import metres, percent
+from forecast.schema import SIGHTLINE_STATES
 from tests.output.conftest import HOSTILE
 
 
@@ -161,6 +164,25 @@ def test_columns_with_units_carry_plain_numbers_to_sort_by(page, case):
             strict=False,
         ):  # fmt: skip
             assert float(key) == pytest.approx(float(outlook[name].values[s]), rel=1e-5)
+
+
+def test_sightlines_are_told_now_and_at_their_best_ahead(page, case):
+    outlook, _, _ = case
+    site, kind = outlook["site"].values, outlook["source_kind"].values
+    ahead = np.flatnonzero((site == "cape") & (kind == "model"))
+    latest = np.flatnonzero((site == "cape") & (kind == "ascent"))[-1]
+    text = page()
+    # The latest ascent of the case is at hour 54 of its start, 1 May 2031.
+    assert "“Now” is the latest ascent, 2031-05-03 06:00 UTC" in text
+    row = re.search(r'<tr><th scope="row">link</th>.*?</tr>', text, re.S).group(0)
+    cells = re.findall(r"<td[^>]*>(.*?)</td>", row)
+    states = {code: name for name, code in SIGHTLINE_STATES.items()}
+    now = states[int(outlook["sightline_state"].values[latest, 0])]
+    hidden = float(outlook["hidden_height"].values[latest, 0])
+    assert cells[6] == f"{metres(hidden)}, {now}"
+    best = outlook["sightline_probability"].values[ahead, 0].max()
+    assert cells[8] == percent(float(best))
+    assert cells[9] > "2031-05-03 06:00"
 
 
 def test_control_characters_are_spelled_out(page):
