@@ -63,9 +63,12 @@ CHART_STYLE: Any = {
 }
 
 
-def figure_bytes(figure: Figure, ending: str) -> bytes:
-    """The figure as ``png`` or ``svg``: the same bytes for the same figure."""
-    stamps = {"png": {"Software": None}, "svg": {"Date": None, "Creator": None}}
+def figure_bytes(figure: Figure, ending: str, alternative: str = "") -> bytes:
+    """The figure as ``png`` or ``svg``, this with a text alternative: same figure, same bytes."""
+    stamps: dict[str, dict[str, str | None]] = {
+        "png": {"Software": None},
+        "svg": {"Date": None, "Creator": None, "Title": alternative or None},
+    }
     buffer = io.BytesIO()
     with matplotlib.rc_context(CHART_STYLE), warnings.catch_warnings():
         # Names may hold letters that the font lacks: they are drawn as boxes, no news for a log.

@@ -37,7 +37,7 @@ from forecast.output.chart_layers import (
 )
 from forecast.output.colours import FAINT, INK, LIKELIHOOD, NO_DATA, gradient_colours
 from forecast.output.files import write_bytes_atomic
-from forecast.output.text import answer_lines, chart_text, percent, shorten
+from forecast.output.text import answer_lines, chart_text, percent, profile_counts, shorten
 from forecast.schema import CAUTION
 
 if TYPE_CHECKING:
@@ -155,7 +155,7 @@ def save_chart(figure: Figure, stem: str | Path) -> dict[str, Any]:
         "file": f"{Path(stem).name}.svg",
     }
     for ending in ("png", "svg"):
-        out[ending] = figure_bytes(figure, ending)
+        out[ending] = figure_bytes(figure, ending, out["alt"])
         write_bytes_atomic(Path(f"{stem}.{ending}"), out[ending])
     figure.clear()
     return out
@@ -251,7 +251,7 @@ def _header(
 def _footer(figure: Figure, outlook: xr.Dataset, data: TimeHeight, left_out: int) -> None:
     more = f" {left_out} more rows in the tables." if left_out else ""
     lines = [
-        f"{data.ascent.sum()} ascents, {(~data.ascent).sum()} model profiles, "
+        f"{profile_counts(data)}, "
         f"{utc(data.time[0]):%Y-%m-%d %H:%M} to {utc(data.time[-1]):%Y-%m-%d %H:%M} UTC. "
         f"Bars: share of members, 0 to 100 %; pale band: 90 % interval; hatched: cannot tell. "
         f"{str(outlook.attrs.get('calibration', '')).capitalize()}.{more}",

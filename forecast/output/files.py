@@ -13,6 +13,8 @@ from pathlib import Path
 __all__ = ["atomic_path", "safe_stem", "write_bytes_atomic", "write_text_atomic"]
 
 _LONGEST_STEM = 60
+_DEVICES = {f"{device}{number}" for device in ("com", "lpt") for number in range(1, 10)}
+_RESERVED = {"con", "prn", "aux", "nul", "index", "outlook", "windows", "run"} | _DEVICES
 
 
 @contextmanager
@@ -78,7 +80,7 @@ def safe_stem(name: str, taken: Collection[str] = ()) -> str:
     plain = unicodedata.normalize("NFKD", name).encode("ascii", "ignore").decode().lower()
     stem = re.sub(r"[^a-z0-9]+", "-", plain).strip("-")[:_LONGEST_STEM].strip("-") or "site"
     # Names that some systems reserve or that other products use.
-    if stem in {"con", "prn", "aux", "nul", "index", "outlook", "windows", "run"}:
+    if stem in _RESERVED:
         stem = f"site-{stem}"
     candidate, number = stem, 2
     while candidate in taken:

@@ -24,10 +24,12 @@ __all__ = [
     "local_time",
     "metres",
     "percent",
+    "profile_counts",
     "shorten",
     "time_span",
 ]
 
+_SURE = 0.9  # share of members that agree on a duct, as the solid outlines of the charts
 _MONTHS = ("Jan", "Feb", "Mar", "Apr", "May", "Jun", "Jul", "Aug", "Sep", "Oct", "Nov", "Dec")
 
 
@@ -98,6 +100,13 @@ def shorten(text: str, limit: int) -> str:
     return printable(text, limit)
 
 
+def profile_counts(data: TimeHeight) -> str:
+    """How many ascents and model profiles a chart shows."""
+    ascents = int(data.ascent.sum())
+    numbers = ((ascents, "ascent"), (data.time.size - ascents, "model profile"))
+    return " and ".join(f"{n} {what}{'s' if n != 1 else ''}" for n, what in numbers if n)
+
+
 def chart_text(outlook: xr.Dataset, data: TimeHeight, windows: list[Window], zone: ZoneInfo) -> str:
     """Say in words what a time–height chart shows.
 
@@ -119,15 +128,20 @@ def chart_text(outlook: xr.Dataset, data: TimeHeight, windows: list[Window], zon
     """
     from forecast.output.chart_data import utc
 
-    ascents = int(data.ascent.sum())
     parts = [
-        f"Time–height chart of {shorten(data.site, 80)}: {ascents} ascents and "
-        f"{data.time.size - ascents} model profiles from {utc(data.time[0]):%Y-%m-%d %H:%M} to "
-        f"{utc(data.time[-1]):%Y-%m-%d %H:%M} UTC, heights 0 to {data.edges[-1]:.0f} m."
+        f"Time–height chart of {shorten(data.site, 80)}: {profile_counts(data)} from "
+        f"{utc(data.time[0]):%Y-%m-%d %H:%M} to {utc(data.time[-1]):%Y-%m-%d %H:%M} UTC, "
+        f"heights 0 to {data.edges[-1]:.0f} m."
     ]
-    low = data.gradient < 0.0
-    share = np.mean(low.any(axis=1)) if low.size else 0.0
-    parts.append(f"{percent(float(share))} of the profiles hold a trapping layer.")
+    sure = data.likelihood >= _SURE
+    if sure.any():
+        heights = data.bins[sure.any(axis=0)]
+        parts.append(
+            f"In {int(sure.any(axis=1).sum())} of {data.time.size} profiles {percent(_SURE)} of "
+            f"members agree on a duct, at heights from {heights[0]:.0f} to {heights[-1]:.0f} m."
+        )
+    else:
+        parts.append(f"In no profile {percent(_SURE)} of members agree on a duct.")
     for strip in data.strips:
         known = strip.probability[np.isfinite(strip.probability)]
         if known.size:

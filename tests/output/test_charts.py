@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import io
 from dataclasses import replace
+from xml.etree import ElementTree
 
 import numpy as np
 import pytest
@@ -188,6 +189,22 @@ def test_alternative_text_says_what_the_chart_shows(case, tmp_path):
     assert "9 ascents and 12 model profiles" in made["alt"]
     best = float(np.nanmax(outlook["sightline_probability"].values[:, 0]))
     assert f"link: at most {100 * best:.0f} %" in made["alt"]
+    sure = outlook["duct_likelihood"].values[outlook["site"].values == "cape"] >= 0.9
+    assert (
+        f"In {sure.any(axis=1).sum()} of 21 profiles 90 % of members agree on a duct" in made["alt"]
+    )
+
+
+def test_svg_carries_the_text_and_nothing_that_runs(case, tmp_path):
+    outlook, windows, _ = case
+    made = save_chart(draw_time_height(outlook, HOSTILE, windows=windows), tmp_path / "c")
+    root = ElementTree.fromstring(made["svg"])
+    tags = {element.tag.rpartition("}")[2] for element in root.iter()}
+    assert "script" not in tags
+    assert root.find("{http://www.w3.org/2000/svg}title").text == made["alt"]
+    assert "alert" in made["alt"]
+    # Not one address of the outside world but the names of the formats.
+    assert not any("http" in v for e in root.iter() for k, v in e.attrib.items() if "href" in k)
 
 
 @pytest.mark.parametrize("rows", [[0], [0, 1]])

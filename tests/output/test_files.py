@@ -46,3 +46,5 @@ def test_stems_do_not_collide():
     # Names of other products are not for sites.
     assert safe_stem("index") != "index"
     assert safe_stem("windows") != "windows"
+    # Nor are names of devices (Windows takes "com1.png" for a serial port).
+    assert safe_stem("COM1") == "site-com1"
