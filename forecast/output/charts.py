@@ -37,7 +37,14 @@ from forecast.output.chart_layers import (
 )
 from forecast.output.colours import FAINT, INK, LIKELIHOOD, NO_DATA, gradient_colours
 from forecast.output.files import write_bytes_atomic
-from forecast.output.text import answer_lines, chart_text, percent, profile_counts, shorten
+from forecast.output.text import (
+    answer_lines,
+    chart_text,
+    percent,
+    profile_counts,
+    shorten,
+    zone_name,
+)
 from forecast.schema import CAUTION
 
 if TYPE_CHECKING:
@@ -126,7 +133,9 @@ def draw_time_height(
             below.append(row)
         set_time_axes([axis, *below], data, zone, _TICKS // 3 if single else _TICKS, 8.0)
         # Beside the ticks, in the margin: no line is lost to it.
-        _remark(axis, f"local time\n{zone.key}", FAINT, offset=20.0, at=1.0 + 0.16 / _MAIN)
+        _remark(
+            axis, zone_name(zone).replace(" (", "\n("), FAINT, offset=20.0, at=1.0 + 0.16 / _MAIN
+        )
         _remark(below[-1], "UTC", FAINT, offset=20.0, at=-0.13 / _STRIP)
         axis.grid(axis="x", color="white", lw=0.5, alpha=0.6)
         _header(figure, outlook, data, mine, zone)

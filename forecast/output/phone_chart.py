@@ -27,7 +27,7 @@ from forecast.output.chart_layers import (
     strip_remark,
 )
 from forecast.output.colours import INK
-from forecast.output.text import answer_lines, shorten
+from forecast.output.text import answer_lines, shorten, zone_name
 
 if TYPE_CHECKING:
     from forecast.outlook import Window
@@ -115,7 +115,7 @@ def phone_chart(
             rows.append(row)
             at += _LABEL + _STRIP
         upper = set_time_axes(rows, data, zone, _TICKS, 7.5)
-        for home, name in ((upper, f"local time ({zone.key})"), (rows[-1], "UTC")):
+        for home, name in ((upper, zone_name(zone)), (rows[-1], "UTC")):
             home.set_xlabel(name, fontsize=7.5, labelpad=1.5)
         for text, lower, size, weight in (
             (shorten(site, 44), 0.17, 10, "normal"),

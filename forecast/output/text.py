@@ -27,6 +27,7 @@ __all__ = [
     "profile_counts",
     "shorten",
     "time_span",
+    "zone_name",
 ]
 
 _SURE = 0.9  # share of members that agree on a duct, as the solid outlines of the charts
@@ -87,12 +88,20 @@ def answer_lines(windows: list[Window], zone: tzinfo, limit: int = 60) -> tuple[
         return "Nothing worth going for in the times covered.", ""
     w = windows[0]
     head = "Best ahead" if w.ahead else "Nothing ahead. Best of late"
+    best = f"{local_time(w.best_time, UTC)} UTC"
+    if str(zone) != "UTC":
+        best += f", {local_time(w.best_time, zone)} local time"
+    when = f"{time_span(w.start, w.end, UTC)} UTC, likeliest at {best}"
     return (
         f"{head}: {shorten(w.subject, limit)}, {percent(w.probability)} likely "
         f"({percent(w.lower)} to {percent(w.upper)})",
-        f"{time_span(w.start, w.end, UTC)} UTC, likeliest at {local_time(w.best_time, UTC)} UTC, "
-        f"{local_time(w.best_time, zone)} local time",
+        when if w.start < w.end else best,
     )
+
+
+def zone_name(zone: ZoneInfo) -> str:
+    """What to call the clock of a zone."""
+    return "UTC" if zone.key == "UTC" else f"local time ({zone.key})"
 
 
 def shorten(text: str, limit: int) -> str:
