@@ -65,15 +65,17 @@ CHART_STYLE: Any = {
 
 def figure_bytes(figure: Figure, ending: str, alternative: str = "") -> bytes:
     """The figure as ``png`` or ``svg``, this with a text alternative: same figure, same bytes."""
-    stamps: dict[str, dict[str, str | None]] = {
-        "png": {"Software": None},
-        "svg": {"Date": None, "Creator": None, "Title": alternative or None},
-    }
+    # Neither a date nor a version: they would change the bytes.
+    meta: dict[str, Any] = {"Software": None}
+    if ending == "svg":
+        meta = {"Date": None, "Creator": None}
+        if alternative:
+            meta["Title"] = alternative
     buffer = io.BytesIO()
     with matplotlib.rc_context(CHART_STYLE), warnings.catch_warnings():
         # Names may hold letters that the font lacks: they are drawn as boxes, no news for a log.
         warnings.filterwarnings("ignore", message="Glyph .* missing from")
-        figure.savefig(buffer, format=ending, metadata=stamps[ending])
+        figure.savefig(buffer, format=ending, metadata=meta)
     return buffer.getvalue()
 
 

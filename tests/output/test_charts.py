@@ -159,6 +159,13 @@ def test_trapping_layers_stand_out_in_grey():
     assert np.diff(grey).max() == grey[150] - grey[149]
 
 
+def test_any_figure_can_be_saved(tmp_path):
+    # One drawn elsewhere has no text alternative.
+    made = save_chart(Figure(), tmp_path / "c")
+    assert made["alt"] == ""
+    assert b"<title>" not in made["svg"]
+
+
 def test_outlines_end_at_gaps(case):
     outlook, _, _ = case
     data = time_height(outlook, "cape", 3000.0)
