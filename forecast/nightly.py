@@ -48,7 +48,7 @@ from forecast.products import (
 if TYPE_CHECKING:
     import xarray as xr
 
-    from forecast.settings import Settings
+    from forecast.settings import Settings, Site
 
 __all__ = [
     "EXIT_ALL_DONE",
@@ -316,7 +316,7 @@ def _write_record(
             "sha256": settings.digest,
             "members": settings.members,
             "seed": settings.seed,
-            "sites": [asdict(site) for site in settings.sites],
+            "sites": [_plain(site, settings.base) for site in settings.sites],
         },
         "inputs": record.inputs,
         "set_aside": record.set_aside,
@@ -327,6 +327,14 @@ def _write_record(
 
     text = json.dumps(body, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
     write_text_atomic(folder / RECORD, text)
+
+
+def _plain(site: Site, base: Path) -> dict[str, Any]:
+    """A site's settings as JSON has them, paths as seen from the settings file."""
+    return {
+        key: os.path.relpath(value, base) if isinstance(value, Path) else value
+        for key, value in asdict(site).items()
+    }
 
 
 def _version(package: str) -> str:

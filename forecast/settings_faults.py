@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import itertools
 import os
 import re
 from collections.abc import Iterator, Mapping
@@ -23,6 +24,15 @@ MAX_HEIGHT_M = 9000.0
 _MOST_FAULTS = 50
 
 Where = tuple[Any, ...]
+
+#: Keys of a site that only some surfaces take.
+_SURFACE_KEYS = {
+    "sea_surface_temperature_c": (("sea",), '"sea"'),
+    "water_series": (("sea",), '"sea"'),
+    "surface_temperature_c": (("land",), '"land"'),
+    "roughness_m": (("land",), '"land"'),
+    "wind_speed_m_s": (("sea", "land"), '"sea" or "land"'),
+}
 
 _KEY = r"(?:[A-Za-z0-9_-]+|\"[^\"]*\"|'[^']*')"
 _HEADER = re.compile(rf"\s*(\[\[?)\s*({_KEY}(?:\s*\.\s*{_KEY})*)\s*\]\]?\s*(?:#.*)?$")
@@ -77,6 +87,8 @@ def _key(where: Where) -> str:
 def _words(item: Any, tables: Mapping[str, Any]) -> str:
     """Say what is wrong with one key."""
     where = tuple(item["loc"])
+    if where[2:3] == ("place",) and len(where) > 4:
+        where = where[2:]  # a table inside a sightline
     label = str(where[0]) if len(where) > 1 else ""
     fields = tables.get(label, tables[""]).model_fields
     name = next((p for p in where[1 if label else 0 :] if isinstance(p, str)), "")
@@ -120,8 +132,11 @@ def _line_numbers(text: str) -> dict[Where, int]:
         if header := _HEADER.match(line):
             names = _parts(header[2])
             if header[1] == "[[":
-                counts[names] = counts.get(names, -1) + 1
-                table = (*names, counts[names])
+                # A list inside the last table of another starts anew with each of those.
+                outer = (names[0], counts[names[:1]]) if names[:1] in counts and names[1:] else ()
+                whole = (*outer, *names[1:]) if outer else names
+                counts[whole] = counts.get(whole, -1) + 1
+                table = (*whole, counts[whole])
             elif names[:1] in counts:  # a table inside the last one of a list
                 table = (names[0], counts[names[:1]], *names[1:])
             else:
@@ -165,11 +180,11 @@ def _cross_faults(table: dict[str, Any], base: Path) -> list[tuple[Where, str]]:
                     ((label, i, "name"), f"found {_found(name)} a second time; names must differ")
                 )
             seen.add(name)
-    key = "sea_surface_temperature_c"
     faults += [
-        (("site", i, key), 'is for sites with surface = "sea" only; leave it out or set that')
+        (("site", i, key), f"is for sites with surface = {words} only; leave it out or set that")
         for i, row in sites
-        if key in row and row.get("surface", "none") == "none"
+        for key, (kinds, words) in _SURFACE_KEYS.items()
+        if key in row and row.get("surface", "none") not in kinds
     ]
     names = [row["name"] for _, row in sites if isinstance(row.get("name"), str)]
     for i, row in sightlines:
@@ -191,15 +206,16 @@ def _sightline_faults(row: dict[str, Any], names: list[str]) -> Iterator[tuple[s
         near = difflib.get_close_matches(site, names, n=1)
         hint = f"did you mean {near[0]!r}?" if near else f"sites are: {', '.join(names)}"
         yield "site", f"found {_found(site)}, which is no site; {hint}"
-    bottom, top = row.get("target_base_height_m", 0.0), row.get("target_height_m")
-    both = isinstance(bottom, int | float) and isinstance(top, int | float)
-    if both and MAX_HEIGHT_M >= bottom > top:
-        yield (
-            "target_base_height_m",
-            f"found {_found(bottom)}; must not exceed target_height_m, {_found(top)}",
-        )
-    if row.get("wave") == "radio" and "wavelength_nm" in row:
-        yield "wavelength_nm", "is for optical sightlines only; leave it out"
+    for name in row["along"] if isinstance(row.get("along"), list) else []:
+        if isinstance(name, str) and names and name not in names:
+            yield "along", f"found {_found(name)}, which is no site; sites are: {', '.join(names)}"
+    yield from _target_faults(row)
+    yield from _place_faults(row)
+    for key in ("wavelength_nm", "band", "lamp_intensity_cd"):
+        if row.get("wave") == "radio" and key in row:
+            yield key, "is for optical sightlines only; leave it out"
+    if "band" in row and "wavelength_nm" in row:
+        yield "band", "give a band or a wavelength, not both"
     positions = [key for key in ("observer", "target") if key in row]
     if "distance_km" in row and positions:
         yield "distance_km", "give a distance or positions, not both"
@@ -210,6 +226,43 @@ def _sightline_faults(row: dict[str, Any], names: list[str]) -> Iterator[tuple[s
         )
     elif len(positions) == 2:
         yield from _position_faults(row)
+    elif row.get("along"):
+        yield "along", "needs observer and target as [latitude, longitude], to lay the sites along"
+
+
+def _target_faults(row: dict[str, Any]) -> Iterator[tuple[str, str]]:
+    bottom, top = row.get("target_base_height_m", 0.0), row.get("target_height_m")
+    outline = row.get("silhouette")
+    points = [
+        point
+        for point in (outline if isinstance(outline, list) else [])
+        if isinstance(point, list) and len(point) == 2 and all(_is_number(x) for x in point)
+    ]
+    if top is None and outline is None:
+        yield "target_height_m", "is missing; give it, or a silhouette"
+    elif top is not None and outline is not None:
+        yield "silhouette", "give target_height_m or a silhouette, not both"
+    if any(right[0] < left[0] for left, right in itertools.pairwise(points)):
+        yield "silhouette", "offsets must not fall from one point to the next"
+    if points and top is None:
+        top = max(height for _, height in points)
+    both = isinstance(bottom, int | float) and isinstance(top, int | float)
+    if both and MAX_HEIGHT_M >= bottom > top:
+        yield (
+            "target_base_height_m",
+            f"found {_found(bottom)}; must not exceed target_height_m, {_found(top)}",
+        )
+
+
+def _place_faults(row: dict[str, Any]) -> Iterator[tuple[str, str]]:
+    places = row.get("place")
+    for place in places[:64] if isinstance(places, list) else []:
+        if not isinstance(place, dict):
+            continue
+        if "position" in place and "distance_km" in place:
+            yield "place", "give a place a distance or a position, not both"
+        elif "position" in place and "target" not in row:
+            yield "place", "a position needs the target's position too; or give a distance_km"
 
 
 def _position_faults(row: dict[str, Any]) -> Iterator[tuple[str, str]]:
@@ -227,10 +280,14 @@ def _position_faults(row: dict[str, Any]) -> Iterator[tuple[str, str]]:
         )
 
 
+def _is_number(value: Any) -> bool:
+    return isinstance(value, int | float) and not isinstance(value, bool)
+
+
 def _is_position(place: Any) -> bool:
     if not isinstance(place, list) or len(place) != 2:
         return False
-    if any(isinstance(p, bool) or not isinstance(p, int | float) for p in place):
+    if not all(_is_number(p) for p in place):
         return False
     return -90.0 <= place[0] <= 90.0 and -180.0 <= place[1] <= 360.0
 

@@ -13,6 +13,7 @@ from zoneinfo import ZoneInfo
 from pydantic import AfterValidator, BaseModel, ConfigDict, Field, ValidationError
 from pydantic.fields import FieldInfo
 
+from forecast.physics.bands import PHOTOMETRIC_BANDS
 from forecast.settings_faults import MAX_DISTANCE_KM, MAX_HEIGHT_M, faults_of
 
 __all__ = ["SettingsFile", "SightlineTable", "check_table"]
@@ -54,9 +55,22 @@ Name = Annotated[str, _text(80), AfterValidator(_plain)]
 Latitude = Annotated[float, _number(-90.0, 90.0, "degrees")]
 Longitude = Annotated[float, _number(-180.0, 360.0, "degrees")]
 Height = Annotated[float, _number(0.0, MAX_HEIGHT_M, "m")]
+Band = Literal["U", "B", "V", "R", "I", "J", "H", "photopic", "scotopic"]
 Position = Annotated[
     tuple[Latitude, Longitude] | None,
     Field(description="[latitude, longitude] in degrees, -90 to 90 and -180 to 360"),
+]
+FilePath = Annotated[
+    Annotated[str, _text(1000), AfterValidator(_plain)] | None,
+    Field(description="path of a file, from the settings file's folder"),
+]
+Outline = Annotated[
+    list[tuple[float, Height]] | None,
+    Field(
+        min_length=2,
+        max_length=400,
+        description="2 to 400 points [offset, height] in m, from left to right",
+    ),
 ]
 
 
@@ -94,8 +108,21 @@ class _SiteTable(_Table):
     point_method: Annotated[
         Literal["nearest", "bilinear"], Field(description='"nearest" or "bilinear"')
     ] = "bilinear"
-    surface: Annotated[Literal["none", "sea"], Field(description='"none" or "sea"')] = "none"
+    surface: Annotated[
+        Literal["none", "sea", "land"], Field(description='"none", "sea" or "land"')
+    ] = "none"
     sea_surface_temperature_c: Annotated[float | None, _number(-3.0, 40.0, "°C")] = None
+    surface_temperature_c: Annotated[float | None, _number(-60.0, 80.0, "°C")] = None
+    wind_speed_m_s: Annotated[float | None, _number(0.0, 60.0, "m/s")] = None
+    roughness_m: Annotated[float, _number(1e-6, 5.0, "m")] = 0.03
+    water_series: FilePath = None
+
+
+class _PlaceTable(_Table):
+    name: Name
+    ground_height_m: Height = 0.0
+    position: Position = None
+    distance_km: Annotated[float | None, _number(0.01, MAX_DISTANCE_KM, "km")] = None
 
 
 class SightlineTable(_Table):
@@ -104,7 +131,7 @@ class SightlineTable(_Table):
     name: Name
     site: Name
     observer_height_m: Height
-    target_height_m: Height
+    target_height_m: Annotated[float | None, _number(0.0, MAX_HEIGHT_M, "m")] = None
     target_base_height_m: Height = 0.0
     distance_km: Annotated[float | None, _number(0.01, MAX_DISTANCE_KM, "km")] = None
     azimuth_deg: Annotated[float | None, _number(0.0, 360.0, "degrees")] = None
@@ -114,6 +141,24 @@ class SightlineTable(_Table):
         "optical"
     )
     wavelength_nm: Annotated[float, _number(300.0, 1700.0, "nm")] = 550.0
+    band: Annotated[Band | None, Field(description=" or ".join(PHOTOMETRIC_BANDS))] = None
+    along: Annotated[
+        list[Name], Field(max_length=32, description="a list of at most 32 names of sites")
+    ] = []
+    terrain: FilePath = None
+    sea_level_offset_m: Annotated[float, _number(-20.0, 20.0, "m")] = 0.0
+    silhouette: Outline = None
+    visibility_km: Annotated[float | None, _number(0.01, 400.0, "km")] = None
+    contrast: Annotated[float, _number(-1.0, 100.0, "")] = -0.9
+    lamp_intensity_cd: Annotated[float | None, _number(1.0, 1e9, "cd")] = None
+    stand_heights_m: Annotated[
+        list[Annotated[float, _number(0.0, 1000.0, "m")]] | None,
+        Field(min_length=1, max_length=40, description="a list of 1 to 40 heights of 0 to 1000 m"),
+    ] = None
+    place: Annotated[
+        list[_PlaceTable],
+        Field(max_length=64, description="at most 64 tables, each [[sightline.place]]"),
+    ] = []
 
 
 class _Ingest(_Table):
@@ -143,6 +188,7 @@ _TABLES: dict[str, type[BaseModel]] = {
     "run": _RunTable,
     "site": _SiteTable,
     "sightline": SightlineTable,
+    "place": _PlaceTable,
     "ingest": _Ingest,
 }
 

@@ -88,6 +88,36 @@ def test_without_azimuth_the_radius_is_the_mean(tmp_path):
     assert math.isnan(settings.sightlines[1].azimuth)
 
 
+def test_a_fault_in_a_place_names_its_line(tmp_path):
+    place = '[[sightline.place]]\nname = "quay"\n'
+    text = GOOD.replace("[ingest", f"{place}{place}ground_height_m = -3.0\n\n[ingest")
+    (fault,) = faults(tmp_path, text)
+    line = text.splitlines().index("ground_height_m = -3.0") + 1
+    assert fault.startswith(f"sightline[1].place[1].ground_height_m (line {line}): found -3.0")
+    assert "0 to 9000 m" in fault
+
+
+def test_a_silhouette_a_band_and_places_become_si(tmp_path):
+    text = GOOD.replace(
+        "target_height_m = 300.0",
+        'silhouette = [[-50, 0], [0, 250.0], [60, 0]]\nterrain = "ridge.csv"\nalong = ["Cape"]\n'
+        "visibility_km = 40.0\nstand_heights_m = [9, 2, 9]",
+    ).replace(
+        "wavelength_nm = 633.0",
+        'band = "V"\n[[sightline.place]]\nname = "quay"\nposition = [50.0, -5.0]\n'
+        '[[sightline.place]]\nname = "hill"\nground_height_m = 80.0',
+    )
+    hill = load(tmp_path, text).sightlines[0]
+    assert hill.target_height == 250.0  # the outline's highest point
+    assert hill.silhouette[1] == (0.0, 250.0)
+    assert hill.wavelength == 551e-9  # Binney & Merrifield 1998, table 2.1, from memory
+    assert hill.terrain == (tmp_path / "ridge.csv").resolve()
+    assert (hill.along, hill.visibility, hill.stand_heights) == (("Cape",), 40e3, (2.0, 9.0))
+    quay, other = hill.places
+    assert quay.distance == hill.distance  # from the same spot
+    assert (other.distance, other.ground_height) == (hill.distance, 80.0)
+
+
 def test_every_fault_is_told_at_once_with_its_line(tmp_path):
     text = (
         GOOD.replace("members = 16", "membres = 16")
@@ -143,7 +173,22 @@ def test_every_fault_is_told_at_once_with_its_line(tmp_path):
         ('wave = "radio"', 'wave = "radio"\nwavelength_nm = 600.0', "optical sightlines only"),
         ("altitude_m = 3.0", "sea_surface_temperature_c = 15.0", 'with surface = "sea" only'),
         ("altitude_m = 3.0", "sea_surface_temperature_c = 288.15", "from -3 to 40 °C"),
-        ("altitude_m = 3.0", 'surface = "lake"', '"none" or "sea"'),
+        ("altitude_m = 3.0", "roughness_m = 0.1", 'with surface = "land" only'),
+        ("altitude_m = 3.0", "wind_speed_m_s = 5.0", 'with surface = "sea" or "land" only'),
+        ("wavelength_nm = 633.0", 'wavelength_nm = 633.0\nband = "V"', "not both"),
+        ("wavelength_nm = 633.0", 'band = "Q"', "U or B or V"),
+        ("target_height_m = 300.0", "", "give it, or a silhouette"),
+        ("target_height_m = 300.0", "silhouette = [[0, 5], [-1, 9]]", "must not fall"),
+        ("target_height_m = 300.0", "silhouette = [[0, 5], [1, -9]]", "[offset, height]"),
+        ("wavelength_nm = 633.0", 'along = ["Cap"]', "found 'Cap', which is no site"),
+        ("azimuth_deg = 250.0", 'along = ["Cape"]', "needs observer and target"),
+        ("wavelength_nm = 633.0", '[[sightline.place]]\nname = "quay"\nheight_m = 2', "ground_"),
+        (
+            "azimuth_deg = 250.0",
+            '[[sightline.place]]\nname = "quay"\nposition = [1, 2]',
+            "needs the target's position",
+        ),
+        ("altitude_m = 3.0", 'surface = "lake"', '"none", "sea" or "land"'),
         ("air_temperature =", "air_temprature =", "did you mean air_temperature?"),
         ('"tdry [degC]"', '"tdry [degC"', "'variable [unit]'"),
         ('output = "out"', 'output = "s.toml"', "which is a file; expected a folder"),
