@@ -15,6 +15,7 @@ if TYPE_CHECKING:
     import xarray as xr
 
 __all__ = [
+    "APPEARANCES",
     "CAUTION",
     "CEILINGS_M",
     "DUCT_KINDS",
@@ -45,6 +46,16 @@ DUCT_KINDS = {"surface_duct": 1, "elevated_surface_duct": 2, "elevated_duct": 3}
 
 #: Sightline states; the value is the code stored in `sightline_state`.
 SIGHTLINE_STATES = {"shut": 0, "grazing": 1, "open": 2}
+
+#: What a target looks like: bits of `appearance`; a target may have several.
+APPEARANCES = {
+    "looming": 1 << 0,
+    "sinking": 1 << 1,
+    "towering": 1 << 2,
+    "stooping": 1 << 3,
+    "superior_mirage": 1 << 4,
+    "inferior_mirage": 1 << 5,
+}
 
 #: What is known of the air between the surface and the lowest trusted level; code of
 #: `surface_layer_state`.
@@ -221,6 +232,38 @@ _ROWS = [
         "horizon_elevation",
         "elevation of the highest ray that meets the surface, less than 0 by the dip",
         "rad",
+        SIGHT,
+    ),
+    Variable(
+        "lift",
+        "elevation of the highest visible part less that of the same point in standard air",
+        "rad",
+        SIGHT,
+    ),
+    Variable(
+        "arrival_change",
+        "elevation of the target's highest visible part less its median over the local day",
+        "rad",
+        SIGHT,
+    ),
+    Variable(
+        "magnification",
+        "vertical magnification of the target's largest image against straight rays",
+        "1",
+        SIGHT,
+    ),
+    Variable("apparent_height", "angle that all images of the target fill", "rad", SIGHT),
+    Variable(
+        "appearance",
+        "what the target looks like",
+        None,
+        SIGHT,
+        extra={"flag_masks": tuple(APPEARANCES.values()), "flag_meanings": " ".join(APPEARANCES)},
+    ),
+    Variable(
+        "blocked_by",
+        "distance of the ground that stops the ray just under the lowest visible one",
+        "m",
         SIGHT,
     ),
     Variable(

@@ -1,4 +1,4 @@
-"""Through which height at the target's distance each direction of view leads: the transfer curve."""
+"""Through which height at the target each direction of view leads: the transfer curve."""
 
 from __future__ import annotations
 
