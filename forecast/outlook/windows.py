@@ -9,8 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import xarray as xr
 
-from forecast.physics.moisture import CELSIUS_OFFSET
-from forecast.schema import DUCT_KINDS, SURFACE_STATES
+from forecast.outlook.reasons import duct_reason, sightline_reason
 
 if TYPE_CHECKING:
     from forecast.settings import Settings
@@ -18,8 +17,6 @@ if TYPE_CHECKING:
 __all__ = ["Window", "find_windows"]
 
 _GAP = 1.5  # a pause longer than this many usual steps ends a window
-_KIND_WORDS = {code: name.replace("_", " ") for name, code in DUCT_KINDS.items()}
-_LOW_LAYER = 65.0  # m, the lowest layer for which Rec. ITU-R P.453 gives gradient statistics
 
 
 @dataclass(frozen=True)
@@ -35,7 +32,7 @@ class Window:
     subject : str
         The sightline's name, or "duct under 300 m" and so on.
     start, end, best_time : datetime
-        First, last and likeliest valid time, UTC.
+        First, last and likeliest valid time, UTC; the likeliest of those that lie ahead, if any.
     probability, lower, upper : float
         At the likeliest valid time, with the 90 % interval.
     valid_times : int
@@ -133,13 +130,17 @@ def _window(outlook: xr.Dataset, run: np.ndarray, kind: str, item: int, subject:
     chance = outlook[f"{kind}_probability"].values[run, item]
     lower = outlook[f"{kind}_probability_lower"].values[run, item]
     upper = outlook[f"{kind}_probability_upper"].values[run, item]
-    best = int(np.lexsort((np.arange(run.size), -lower, -chance))[0])
+    latest = _latest_ascent(outlook, str(outlook["site"].values[run[0]]))
+    ahead = _utc(outlook["time"].values[run[-1]]) > latest
+    # Of a window that has begun, what is over is nothing to go for.
+    past = np.array([ahead and _utc(outlook["time"].values[i]) <= latest for i in run])
+    best = int(np.lexsort((np.arange(run.size), -lower, -chance, past))[0])
     row = int(run[best])
     times = [_utc(outlook["time"].values[i]) for i in (run[0], run[-1], row)]
     if kind == "sightline":
-        reason = _sightline_reason(outlook, row, item)
+        reason = sightline_reason(outlook, row, item)
     else:
-        reason = _duct_reason(outlook, row, float(outlook["ceiling"].values[item]))
+        reason = duct_reason(outlook, row, float(outlook["ceiling"].values[item]))
     return Window(
         str(outlook["site"].values[row]),
         kind,
@@ -152,7 +153,7 @@ def _window(outlook: xr.Dataset, run: np.ndarray, kind: str, item: int, subject:
         float(upper[best]),
         int(run.size),
         reason,
-        times[1] > _latest_ascent(outlook, str(outlook["site"].values[row])),
+        ahead,
     )
 
 
@@ -171,130 +172,3 @@ def _utc(time: np.datetime64) -> datetime:
 
 def _height(metres: float) -> str:
     return f"{metres:.0f} m" if metres < 1000.0 else f"{metres / 1000.0:g} km"
-
-
-def _sightline_reason(outlook: xr.Dataset, row: int, item: int) -> str:
-    """Why a sightline is likely open: hidden height now and usually, then the bending."""
-    hidden = float(outlook["hidden_height"].values[row, item])
-    low = float(outlook["hidden_height_lower"].values[row, item])
-    high = float(outlook["hidden_height_upper"].values[row, item])
-    standard = float(outlook["hidden_height_standard"].values[item])
-    straight = float(outlook["hidden_height_straight"].values[item])
-    top = float(outlook["target_height"].values[item])
-    shown = f"the lowest {hidden:.0f} m are hidden" if hidden >= 0.5 else "nothing is hidden"
-    parts = [
-        f"{shown.capitalize()} (90 % of members {low:.0f} to {high:.0f} m) against "
-        f"{standard:.0f} m in standard air and {straight:.0f} m with straight rays; "
-        f"the target reaches {top:.0f} m."
-    ]
-    if top > straight:
-        parts.append("It stands above the horizon even without refraction.")
-    elif top > standard:
-        parts.append("It is open in standard air too.")
-    if str(outlook["sightline_wave"].values[item]) == "optical":
-        inverted = int(outlook["inverted_images"].values[row, item])
-        if inverted:
-            images = inverted + int(outlook["upright_images"].values[row, item])
-            parts.append(f"It appears in {images} images, {inverted} of them upside down.")
-        parts.append(_warming(outlook, row))
-    parts.append(_water(outlook, row))
-    parts.append(_lowest_layer(outlook, row))
-    # Only a duct that the path can enter explains anything.
-    reach = max(top, float(outlook["observer_height"].values[item]))
-    parts.append(_duct_sentence(outlook, row, base_under=reach))
-    parts.append(_limits(outlook, row))
-    return " ".join(part for part in parts if part)
-
-
-def _duct_reason(outlook: xr.Dataset, row: int, ceiling: float) -> str:
-    duct = _duct_sentence(outlook, row, top_under=ceiling)
-    if not duct:
-        duct = (
-            "The profile itself has no duct of the strength asked for here; it lies so near to one "
-            "that most members do."
-        )
-    parts = [duct, _lowest_layer(outlook, row), _limits(outlook, row)]
-    return " ".join(part for part in parts if part)
-
-
-def _warming(outlook: xr.Dataset, row: int) -> str:
-    warming = float(outlook["near_ground_warming"].values[row])
-    depth = float(outlook["near_ground_warming_depth"].values[row])
-    if not warming > 0.1 or not depth > 0.0:
-        return ""
-    lowest = float(outlook["air_temperature"].values[row, 0]) - CELSIUS_OFFSET
-    return f"Air warms by {warming:.1f} K in the lowest {depth:.0f} m (from {lowest:.1f} °C)."
-
-
-def _water(outlook: xr.Dataset, row: int) -> str:
-    """What is known of the air next to the water, for sites that lie by the sea."""
-    state = int(outlook["surface_layer_state"].values[row])
-    if state == SURFACE_STATES["unknown"]:
-        return (
-            "The lowest metres over the water are not known (no water temperature, no wind or no "
-            "level between 8 and 60 m): less sure."
-        )
-    if state != SURFACE_STATES["modelled"]:
-        return ""
-    difference = float(outlook["air_sea_temperature_difference"].values[row])
-    side = "colder" if difference >= 0.0 else "warmer"
-    return (
-        f"The water is {abs(difference):.1f} K {side} than the air above; the metres between are "
-        "modelled."
-    )
-
-
-def _lowest_layer(outlook: xr.Dataset, row: int) -> str:
-    """Mean radio gradient and k of the lowest 65 m, as P.453 counts them."""
-    z = outlook["height"].values[row]
-    n = outlook["refractivity"].values[row]
-    good = np.isfinite(z) & np.isfinite(n)
-    if good.sum() < 2 or z[good][-1] < z[good][0] + _LOW_LAYER:
-        return ""
-    z, n = z[good], n[good]
-    slope = (np.interp(z[0] + _LOW_LAYER, z, n) - n[0]) / _LOW_LAYER  # N per m
-    if slope >= 0.0:
-        return f"For radio, N rises by {1e3 * slope:.0f} per km in the lowest {_LOW_LAYER:.0f} m."
-    bend = 1.0 + 1e-6 * slope * float(outlook["earth_radius"].values[row])
-    if bend <= 0.0:
-        k = "level rays bend more than the Earth"
-    else:
-        k = f"k {1.0 / bend:.2f}" if bend > 0.1 else "k above 10"
-    fall = f"N falls by {-1e3 * slope:.0f} per km in the lowest {_LOW_LAYER:.0f} m"
-    return f"For radio, {fall} ({k})."
-
-
-def _duct_sentence(
-    outlook: xr.Dataset, row: int, *, top_under: float = np.inf, base_under: float = np.inf
-) -> str:
-    """Name the strongest radio duct of the profile whose top and base lie under the bounds."""
-    strength = outlook["duct_strength"].values[row]
-    top = outlook["duct_top"].values[row]
-    least = float(outlook.attrs["minimum_duct_strength"])
-    counts = (strength >= least) & (top <= top_under)
-    counts &= outlook["duct_base"].values[row] <= base_under
-    if not counts.any():
-        return ""
-    d = int(np.argmax(np.where(counts, strength, -np.inf)))
-    kind = _KIND_WORDS[int(outlook["duct_kind"].values[row, d])]
-    base = float(outlook["duct_base"].values[row, d])
-    wavelength = float(outlook["longest_trapped_wavelength"].values[row, d])
-    frequency = 299792458.0 / wavelength / 1e9
-    held = f"{frequency:.1f} GHz" if frequency >= 1.0 else f"{1e3 * frequency:.0f} MHz"
-    return (
-        f"{kind.capitalize()} from {base:.0f} to {top[d]:.0f} m, {strength[d]:.0f} M-units strong, "
-        f"holds radio waves above about {held}."
-    )
-
-
-def _limits(outlook: xr.Dataset, row: int) -> str:
-    """Say what the data cannot resolve."""
-    lowest = float(outlook["lowest_level"].values[row])
-    spacing = float(outlook["near_ground_resolution"].values[row])
-    kind = "Ascent" if str(outlook["source_kind"].values[row]) == "ascent" else "Model profile"
-    lead = outlook["lead_time"].values[row].astype("timedelta64[s]").astype(float) / 3600.0
-    ahead = f", {lead:.0f} h ahead" if lead > 0 else ""
-    return (
-        f"{kind}{ahead}: lowest level at {lowest:.0f} m, then one every {spacing:.0f} m; "
-        "thinner layers go unseen."
-    )

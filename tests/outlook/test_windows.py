@@ -99,5 +99,20 @@ def test_what_lies_ahead_of_the_latest_ascent_comes_first():
     assert [(w.probability, w.ahead) for w in windows] == [(0.6, True), (0.9, False)]
 
 
+def test_the_best_time_of_a_window_that_has_begun_lies_ahead():
+    rows = [{"air": air(inversion=500.0)}]
+    rows += [
+        {"air": air(inversion=500.0), "hours": h, "kind": "model", "lead": h} for h in (6, 12)
+    ]
+    outlook = make_outlook(profiles(rows), settings(sightlines=(line(),), members=8))
+    for suffix in ("", "_lower", "_upper"):
+        outlook["sightline_probability" + suffix][:, 0] = [0.9, 0.6, 0.7]
+        outlook["duct_probability" + suffix][:] = 0.0
+    (window,) = find_windows(outlook, settings())
+    assert window.ahead
+    assert window.start == T0
+    assert (window.best_time - T0, window.probability) == (timedelta(hours=12), 0.7)
+
+
 def test_no_run_no_window():
     assert find_windows(outlook_with([0.1, 0.2]), settings()) == []
