@@ -85,6 +85,8 @@ DUCT = ("profile", "duct")
 SIGHT = ("profile", "sightline")
 CEILING = ("profile", "ceiling")
 BAND = ("profile", "height_bin")
+STAND = ("profile", "sightline", "stand")
+PLACE = ("profile", "sightline", "place", "stand")
 
 
 @dataclass(frozen=True)
@@ -294,6 +296,75 @@ _ROWS = [
         "apparent_elevation_standard",
         "elevation of the target's highest visible part in the standard atmosphere",
         "rad",
+        ("sightline",),
+    ),
+    # --- Where to stand -----------------------------------------------------------------------
+    Variable("stand_height", "height of the observer that is tried", "m", ("sightline", "stand")),
+    Variable(
+        "stand_probability", "probability that the sightline is open from this height", "1", STAND
+    ),
+    Variable(
+        "stand_probability_lower", "lower bound (5 %) of the probability at this height", "1", STAND
+    ),
+    Variable(
+        "stand_probability_upper",
+        "upper bound (95 %) of the probability at this height",
+        "1",
+        STAND,
+    ),
+    Variable(
+        "stand_visible_extent",
+        "median over members of the target's visible part from this height",
+        "m",
+        STAND,
+    ),
+    Variable(
+        "stand_in_duct",
+        "share of members in which a duct above or around the eye holds level rays down",
+        "1",
+        STAND,
+    ),
+    Variable("best_stand_height", "likeliest height to see the target from", "m", SIGHT),
+    Variable(
+        "best_stand_height_overall",
+        "likeliest height to see the target from, over all valid times of the site",
+        "m",
+        ("sightline",),
+    ),
+    Variable("place_name", "name of the candidate place", None, ("sightline", "place")),
+    Variable(
+        "place_ground_height", "height of the ground at the place", "m", ("sightline", "place")
+    ),
+    Variable(
+        "place_distance", "distance from the place to the target", "m", ("sightline", "place")
+    ),
+    Variable(
+        "place_probability",
+        "probability that the sightline is open from this height above the place's ground",
+        "1",
+        PLACE,
+    ),
+    Variable("place_probability_lower", "lower bound (5 %) of the place's probability", "1", PLACE),
+    Variable(
+        "place_probability_upper", "upper bound (95 %) of the place's probability", "1", PLACE
+    ),
+    Variable(
+        "place_visible_extent",
+        "median over members of the target's visible part from the place",
+        "m",
+        PLACE,
+    ),
+    Variable(
+        "best_place_height",
+        "likeliest height above the place's ground to see the target from",
+        "m",
+        ("profile", "sightline", "place"),
+    ),
+    Variable("best_place", "position of the likeliest place, -1 for none", "1", SIGHT),
+    Variable(
+        "best_place_overall",
+        "position of the likeliest place over all valid times of the site, -1 for none",
+        "1",
         ("sightline",),
     ),
     # --- Outlook ------------------------------------------------------------------------------
