@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from types import SimpleNamespace
+from pathlib import Path
 
 import numpy as np
 import xarray as xr
 
 from forecast.physics.moisture import specific_humidity_from_relative_humidity
+from forecast.settings import Settings, Sightline
 
 HEIGHT = np.arange(0.0, 4000.0, 20.0)
 START = np.datetime64("2031-05-01T00:00:00", "ns")
@@ -59,7 +60,7 @@ def profiles(rows: list[dict]) -> xr.Dataset:
     )
 
 
-def line(**changes) -> SimpleNamespace:
+def line(**changes) -> Sightline:
     """A radio sightline just beyond the standard horizon."""
     values = {
         "name": "link",
@@ -72,10 +73,10 @@ def line(**changes) -> SimpleNamespace:
         "wave": "radio",
         "wavelength": 550e-9,
     }
-    return SimpleNamespace(**{**values, **changes})
+    return Sightline(**{**values, **changes})
 
 
-def settings(**changes) -> SimpleNamespace:
+def settings(**changes) -> Settings:
     """The settings that the outlook reads."""
     values = {
         "title": "test",
@@ -84,7 +85,8 @@ def settings(**changes) -> SimpleNamespace:
         "window_threshold": 0.5,
         "minimum_duct_strength": 2.0,
         "chart_top": 3000.0,
+        "output": Path("outlook"),
         "sightlines": (),
         "sites": (),
     }
-    return SimpleNamespace(**{**values, **changes})
+    return Settings(**{**values, **changes})

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from types import SimpleNamespace
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -14,6 +14,7 @@ from forecast.outlook.duct_events import duct_cover, duct_under
 from forecast.outlook.statistics import probability_interval
 from forecast.physics.ducts import find_ducts
 from forecast.schema import SIGHTLINE_STATES
+from forecast.settings import Site
 from tests.outlook.build import air, line, profiles, settings
 
 
@@ -161,8 +162,8 @@ def over_water(difference, **changes):
         eastward_wind=(("profile", "level"), wind),
         northward_wind=(("profile", "level"), 0.0 * wind),
     )
-    site = SimpleNamespace(name="cape", surface="sea", sea_surface_temperature=288.02 - difference)
-    values = {"sites": (SimpleNamespace(**{**vars(site), **changes}),), "members": 64}
+    site = Site("cape", 51.0, -20.0, surface="sea", sea_surface_temperature=288.02 - difference)
+    values = {"sites": (replace(site, **changes),), "members": 64}
     low = line(wave="optical", observer_height=3.0, target_height=30.0, distance=30e3)
     return data, settings(sightlines=(low,), **values)
 
