@@ -1,9 +1,8 @@
 """From profiles to probabilities: ducts and sightlines, each with an interval, by valid time.
 
-For each site and valid time one profile speaks: an ascent before a model profile, the shortest
-lead time before longer ones. Its members (a model ensemble of eight or more as it is, otherwise
-Monte Carlo draws) go through the same physics, and the probability is the share of members in
-which the thing happens, with the central 90 % interval of its Beta posterior (Jeffreys' prior;
+The members of the profile that speaks for a site and valid time (a model ensemble of eight or more
+as it is, otherwise Monte Carlo draws) go through the same physics, and the probability is the share
+of members in which the thing happens, with the central 90 % interval of its Beta posterior (Jeffreys' prior;
 Brown, Cai & DasGupta 2001, Statistical Science 16, sect. 3.1.3), widened for coarse profiles.
 """
 
@@ -17,13 +16,9 @@ import xarray as xr
 from forecast.errors import InputError
 from forecast.outlook import members as draws
 from forecast.outlook.sightlines import sightline_geometry, trace_paths
-from forecast.outlook.statistics import Progress, Row, height_bins, member_statistics
-from forecast.outlook.surface import (
-    STATE_NAMES,
-    SurfaceInputs,
-    add_surface_layer,
-    surface_inputs,
-)
+from forecast.outlook.speaking import speaking_profiles
+from forecast.outlook.statistics import Progress, height_bins, member_statistics
+from forecast.outlook.surface import SurfaceInputs
 from forecast.physics.column_batch import analyse_columns
 from forecast.physics.columns import duct_dataset
 from forecast.physics.curvature import classify_layers, ray_curvature
@@ -34,11 +29,10 @@ from forecast.physics.surface_layer import SurfaceLayer
 from forecast.schema import CAUTION, CEILINGS_M, describe
 
 if TYPE_CHECKING:
-    from forecast.settings import Settings, Sightline
+    from forecast.settings import Settings
 
 __all__ = ["make_outlook"]
 
-_SMALLEST_ENSEMBLE = 8
 _NEAR_GROUND = 300.0  # m
 
 
@@ -70,31 +64,17 @@ def make_outlook(
     """
     if profiles.sizes.get("profile", 0) == 0:
         raise InputError("no profile to work on", source="make_outlook")
-    if "site" not in profiles.coords:
-        profiles = profiles.assign_coords(site=("profile", profiles["station"].values.astype(str)))
-    rows = _speaking_rows(profiles)
     lines = list(settings.sightlines)
-    state, wind, valid_top = _usable_levels(profiles, _reach(settings, lines))
-    water = surface_inputs(profiles, wind, state["height"], settings)
-    index = [row.index for row in rows]
-    chosen = profiles.isel(profile=index)
-    guess = {name: a[index] for name, a in state.items()}
-    tops = valid_top[index]
-    site = chosen["site"].values.astype(str)
-    latitude = chosen["latitude"].values.astype(float)
-    radius = euler_radius(latitude)
+    told = speaking_profiles(profiles, settings)
+    radius = euler_radius(told.latitude)
+    data = _best_guess(told.guess, radius, settings.chart_top)
+    data.update(sightline_geometry(lines, told.latitude, told.site))
+    data.update(trace_paths(lines, told.air, told.latitude, told.site))
+    data.update(_resolution(told.guess))
+    data.update(_surface(told.guess, told.row_water, told.surface_state, told.layer))
+    data.update(member_statistics(told, lines, data, settings, progress))
 
-    data = _best_guess(guess, radius, settings.chart_top)
-    data.update(sightline_geometry(lines, latitude, site))
-    air, surface_state, layer = add_surface_layer(guess, water.take(index))
-    data.update(trace_paths(lines, air, latitude, site))
-    data.update(_resolution(guess))
-    data.update(_surface(guess, water.take(index), surface_state, layer))
-    data.update(
-        member_statistics(profiles, state, water, rows, lines, data, tops, settings, progress)
-    )
-
-    coords = {name: c for name, c in chosen.coords.items() if c.dims == ("profile",)}
+    coords = {name: c for name, c in told.chosen.coords.items() if c.dims == ("profile",)}
     coords.pop("member", None)
     outlook = xr.Dataset(data, coords=coords)
     outlook = outlook.assign_coords(
@@ -113,71 +93,6 @@ def make_outlook(
         "caution": CAUTION,
     }
     return describe(outlook)
-
-
-def _speaking_rows(profiles: xr.Dataset) -> list[Row]:
-    """One row per (site, time), sorted by both."""
-    site = profiles["site"].values.astype(str)
-    station = profiles["station"].values.astype(str)
-    time = profiles["time"].values
-    model = profiles["source_kind"].values.astype(str) != "ascent"
-    lead = profiles["lead_time"].values.astype("timedelta64[s]").astype(float)
-    groups: dict[tuple[str, Any], list[int]] = {}
-    for i in range(time.size):
-        groups.setdefault((site[i], time[i]), []).append(i)
-    member = profiles["member"].values if "member" in profiles.coords else np.full(time.size, 0)
-    rows = []
-    for key in sorted(groups):
-        best = min(groups[key], key=lambda i: (model[i], lead[i], station[i], i))
-        same = [
-            i
-            for i in groups[key]
-            if model[i] and (lead[i], station[i]) == (lead[best], station[best])
-        ]
-        same.sort(key=lambda i: member[i])
-        whole = tuple(same) if model[best] and len(same) >= _SMALLEST_ENSEMBLE else ()
-        rows.append(Row(best, whole))
-    return rows
-
-
-def _reach(settings: Settings, lines: list[Sightline]) -> float:
-    """Height up to which rays and charts need the air, m."""
-    # A ray that grazes the surface half-way stands d²/2a above it at the far end.
-    far = [line.target_height + line.observer_height + line.distance**2 / 12.0e6 for line in lines]
-    return max(settings.chart_top, max(CEILINGS_M), *far, 0.0) * 1.05
-
-
-def _usable_levels(
-    profiles: xr.Dataset, reach: float
-) -> tuple[dict[str, np.ndarray], np.ndarray, np.ndarray]:
-    """Pack each profile's complete levels to the front and cut them above `reach`.
-
-    Returns the state arrays and wind speed (profile, level), and the height of each profile's
-    highest usable level before the cut.
-    """
-    arrays = {
-        name: profiles[name].transpose("profile", "level").values.astype(float)
-        for name in STATE_NAMES
-    }
-    valid = np.logical_and.reduce([np.isfinite(a) for a in arrays.values()])
-    height = np.where(valid, arrays["height"], -np.inf)
-    tops = height.max(axis=1)
-    # One level beyond the reach stays, so that the layer across it is known.
-    beyond = np.cumsum(valid & (height > reach), axis=1)
-    valid &= beyond <= 1
-    order = np.argsort(~valid, axis=1, kind="stable")[:, : max(2, int(valid.sum(axis=1).max()))]
-    packed = np.take_along_axis(valid, order, axis=1)
-    speed = np.full(valid.shape, np.nan)
-    if "eastward_wind" in profiles and "northward_wind" in profiles:
-        speed = np.hypot(
-            profiles["eastward_wind"].transpose("profile", "level").values.astype(float),
-            profiles["northward_wind"].transpose("profile", "level").values.astype(float),
-        )
-    state = {
-        name: np.where(packed, np.take_along_axis(a, order, axis=1), np.nan)
-        for name, a in arrays.items()
-    }
-    return state, np.take_along_axis(speed, order, axis=1), tops
 
 
 def _best_guess(

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -13,7 +12,8 @@ from scipy.special import betaincinv
 from forecast.outlook import members as draws
 from forecast.outlook.duct_events import duct_cover, duct_under
 from forecast.outlook.sightlines import trace_paths
-from forecast.outlook.surface import STATE_NAMES, SurfaceInputs, add_surface_layer, draw_errors
+from forecast.outlook.speaking import Row, Speaking
+from forecast.outlook.surface import STATE_NAMES, add_surface_layer, draw_errors
 from forecast.physics.column_batch import analyse_columns
 from forecast.physics.earth import euler_radius
 from forecast.schema import CEILINGS_M, SIGHTLINE_STATES, SURFACE_STATES
@@ -21,20 +21,12 @@ from forecast.schema import CEILINGS_M, SIGHTLINE_STATES, SURFACE_STATES
 if TYPE_CHECKING:
     from forecast.settings import Settings, Sightline
 
-__all__ = ["Progress", "Row", "height_bins", "member_statistics", "probability_interval"]
+__all__ = ["Progress", "height_bins", "member_statistics", "probability_interval"]
 
 _CHUNK_VALUES = 3_000_000  # member values worked on at once; bounds memory to some 300 MB
 
 #: Called with (done, total, label).
 Progress = Callable[[int, int, str], None]
-
-
-@dataclass(frozen=True)
-class Row:
-    """One valid time of a site: the profile that speaks, and its ensemble if it has one."""
-
-    index: int
-    ensemble: tuple[int, ...]
 
 
 def probability_interval(hits: Any, trials: Any) -> tuple[np.ndarray, np.ndarray]:
@@ -66,17 +58,14 @@ def height_bins(chart_top: float) -> np.ndarray:
 
 
 def member_statistics(
-    profiles: xr.Dataset,
-    state: dict[str, np.ndarray],
-    water: SurfaceInputs,
-    rows: list[Row],
+    told: Speaking,
     lines: list[Sightline],
     data: dict[str, Any],
-    tops: np.ndarray,
     settings: Settings,
     progress: Progress | None,
 ) -> dict[str, Any]:
     """Shares of members in which ducts lie under the ceilings and sightlines are open."""
+    profiles, state, water, rows = told.profiles, told.state, told.water, told.rows
     site = profiles["site"].values.astype(str)
     latitude = profiles["latitude"].values.astype(float)
     bins = height_bins(settings.chart_top)
@@ -121,8 +110,8 @@ def member_statistics(
         if progress is not None:
             progress(done, n_rows, "members")
     # A profile cut short cannot tell of ducts it does not reach.
-    duct_hits[tops[:, None] < ceilings] = np.nan
-    cover[tops[:, None] < bins] = np.nan
+    duct_hits[told.tops[:, None] < ceilings] = np.nan
+    cover[told.tops[:, None] < bins] = np.nan
     rule = draws.error_model()["interval"]
     share = np.minimum(1.0, rule["spacing"] / np.maximum(data["near_ground_resolution"][1], 1e-3))
     fewest = np.minimum(rule["fewest"], count)
