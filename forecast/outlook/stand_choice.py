@@ -10,7 +10,9 @@ from __future__ import annotations
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+import xarray as xr
 
+from forecast.errors import printable
 from forecast.outlook.stand import StandShares, place_distances, place_grounds, stand_heights
 from forecast.outlook.statistics import probability_interval
 from forecast.schema import SURFACE_STATES
@@ -18,15 +20,17 @@ from forecast.schema import SURFACE_STATES
 if TYPE_CHECKING:
     from forecast.settings import Sightline
 
-__all__ = ["best_choice", "known_from", "stand_statistics"]
+__all__ = ["best_choice", "best_occasion", "known_from", "stand_statistics", "stand_words"]
 
+_CLEAR = 0.1  # heights whose probabilities differ by less are told as equal (ours, no source)
+_DUCT_CLEAR = 0.25  # likewise for the shares of members with the eye in a duct
 _EXTENT_STEP = 0.1  # m; visible extents nearer than the tracer's own tolerance are equal
 
 
 def known_from(surface_state: np.ndarray, lowest_level: np.ndarray) -> np.ndarray:
     """Height (m) of the eye from which each row can be judged, (row,).
 
-    Where a path over water has no surface layer because its inputs are missing, nothing is known
+    Where a path has no surface layer because its inputs are missing, nothing is known
     of the air under the lowest level; everywhere else all heights count.
     """
     blind = np.asarray(surface_state) == SURFACE_STATES["unknown"]
@@ -118,6 +122,154 @@ def best_choice(chance: np.ndarray, lower: np.ndarray, extent: np.ndarray) -> np
         value = np.where(left, np.nan_to_num(key), -np.inf)
         left &= value == value.max(axis=-1, keepdims=True, initial=-np.inf)
     return np.where(left.any(axis=-1), left.argmax(axis=-1) if left.shape[-1] else -1, -1)
+
+
+def best_occasion(outlook: xr.Dataset, sightline: int) -> tuple[int, int] | None:
+    """Valid time and height to name for a sightline: the likeliest ahead, or of late if none is.
+
+    Parameters
+    ----------
+    outlook : xarray.Dataset
+        With the variables of `stand_statistics`.
+    sightline : int
+        Position along ``sightline``.
+
+    Returns
+    -------
+    tuple of int or None
+        Positions along ``profile`` and ``stand``; of equals the surest, then the earliest. None if
+        no height is best at any time.
+    """
+    rows = _rows(outlook, sightline)
+    best = outlook["best_stand_height"].values[rows, sightline]
+    if not np.isfinite(best).any():
+        return None
+    rows = rows[np.isfinite(best)]
+    best = best[np.isfinite(best)]
+    heights = outlook["stand_height"].values[sightline]
+    stand = np.nanargmin(np.abs(heights - best[:, None]), axis=1)
+    chance, lower = (
+        outlook[f"stand_probability{suffix}"].values[rows, sightline, stand]
+        for suffix in ("", "_lower")
+    )
+    first = np.lexsort((outlook["time"].values[rows], -lower, -chance))[0]
+    return int(rows[first]), int(stand[first])
+
+
+def stand_words(outlook: xr.Dataset, sightline: int) -> str:
+    """Where to stand for a sightline, in a sentence of numbers.
+
+    Parameters
+    ----------
+    outlook : xarray.Dataset
+        From `forecast.make_outlook`, with the variables of `stand_statistics`.
+    sightline : int
+        Position along ``sightline``.
+
+    Returns
+    -------
+    str
+        The likeliest height and time; how that compares with other heights at that time, as found,
+        and how often the eye lies in a duct where that differs; the likeliest place; what is not
+        known.
+    """
+    rows = _rows(outlook, sightline)
+    heights = outlook["stand_height"].values[sightline]
+    chance = outlook["stand_probability"].values[:, sightline]
+    known = np.isfinite(chance[rows])
+    if not known.any():
+        return "No height can be judged: there is no usable air."
+    unknown = _unknown_below(outlook, rows)
+    found = best_occasion(outlook, sightline)
+    if found is None:
+        tried = heights[known.any(axis=0)]
+        judged = " that can be judged" if unknown else ""
+        span = f"{tried.min():g} to {tried.max():g} m" if tried.size > 1 else f"{tried[0]:g} m"
+        times = int(known.any(axis=1).sum())
+        covered = f"all {times} valid times" if times > 1 else "the only valid time"
+        return f"Never open from any height{judged} ({span}): 0 % at {covered}.{unknown}"
+    row, best = found
+    time = np.datetime_as_string(outlook["time"].values[row].astype("datetime64[m]"))
+    spread = _spread(outlook, "stand", (row, sightline, best))
+    text = f"Best from {heights[best]:g} m ({spread}) at {time.replace('T', ' ')} UTC"
+    text += f"; {_comparison(outlook, row, sightline, best)}."
+    place = int(outlook["best_place"].values[row, sightline]) if "best_place" in outlook else -1
+    if place >= 0:
+        at = float(outlook["best_place_height"].values[row, sightline, place])
+        stand = int(np.nanargmin(np.abs(heights - at)))
+        name = printable(outlook["place_name"].values[sightline, place], 60)
+        odds = _spread(outlook, "place", (row, sightline, place, stand))
+        text += f" Best place then: {name}, {at:g} m above its ground ({odds})."
+    return text + _unknown_below(outlook, np.array([row]))
+
+
+def _rows(outlook: xr.Dataset, sightline: int) -> np.ndarray:
+    """Rows of the sightline's site: those after its latest ascent, or all if there are none."""
+    site = outlook["site"].values.astype(str)
+    rows = np.flatnonzero(site == str(outlook["sightline_site"].values[sightline]))
+    time = outlook["time"].values[rows]
+    ascent = outlook["source_kind"].values[rows].astype(str) == "ascent"
+    if not ascent.any():
+        return rows
+    ahead = time > time[ascent].max()
+    return rows[ahead] if ahead.any() else rows
+
+
+def _comparison(outlook: xr.Dataset, row: int, sightline: int, best: int) -> str:
+    """How the best height compares with the highest, the lowest and the worst one."""
+    heights = outlook["stand_height"].values[sightline]
+    chance = outlook["stand_probability"].values[row, sightline]
+    known = known_from(outlook["surface_layer_state"].values, outlook["lowest_level"].values)[row]
+    judged = np.flatnonzero(np.isfinite(chance) & (heights >= known))
+    low, high = judged[0], judged[-1]
+    worst = int(judged[np.argmin(chance[judged])])
+
+    def said(stand: int) -> str:
+        return f"{heights[stand]:g} m {100.0 * chance[stand]:.0f} %"
+
+    if judged.size == 1:
+        return "no other height can be judged" if known > 0.0 else "no other height was tried"
+    if chance[best] - chance[worst] < _CLEAR:
+        return f"other heights do as well, none under {100.0 * chance[worst]:.0f} %"
+    if chance[best] - chance[high] >= _CLEAR:
+        ducts = _ducts(outlook, row, sightline, best, high)
+        return f"as found, low beats high: from {said(high)}{ducts}"
+    if worst > low and chance[low] - chance[worst] >= _CLEAR:
+        ducts = _ducts(outlook, row, sightline, low, worst)
+        return (
+            f"as found, low beats middling, not high: from {said(low)}, from {said(worst)}{ducts}"
+        )
+    return f"as found, higher is better: from {said(worst)}"
+
+
+def _ducts(outlook: xr.Dataset, row: int, sightline: int, one: int, other: int) -> str:
+    """How often the eye lies in a duct at two heights, if that differs clearly."""
+    heights = outlook["stand_height"].values[sightline]
+    share = outlook["stand_in_duct"].values[row, sightline]
+    if not share[one] - share[other] >= _DUCT_CLEAR:
+        return ""
+    return (
+        f" (the eye is in a duct in {100.0 * share[one]:.0f} % of members at {heights[one]:g} m, "
+        f"in {100.0 * share[other]:.0f} % at {heights[other]:g} m)"
+    )
+
+
+def _unknown_below(outlook: xr.Dataset, rows: np.ndarray) -> str:
+    known = known_from(outlook["surface_layer_state"].values, outlook["lowest_level"].values)[rows]
+    if not (known > 0.0).any():
+        return ""
+    return (
+        f" Heights below {known.max():.0f} m are not known: the air next to the surface could not "
+        "be modelled."
+    )
+
+
+def _spread(outlook: xr.Dataset, name: str, at: tuple[int, ...]) -> str:
+    chance, lower, upper = (
+        100.0 * float(outlook[f"{name}_probability{suffix}"].values[at])
+        for suffix in ("", "_lower", "_upper")
+    )
+    return f"{chance:.0f} %, {lower:.0f} to {upper:.0f} %"
 
 
 def _add_interval(
