@@ -246,6 +246,17 @@ def _target_faults(row: dict[str, Any]) -> Iterator[tuple[str, str]]:
         yield "silhouette", "offsets must not fall from one point to the next"
     if points and top is None:
         top = max(height for _, height in points)
+    tide = row.get("sea_level_offset_m", 0.0)
+    for key, height, words in (
+        ("observer_height_m", row.get("observer_height_m"), "the observer"),
+        ("target_height_m" if outline is None else "silhouette", top, "the target's top"),
+    ):
+        if _is_number(tide) and _is_number(height) and 0.0 <= height < tide:
+            yield (
+                key,
+                f"found {_found(height)}, {words} under water: sea_level_offset_m is "
+                f"{_found(tide)}; heights are above mean sea level",
+            )
     both = isinstance(bottom, int | float) and isinstance(top, int | float)
     if both and MAX_HEIGHT_M >= bottom > top:
         yield (

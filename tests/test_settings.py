@@ -181,6 +181,7 @@ def test_every_fault_is_told_at_once_with_its_line(tmp_path):
         ("target_height_m = 300.0", "silhouette = [[0, 5], [-1, 9]]", "must not fall"),
         ("target_height_m = 300.0", "silhouette = [[0, 5], [1, -9]]", "[offset, height]"),
         ("wavelength_nm = 633.0", 'along = ["Cap"]', "found 'Cap', which is no site"),
+        ("wavelength_nm = 633.0", "sea_level_offset_m = 5.0", "the observer under water"),
         ("azimuth_deg = 250.0", 'along = ["Cape"]', "needs observer and target"),
         ("wavelength_nm = 633.0", '[[sightline.place]]\nname = "quay"\nheight_m = 2', "ground_"),
         (

@@ -2,8 +2,9 @@
 
 The members of the profile that speaks for a site and valid time (a model ensemble of eight or more
 as it is, otherwise Monte Carlo draws) go through the same physics, and the probability is the share
-of members in which the thing happens, with the central 90 % interval of its Beta posterior (Jeffreys' prior;
-Brown, Cai & DasGupta 2001, Statistical Science 16, sect. 3.1.3), widened for coarse profiles.
+of members in which the thing happens, with the central 90 % interval of its Beta posterior
+(Jeffreys' prior; Brown, Cai & DasGupta 2001, Statistical Science 16, sect. 3.1.3), widened for
+coarse profiles.
 """
 
 from __future__ import annotations
@@ -15,7 +16,7 @@ import xarray as xr
 
 from forecast.errors import InputError
 from forecast.outlook import members as draws
-from forecast.outlook.sightlines import sightline_geometry, trace_paths
+from forecast.outlook.sightlines import arrival_change, look_along, sightline_geometry
 from forecast.outlook.speaking import speaking_profiles
 from forecast.outlook.statistics import Progress, height_bins, member_statistics
 from forecast.outlook.surface import SurfaceInputs
@@ -68,8 +69,14 @@ def make_outlook(
     told = speaking_profiles(profiles, settings)
     radius = euler_radius(told.latitude)
     data = _best_guess(told.guess, radius, settings.chart_top)
-    data.update(sightline_geometry(lines, told.latitude, told.site))
-    data.update(trace_paths(lines, told.air, told.latitude, told.site))
+    geometry = sightline_geometry(lines, told.latitude, told.site)
+    data.update(geometry)
+    data.update(look_along(lines, told.air, told.latitude, told.site, geometry))
+    zones = {site.name: site.timezone for site in settings.sites}
+    data["arrival_change"] = (
+        ("profile", "sightline"),
+        arrival_change(data["apparent_elevation"][1], told.chosen["time"].values, told.site, zones),
+    )
     data.update(_resolution(told.guess))
     data.update(_surface(told.guess, told.row_water, told.surface_state, told.layer))
     data.update(member_statistics(told, lines, data, settings, progress))

@@ -2,21 +2,37 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from datetime import datetime
 from typing import TYPE_CHECKING, Any
+from zoneinfo import ZoneInfo
 
 import numpy as np
 
 from forecast.outlook.surface import STATE_NAMES
+from forecast.physics.appearance import appearance
 from forecast.physics.column_batch import analyse_columns
 from forecast.physics.earth import MEAN_EARTH_RADIUS, euler_radius
-from forecast.physics.rays import build_medium
+from forecast.physics.rays import Medium, build_medium
 from forecast.physics.refractive_index import optical_refractivity
-from forecast.physics.sightline import standard_medium, trace_sightlines
+from forecast.physics.sightline import SightlineTable, standard_medium, trace_sightlines
 
 if TYPE_CHECKING:
     from forecast.settings import Sightline
 
-__all__ = ["sightline_geometry", "trace_paths"]
+__all__ = [
+    "arrival_change",
+    "line_media",
+    "look_along",
+    "over_water",
+    "sightline_geometry",
+    "trace_paths",
+    "wave_refractivity",
+]
+
+_FLOATS = ("hidden_height", "visible_extent", "apparent_elevation", "horizon_elevation")
+_IMAGES = ("upright_images", "inverted_images")
+_BOUNDS = ("visible_bottom", "visible_top")
 
 
 def sightline_geometry(
@@ -40,10 +56,7 @@ def sightline_geometry(
             here = latitude[site == line.site]
             radius = float(euler_radius(np.mean(here) if here.size else 45.0, line.azimuth))
             air = standard_medium(line.wave if label == "standard" else "straight", radius)
-            table = trace_sightlines(
-                air, line.observer_height, line.target_height, line.distance,
-                line.target_base_height,
-            )  # fmt: skip
+            table = trace_sightlines(air, *over_water(line))
             hidden[i] = table.hidden_height[0, 0]
             elevation[i] = table.apparent_elevation[0, 0]
         geometry[f"hidden_height_{label}"] = ("sightline", hidden)
@@ -51,24 +64,17 @@ def sightline_geometry(
     return geometry
 
 
-def trace_paths(
+def line_media(
     lines: list[Sightline], state: dict[str, np.ndarray], latitude: np.ndarray, site: np.ndarray
-) -> dict[str, Any]:
-    """Every sightline through the columns of its own site; columns may be rows or members."""
-    shape = (site.size, len(lines))
-    codes = np.full(shape, -1, dtype=np.int8)
-    floats = {
-        name: np.full(shape, np.nan)
-        for name in (
-            "hidden_height",
-            "visible_extent",
-            "apparent_elevation",
-            "horizon_elevation",
-        )
-    }
-    images = {
-        name: np.zeros(shape, dtype=np.int16) for name in ("upright_images", "inverted_images")
-    }
+) -> Iterator[tuple[int, Sightline, np.ndarray, Medium]]:
+    """The air of each sightline: columns of its own site, as the light or radio wave meets them.
+
+    Yields
+    ------
+    tuple
+        Number of the sightline, the sightline, its columns, the medium over those columns;
+        sightlines without a column are left out.
+    """
     refractivity: dict[tuple[str, str, float], np.ndarray] = {}
     for i, line in enumerate(lines):
         own = np.flatnonzero(site == line.site)
@@ -77,23 +83,136 @@ def trace_paths(
         air = {name: a[own] for name, a in state.items()}
         key = (line.site, line.wave, line.wavelength if line.wave == "optical" else 0.0)
         if key not in refractivity:
-            refractivity[key] = _refractivity(air, line)
-        medium = build_medium(
+            refractivity[key] = wave_refractivity(air, line)
+        yield i, line, own, build_medium(
             air["height"], refractivity[key], euler_radius(latitude[own], line.azimuth), line.wave
-        )
-        table = trace_sightlines(
-            medium, line.observer_height, line.target_height, line.distance,
-            line.target_base_height,
         )  # fmt: skip
-        codes[own, i] = table.state[:, 0]
-        for name, values in (*floats.items(), *images.items()):
-            values[own, i] = getattr(table, name)[:, 0]
+
+
+def trace_paths(
+    lines: list[Sightline], state: dict[str, np.ndarray], latitude: np.ndarray, site: np.ndarray
+) -> dict[str, Any]:
+    """Every sightline through the columns of its own site; columns may be rows or members."""
+    found = _Table(site.size, len(lines))
+    for i, line, own, medium in line_media(lines, state, latitude, site):
+        found.put(own, i, trace_sightlines(medium, *over_water(line)))
+    return found.named()
+
+
+def look_along(
+    lines: list[Sightline],
+    state: dict[str, np.ndarray],
+    latitude: np.ndarray,
+    site: np.ndarray,
+    geometry: dict[str, Any],
+) -> dict[str, Any]:
+    """As `trace_paths`, and what each target looks like; for rows, not for members.
+
+    ``geometry`` is that of `sightline_geometry`.
+    """
+    found = _Table(site.size, len(lines))
+    shape = (site.size, len(lines))
+    names = ("lift", "magnification", "apparent_height")
+    looks = {name: np.full(shape, np.nan) for name in names}
+    classes = np.zeros(shape, dtype=np.int16)
+    for i, line, own, medium in line_media(lines, state, latitude, site):
+        observer, top, distance, base = over_water(line)
+        table = trace_sightlines(medium, observer, top, distance, base)
+        found.put(own, i, table)
+        if line.wave == "optical":
+            hidden = bool(geometry["hidden_height_standard"][1][i] > top)
+            seen = appearance(medium, observer, base, top, distance, table, hidden)
+            for name, values in looks.items():
+                values[own, i] = getattr(seen, name)
+            classes[own, i] = seen.classes
     both = ("profile", "sightline")
-    named = {"sightline_state": codes, **floats, **images}
-    return {name: (both, values) for name, values in named.items()}
+    named = found.named(intervals=True)
+    named.update({name: (both, values) for name, values in looks.items()})
+    return {**named, "appearance": (both, classes)}
 
 
-def _refractivity(air: dict[str, np.ndarray], line: Sightline) -> np.ndarray:
+def over_water(line: Sightline) -> tuple[float, float, float, float]:
+    """Observer height, top of the target, distance and its base, m, heights above the water."""
+    tide = line.sea_level_offset
+    base = max(line.target_base_height - tide, 0.0)
+    return line.observer_height - tide, line.target_height - tide, line.distance, base
+
+
+def arrival_change(
+    elevation: np.ndarray, time: np.ndarray, site: np.ndarray, zones: dict[str, str]
+) -> np.ndarray:
+    """How far the direction of arrival has moved from its median over the site's local day.
+
+    Parameters
+    ----------
+    elevation : ndarray
+        Elevation at which the target's highest visible part appears, rad, (row, sightline).
+    time : ndarray of datetime64
+        UTC, (row,).
+    site : ndarray of str
+        (row,).
+    zones : dict
+        IANA time zone of each site; UTC where it is missing.
+
+    Returns
+    -------
+    ndarray
+        rad, (row, sightline); NaN where nothing is seen.
+    """
+    seconds = time.astype("datetime64[s]").astype(np.int64)
+    days = [
+        (name, datetime.fromtimestamp(int(at), ZoneInfo(zones.get(name, "UTC"))).date())
+        for name, at in zip(site, seconds, strict=True)
+    ]
+    change = np.full(elevation.shape, np.nan)
+    for day in set(days):
+        rows = np.array([d == day for d in days])
+        seen = np.isfinite(elevation[rows]).any(axis=0)
+        median = np.full(seen.size, np.nan)
+        if seen.any():
+            median[seen] = np.nanmedian(elevation[rows][:, seen], axis=0)
+        change[rows] = elevation[rows] - median
+    return change
+
+
+class _Table:
+    """Results of all sightlines, columns by sightline."""
+
+    def __init__(self, columns: int, lines: int) -> None:
+        shape = (columns, lines)
+        self.state: np.ndarray = np.full(shape, -1, dtype=np.int8)
+        self.floats = {name: np.full(shape, np.nan) for name in _FLOATS}
+        self.images = {name: np.zeros(shape, dtype=np.int16) for name in _IMAGES}
+        self.bounds: dict[str, np.ndarray] = {
+            name: np.full((*shape, 1), np.nan) for name in _BOUNDS
+        }
+
+    def put(self, own: np.ndarray, i: int, table: SightlineTable) -> None:
+        """Enter the results of one sightline."""
+        self.state[own, i] = table.state[:, 0]
+        kept: dict[str, np.ndarray] = {**self.floats, **self.images}
+        for name, values in kept.items():
+            values[own, i] = getattr(table, name)[:, 0]
+        for name, values in self.bounds.items():
+            found = getattr(table, name)[:, 0]
+            more = found.shape[-1] - values.shape[-1]
+            if more > 0:
+                wider = np.pad(values, ((0, 0), (0, 0), (0, more)), constant_values=np.nan)
+                self.bounds[name] = values = wider
+            values[own, i, : found.shape[-1]] = found
+
+    def named(self, intervals: bool = False) -> dict[str, Any]:
+        """Arrays with their dimensions, by the names of the schema."""
+        both = ("profile", "sightline")
+        arrays = {"sightline_state": self.state, **self.floats, **self.images}
+        named: dict[str, Any] = {name: (both, values) for name, values in arrays.items()}
+        if intervals:
+            named.update({k: ((*both, "interval"), v) for k, v in self.bounds.items()})
+        return named
+
+
+def wave_refractivity(air: dict[str, np.ndarray], line: Sightline) -> np.ndarray:
+    """Refractivity of columns for the wave of a sightline, (column, level)."""
     p, t, q = (air[name] for name in STATE_NAMES[1:])
     if line.wave == "optical":
         return optical_refractivity(p, t, q, line.wavelength)
