@@ -20,9 +20,14 @@ __all__ = [
     "CEILINGS_M",
     "DUCT_KINDS",
     "LAYER_CLASSES",
+    "LEVEL_ORIGINS",
     "QUALITY_FLAGS",
     "SIGHTLINE_STATES",
+    "SURFACE_AIR_SOURCES",
+    "SURFACE_REASONS",
+    "SURFACE_SOURCES",
     "SURFACE_STATES",
+    "SURFACE_WIND_SOURCES",
     "VARIABLES",
     "Variable",
     "attributes",
@@ -61,6 +66,28 @@ APPEARANCES = {
 #: `surface_layer_state`.
 SURFACE_STATES = {"none": 0, "modelled": 1, "unknown": 2}
 
+#: Why the air next to the surface is not known; code of `surface_layer_reason`.
+SURFACE_REASONS = {
+    "none": 0,
+    "no_surface_temperature": 1,
+    "no_wind": 2,
+    "no_level_near_surface": 3,
+    "too_stable": 4,
+    "not_converged": 5,
+}
+
+#: Where the temperature of water or ground is from; code of `surface_source`.
+SURFACE_SOURCES = {"none": 0, "settings": 1, "series": 2, "profile": 3}
+
+#: Where the wind of the surface layer is from; code of `surface_wind_source`.
+SURFACE_WIND_SOURCES = {"none": 0, "settings": 1, "series": 2, "ten_metres": 3, "level": 4}
+
+#: Which air the surface layer is solved from; code of `surface_air_source`.
+SURFACE_AIR_SOURCES = {"none": 0, "two_metres": 1, "level": 2}
+
+#: Where a level of the joined profile comes from; code of `level_origin`.
+LEVEL_ORIGINS = {"measured": 0, "modelled_surface_layer": 1, "interpolated": 2}
+
 #: Quality bits of the Profiles dataset; a level may carry several.
 QUALITY_FLAGS = {
     "height_not_monotonic": 1 << 0,
@@ -85,6 +112,7 @@ DUCT = ("profile", "duct")
 SIGHT = ("profile", "sightline")
 CEILING = ("profile", "ceiling")
 BAND = ("profile", "height_bin")
+JOINED = ("profile", "joined_level")
 STAND = ("profile", "sightline", "stand")
 PLACE = ("profile", "sightline", "place", "stand")
 
@@ -407,6 +435,79 @@ _ROWS = [
         "height of the evaporation duct of the surface layer",
         "m",
         PROFILE,
+    ),
+    Variable(
+        "evaporation_duct_strength",
+        "M just above the surface less M at the height of the evaporation duct",
+        "1",
+        PROFILE,
+    ),
+    Variable(
+        "surface_layer_reason",
+        "why the air next to the surface is not known",
+        None,
+        PROFILE,
+        extra=_codes(SURFACE_REASONS),
+    ),
+    Variable(
+        "surface_source",
+        "where the temperature of water or ground is from",
+        None,
+        PROFILE,
+        extra=_codes(SURFACE_SOURCES),
+    ),
+    Variable(
+        "surface_wind_source",
+        "where the wind of the surface layer is from",
+        None,
+        PROFILE,
+        extra=_codes(SURFACE_WIND_SOURCES),
+    ),
+    Variable(
+        "surface_air_source",
+        "which air the surface layer is solved from",
+        None,
+        PROFILE,
+        extra=_codes(SURFACE_AIR_SOURCES),
+    ),
+    Variable(
+        "surface_function_share",
+        "share of the published stable functions that hold in this surface layer",
+        "1",
+        PROFILE,
+    ),
+    Variable(
+        "surface_layer_unconverged",
+        "members whose surface layer did not converge",
+        "1",
+        PROFILE,
+    ),
+    Variable(
+        "surface_layer_too_stable",
+        "members whose surface layer is too stable to be modelled",
+        "1",
+        PROFILE,
+    ),
+    Variable("joined_height", "height above ground or sea surface", "m", JOINED, "height"),
+    Variable(
+        "joined_air_temperature",
+        "air temperature, surface layer included",
+        "K",
+        JOINED,
+        "air_temperature",
+    ),
+    Variable(
+        "joined_modified_refractivity",
+        "modified refractivity M, surface layer included",
+        "1",
+        JOINED,
+    ),
+    Variable(
+        "level_origin",
+        "whether the level is measured, modelled or interpolated",
+        None,
+        JOINED,
+        extra=_codes(LEVEL_ORIGINS),
     ),
     Variable("near_ground_resolution", "mean level spacing in the lowest 300 m", "m", PROFILE),
 ]

@@ -9,6 +9,7 @@ coarse profiles.
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -19,17 +20,15 @@ from forecast.outlook import members as draws
 from forecast.outlook.sightlines import arrival_change, look_along, sightline_geometry
 from forecast.outlook.speaking import speaking_profiles
 from forecast.outlook.statistics import Progress, height_bins, member_statistics
-from forecast.outlook.surface import SurfaceInputs
+from forecast.outlook.surface_told import joined_air, surface_variables
 from forecast.physics.column_batch import analyse_columns
 from forecast.physics.columns import duct_dataset
 from forecast.physics.curvature import classify_layers, ray_curvature
 from forecast.physics.earth import euler_radius
-from forecast.physics.evaporation_duct import evaporation_duct
-from forecast.physics.surface_join import trusted_level
-from forecast.physics.surface_layer import SurfaceLayer
 from forecast.schema import CAUTION, CEILINGS_M, describe
 
 if TYPE_CHECKING:
+    from forecast.ingest.water_series import WaterSeries
     from forecast.settings import Settings
 
 __all__ = ["make_outlook"]
@@ -38,7 +37,10 @@ _NEAR_GROUND = 300.0  # m
 
 
 def make_outlook(
-    profiles: xr.Dataset, settings: Settings, progress: Progress | None = None
+    profiles: xr.Dataset,
+    settings: Settings,
+    progress: Progress | None = None,
+    series: Mapping[str, WaterSeries] | None = None,
 ) -> xr.Dataset:
     """Probabilities of ducts and open sightlines for every site and valid time.
 
@@ -51,6 +53,8 @@ def make_outlook(
         Members, seed, thresholds, sightlines.
     progress : callable, optional
         Called with (done, total, label).
+    series : mapping, optional
+        Site name → water temperatures from `forecast.ingest.water_series.read_water_series`.
 
     Returns
     -------
@@ -66,7 +70,7 @@ def make_outlook(
     if profiles.sizes.get("profile", 0) == 0:
         raise InputError("no profile to work on", source="make_outlook")
     lines = list(settings.sightlines)
-    told = speaking_profiles(profiles, settings)
+    told = speaking_profiles(profiles, settings, series)
     radius = euler_radius(told.latitude)
     data = _best_guess(told.guess, radius, settings.chart_top)
     geometry = sightline_geometry(lines, told.latitude, told.site)
@@ -78,7 +82,8 @@ def make_outlook(
         arrival_change(data["apparent_elevation"][1], told.chosen["time"].values, told.site, zones),
     )
     data.update(_resolution(told.guess))
-    data.update(_surface(told.guess, told.row_water, told.surface_state, told.layer))
+    data.update(surface_variables(told))
+    data.update(joined_air(told, radius))
     data.update(member_statistics(told, lines, data, settings, progress))
 
     coords = {name: c for name, c in told.chosen.coords.items() if c.dims == ("profile",)}
@@ -144,26 +149,6 @@ def _resolution(guess: dict[str, np.ndarray]) -> dict[str, Any]:
         "near_ground_resolution": ("profile", spacing),
         "near_ground_warming": ("profile", t[row, warmest] - t[:, 0]),
         "near_ground_warming_depth": ("profile", z[row, warmest] - z[:, 0]),
-    }
-
-
-def _surface(
-    guess: dict[str, np.ndarray],
-    water: SurfaceInputs,
-    state: np.ndarray,
-    layer: SurfaceLayer | None,
-) -> dict[str, Any]:
-    """What is known of the air next to the water."""
-    trusted = trusted_level(guess["height"])
-    t = guess["air_temperature"][np.arange(trusted.size), np.maximum(trusted, 0)]
-    difference = np.where(water.wanted & (trusted >= 0), t - water.sst, np.nan)
-    height = np.full(trusted.size, np.nan)
-    if layer is not None:
-        height = evaporation_duct(layer, guess["air_pressure"][:, 0]).height
-    return {
-        "surface_layer_state": ("profile", state),
-        "air_sea_temperature_difference": ("profile", difference),
-        "evaporation_duct_height": ("profile", height),
     }
 
 

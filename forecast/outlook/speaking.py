@@ -5,6 +5,7 @@ An ascent speaks before a model profile, the shortest lead time before longer on
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -13,14 +14,15 @@ import xarray as xr
 
 from forecast.outlook.surface import (
     STATE_NAMES,
+    LaidSurface,
     SurfaceInputs,
-    add_surface_layer,
+    lay_surface,
     surface_inputs,
 )
-from forecast.physics.surface_layer import SurfaceLayer
-from forecast.schema import CEILINGS_M
+from forecast.schema import CEILINGS_M, QUALITY_FLAGS
 
 if TYPE_CHECKING:
+    from forecast.ingest.water_series import WaterSeries
     from forecast.settings import Settings
 
 __all__ = ["Row", "Speaking", "speaking_profiles"]
@@ -42,8 +44,9 @@ class Speaking:
 
     ``profiles``: all, with the coordinate ``site``; ``state`` and ``water``: their usable levels,
     (profile, level), and what their surface layers need. By row: ``chosen`` profiles, ``guess``
-    (their levels), ``tops`` (highest usable level before the cut, m), ``row_water``, ``air``
-    (levels with the surface layer), ``surface_state``, ``layer``, ``site``, ``latitude``.
+    (their levels), ``filled`` (which of them were interpolated), ``tops`` (highest usable level
+    before the cut, m), ``row_water``, ``surface`` (levels with the surface layer, and what became
+    of it), ``site``, ``latitude``.
     """
 
     rows: list[Row]
@@ -52,16 +55,22 @@ class Speaking:
     water: SurfaceInputs
     chosen: xr.Dataset
     guess: dict[str, np.ndarray]
+    filled: np.ndarray
     tops: np.ndarray
     row_water: SurfaceInputs
-    air: dict[str, np.ndarray]
-    surface_state: np.ndarray
-    layer: SurfaceLayer | None
+    surface: LaidSurface
     site: np.ndarray
     latitude: np.ndarray
 
+    @property
+    def air(self) -> dict[str, np.ndarray]:
+        """Levels with the surface layer."""
+        return self.surface.air
 
-def speaking_profiles(profiles: xr.Dataset, settings: Settings) -> Speaking:
+
+def speaking_profiles(
+    profiles: xr.Dataset, settings: Settings, series: Mapping[str, WaterSeries] | None = None
+) -> Speaking:
     """Choose the profiles that speak and prepare their air.
 
     Parameters
@@ -70,6 +79,8 @@ def speaking_profiles(profiles: xr.Dataset, settings: Settings) -> Speaking:
         Profiles (profile, level); without the coordinate ``site`` the station is the site.
     settings : forecast.settings.Settings
         Sites, sightlines, heights needed.
+    series : mapping, optional
+        Water series of sites by name.
 
     Returns
     -------
@@ -79,13 +90,12 @@ def speaking_profiles(profiles: xr.Dataset, settings: Settings) -> Speaking:
     if "site" not in profiles.coords:
         profiles = profiles.assign_coords(site=("profile", profiles["station"].values.astype(str)))
     rows = _speaking_rows(profiles)
-    state, wind, tops = _usable_levels(profiles, _reach(settings))
-    water = surface_inputs(profiles, wind, state["height"], settings)
+    state, wind, filled, tops = _usable_levels(profiles, _reach(settings))
+    water = surface_inputs(profiles, wind, state, settings, series)
     index = [row.index for row in rows]
     chosen = profiles.isel(profile=index)
     guess = {name: a[index] for name, a in state.items()}
     row_water = water.take(index)
-    air, surface_state, layer = add_surface_layer(guess, row_water)
     return Speaking(
         rows=rows,
         profiles=profiles,
@@ -93,11 +103,10 @@ def speaking_profiles(profiles: xr.Dataset, settings: Settings) -> Speaking:
         water=water,
         chosen=chosen,
         guess=guess,
+        filled=filled[index],
         tops=tops[index],
         row_water=row_water,
-        air=air,
-        surface_state=surface_state,
-        layer=layer,
+        surface=lay_surface(guess, row_water),
         site=chosen["site"].values.astype(str),
         latitude=chosen["latitude"].values.astype(float),
     )
@@ -140,11 +149,11 @@ def _reach(settings: Settings) -> float:
 
 def _usable_levels(
     profiles: xr.Dataset, reach: float
-) -> tuple[dict[str, np.ndarray], np.ndarray, np.ndarray]:
+) -> tuple[dict[str, np.ndarray], np.ndarray, np.ndarray, np.ndarray]:
     """Pack each profile's complete levels to the front and cut them above `reach`.
 
-    Returns the state arrays and wind speed (profile, level), and the height of each profile's
-    highest usable level before the cut.
+    Returns the state arrays, wind speed and which levels were interpolated (profile, level), and
+    the height of each profile's highest usable level before the cut.
     """
     arrays = {
         name: profiles[name].transpose("profile", "level").values.astype(float)
@@ -168,4 +177,9 @@ def _usable_levels(
         name: np.where(packed, np.take_along_axis(a, order, axis=1), np.nan)
         for name, a in arrays.items()
     }
-    return state, np.take_along_axis(speed, order, axis=1), tops
+    filled = np.zeros(valid.shape, dtype=bool)
+    if "quality" in profiles:
+        quality = profiles["quality"].transpose("profile", "level").values
+        filled = (quality.astype(np.int64) & QUALITY_FLAGS["interpolated"]) != 0
+    speed, filled = (np.take_along_axis(a, order, axis=1) for a in (speed, filled))
+    return state, speed, filled & packed, tops

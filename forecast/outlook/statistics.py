@@ -13,10 +13,10 @@ from forecast.outlook import members as draws
 from forecast.outlook.duct_events import duct_cover, duct_under
 from forecast.outlook.sightlines import trace_paths
 from forecast.outlook.speaking import Row, Speaking
-from forecast.outlook.surface import STATE_NAMES, add_surface_layer, draw_errors
+from forecast.outlook.surface import STATE_NAMES, draw_errors, lay_surface
 from forecast.physics.column_batch import analyse_columns
 from forecast.physics.earth import euler_radius
-from forecast.schema import CEILINGS_M, SIGHTLINE_STATES, SURFACE_STATES
+from forecast.schema import CEILINGS_M, SIGHTLINE_STATES, SURFACE_REASONS, SURFACE_STATES
 
 if TYPE_CHECKING:
     from forecast.settings import Settings, Sightline
@@ -74,6 +74,7 @@ def member_statistics(
     duct_hits = np.full((n_rows, ceilings.size), np.nan)
     cover = np.full((n_rows, bins.size), np.nan)
     open_hits = np.full((n_rows, len(lines)), np.nan)
+    reasons = np.zeros((n_rows, len(SURFACE_REASONS)), dtype=np.int32)
     hidden_low = np.full((n_rows, len(lines)), np.nan)
     hidden_high = np.full((n_rows, len(lines)), np.nan)
     count = np.array([len(r.ensemble) or settings.members for r in rows])
@@ -92,14 +93,15 @@ def member_statistics(
         found = duct_under(columns.ducts, ceilings, settings.minimum_duct_strength)
         inside = duct_cover(columns.ducts, bins, settings.minimum_duct_strength)
         below = water.take([r.index for r in part]).take(owner)
-        air, _, _ = add_surface_layer(batch, below, errors)
-        traced = trace_paths(lines, air, row_latitude, row_site)
+        laid = lay_surface(batch, below, errors)
+        traced = trace_paths(lines, laid.air, row_latitude, row_site)
         is_open = traced["sightline_state"][1] == SIGHTLINE_STATES["open"]
         hidden = traced["hidden_height"][1]
         for k in range(len(part)):
             mine = owner == k
             duct_hits[done + k] = found[mine].sum(axis=0)
             cover[done + k] = inside[mine].mean(axis=0)
+            reasons[done + k] = np.bincount(laid.reason[mine], minlength=reasons.shape[1])
             for i, line in enumerate(lines):
                 if row_site[mine][0] == line.site:
                     open_hits[done + k, i] = is_open[mine, i].sum()
@@ -118,7 +120,9 @@ def member_statistics(
     sure = np.maximum(fewest, count * share)
     # A path over water whose lowest metres are not known is as unsure as can be.
     blind = data["surface_layer_state"][1] == SURFACE_STATES["unknown"]
-    surest = {"duct": sure, "sightline": np.where(blind, fewest, sure)}
+    # Members without a surface layer, and stable functions that do not hold, are no evidence.
+    known = reasons[:, SURFACE_REASONS["none"]] / count * data["surface_function_share"][1]
+    surest = {"duct": sure, "sightline": np.where(blind, fewest, np.maximum(fewest, sure * known))}
     out: dict[str, Any] = {"member_count": ("profile", count.astype(np.int32))}
     for name, hits, dim in (("duct", duct_hits, "ceiling"), ("sightline", open_hits, "sightline")):
         sure = surest[name]
@@ -127,6 +131,8 @@ def member_statistics(
         out[f"{name}_probability"] = (("profile", dim), chance)
         out[f"{name}_probability_lower"] = (("profile", dim), np.minimum(lower, chance))
         out[f"{name}_probability_upper"] = (("profile", dim), np.maximum(upper, chance))
+    for label, why in (("unconverged", "not_converged"), ("too_stable", "too_stable")):
+        out[f"surface_layer_{label}"] = ("profile", reasons[:, SURFACE_REASONS[why]])
     out["duct_likelihood"] = (("profile", "height_bin"), cover)
     out["hidden_height_lower"] = (("profile", "sightline"), hidden_low)
     out["hidden_height_upper"] = (("profile", "sightline"), hidden_high)

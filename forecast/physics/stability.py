@@ -13,10 +13,26 @@ import numpy as np
 
 from forecast.physics.compiled import njit
 
-__all__ = ["STABLE_FUNCTIONS", "psi_heat", "psi_momentum"]
+__all__ = [
+    "LARGEST_ZETA",
+    "STABLE_FUNCTIONS",
+    "psi_heat",
+    "psi_momentum",
+    "psi_unstable",
+    "unstable_table",
+]
 
 #: Functions for stable stratification, by name.
 STABLE_FUNCTIONS = {"beljaars_holtslag_1991": 0, "dyer_1974": 1, "grachev_2007": 2}
+
+#: Largest z/L for which each has been put to the test of measurements, by code. Beljaars &
+#: Holtslag: Cabauw nights to about 10; Dyer: the linear law to about 1 (Högström 1988,
+#: Boundary-Layer Meteor. 42, 55–78, finds it bending from 0.5); Grachev et al.: SHEBA ice camp to
+#: about 100. All from memory.
+LARGEST_ZETA = (10.0, 1.0, 100.0)
+
+_TABLE_END = -20.0  # ζ at which the table of the unstable functions ends
+_TABLE_STEPS = 512
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -80,3 +96,42 @@ def _blend(zeta, kansas, y):  # pragma: no cover - compiled
     )
     f = zeta * zeta / (1.0 + zeta * zeta)
     return (1.0 - f) * kansas + f * convective
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def unstable_table():  # pragma: no cover - compiled
+    """ψ_m and ψ_h of unstable air as cubics, for `psi_unstable`.
+
+    Returns
+    -------
+    ndarray
+        (step, 2, 4) coefficients over s = ζ/(ζ − 1), even steps from 0 to ζ = −20.
+    """
+    end = _TABLE_END / (_TABLE_END - 1.0)
+    h = end / _TABLE_STEPS
+    table = np.empty((_TABLE_STEPS, 2, 4))
+    for i in range(_TABLE_STEPS):
+        for k in range(2):
+            # The cubic through four evenly spaced points of the step.
+            f = np.empty(4)
+            for j in range(4):
+                s = (i + j / 3.0) * h
+                zeta = -s / (1.0 - s)
+                f[j] = psi_heat(zeta, 0) if k else psi_momentum(zeta, 0)
+            table[i, k, 0] = f[0]
+            table[i, k, 1] = -5.5 * f[0] + 9.0 * f[1] - 4.5 * f[2] + f[3]
+            table[i, k, 2] = 9.0 * f[0] - 22.5 * f[1] + 18.0 * f[2] - 4.5 * f[3]
+            table[i, k, 3] = -4.5 * f[0] + 13.5 * f[1] - 13.5 * f[2] + 4.5 * f[3]
+    return table
+
+
+@njit(cache=True, nogil=True, error_model="numpy", inline="always")
+def psi_unstable(zeta, heat, table):  # pragma: no cover - compiled
+    """ψ_h (`heat` 1) or ψ_m (0) for ζ ≤ 0 from `unstable_table`, within 1e-7; exact below −20."""
+    if zeta <= _TABLE_END:
+        return psi_heat(zeta, 0) if heat else psi_momentum(zeta, 0)
+    at = zeta / (zeta - 1.0) * (_TABLE_STEPS / (_TABLE_END / (_TABLE_END - 1.0)))
+    i = min(int(at), _TABLE_STEPS - 1)
+    x = at - i
+    c = table[i, heat]
+    return c[0] + x * (c[1] + x * (c[2] + x * c[3]))

@@ -6,9 +6,15 @@ al. 2003, J. Climate 16, 571–591; Charnock relation of Edson et al. 2013, J. P
 1589–1610): smooth-flow and Charnock roughness, scalar roughness from the roughness Reynolds
 number, gustiness in free convection, surface humidity 0.98 of saturation over salt water. The cool
 skin is left out: the surface temperature is taken as that of the skin. Over land roughness lengths
-and skin temperature are given.
+and skin temperature are given. As in COARE, ψ(z_0/L) is neglected and u* includes gustiness.
 
-As in COARE, ψ(z_0/L) is neglected and u* includes gustiness.
+**Very stable air**, light wind over much colder water, is modelled as far as the stable function in
+use has been measured (`forecast.physics.stability.LARGEST_ZETA`: z/L up to 1, 10 or 100). That
+reaches past the critical gradient Richardson number of 0.20–0.25, where steady turbulence gives way
+to bursts (Grachev et al. 2013, Boundary-Layer Meteor. 147, 51–82); there the functions are fits to
+averages and part ways, and that spread is the uncertainty. With air 5 K warmer at 10 m than the
+water, Dyer holds down to winds of some 5 m/s, Beljaars–Holtslag and Grachev to some 2 m/s. Beyond,
+a function has no answer: the column is marked ``too_stable`` and its scales are NaN.
 """
 
 from __future__ import annotations
@@ -18,12 +24,15 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from forecast.physics.compiled import njit, prange
-from forecast.physics.moisture import (
-    CELSIUS_OFFSET,
-    saturation_vapour_pressure,
-    specific_humidity_from_vapour_pressure,
+from forecast.physics.moisture import _SATURATION, CELSIUS_OFFSET, EPSILON
+from forecast.physics.stability import (
+    LARGEST_ZETA,
+    STABLE_FUNCTIONS,
+    psi_heat,
+    psi_momentum,
+    psi_unstable,
+    unstable_table,
 )
-from forecast.physics.stability import STABLE_FUNCTIONS, psi_heat, psi_momentum
 
 __all__ = [
     "SurfaceLayer",
@@ -37,9 +46,13 @@ GRAVITY = 9.80665  # m/s²
 ADIABATIC = 0.0098  # K/m, as COARE uses it
 _GUST_FACTOR = 1.2  # β of the convective gustiness
 _LEAST_GUST = 0.2  # m/s
+_SALT = 0.98  # saturation over sea water relative to fresh water
 _MOST_ITERATIONS = 60
-_TOLERANCE = 1e-5  # relative, on the three scales
-_LARGEST_ZETA = 50.0  # beyond, turbulence has ceased and similarity with it
+_TOLERANCE = 1e-3  # relative, on u* and the transfer coefficient of heat
+_LOG_10 = np.log(10.0)
+_LOG_LARGEST_Z0T = np.log(1.6e-4)
+_LOG_Z0T = np.log(5.8e-5)
+_A, _B, _C, _D, _E0, _E1, _E2 = _SATURATION["water"]
 
 
 class SurfaceLayer(NamedTuple):
@@ -47,8 +60,10 @@ class SurfaceLayer(NamedTuple):
 
     ``friction_velocity`` m/s, ``temperature_scale`` K (positive: the surface cools the air),
     ``humidity_scale`` kg/kg, ``obukhov_length`` m, ``roughness`` and ``scalar_roughness`` m,
-    ``surface_temperature`` K, ``surface_humidity`` kg/kg; ``converged`` is False where the
-    iteration did not settle, ``iterations`` how many it took, ``stable_function`` its code.
+    ``surface_temperature`` K, ``surface_humidity`` kg/kg. ``converged`` is True where these are an
+    answer; elsewhere they are NaN, because an input is missing, because the air is ``too_stable``
+    for the stable function, or because the iteration did not settle. ``iterations``: how many it
+    took, 0 where an input is missing; ``stable_function``: its code.
     """
 
     friction_velocity: np.ndarray
@@ -60,8 +75,14 @@ class SurfaceLayer(NamedTuple):
     surface_temperature: np.ndarray
     surface_humidity: np.ndarray
     converged: np.ndarray
+    too_stable: np.ndarray
     iterations: np.ndarray
     stable_function: np.ndarray
+
+    @property
+    def unsettled(self) -> np.ndarray:
+        """Where the iteration did not settle, though all inputs were there."""
+        return ~self.converged & ~self.too_stable & (self.iterations > 0)
 
 
 def solve_sea(
@@ -98,7 +119,7 @@ def solve_sea(
     -------
     SurfaceLayer
         Arrays of the common shape, flattened to one dimension; NaN and not converged where an
-        input is missing.
+        input is missing or the air too stable.
 
     Raises
     ------
@@ -106,13 +127,10 @@ def solve_sea(
         If a surface temperature lies outside its range (°C labelled K, say), a wind is negative,
         or the stable function is unknown.
     """
-    sst = np.asarray(sea_surface_temperature, dtype=float)
-    _within("sea_surface_temperature", sst, 268.0, 320.0, "K; is it in °C?")
-    saturated = 0.98 * saturation_vapour_pressure(sst, pressure)
-    surface_q = specific_humidity_from_vapour_pressure(saturated, pressure)
     return _solve(
-        wind_speed, air_temperature, specific_humidity, pressure, sst, surface_q, wind_height,
-        air_height, boundary_layer_height, np.nan, np.nan, stable_function,
+        wind_speed, air_temperature, specific_humidity, pressure, sea_surface_temperature, np.nan,
+        wind_height, air_height, boundary_layer_height, np.nan, np.nan, stable_function,
+        ("sea_surface_temperature", 268.0, 320.0),
     )  # fmt: skip
 
 
@@ -158,14 +176,13 @@ def solve_land(
     ValueError
         If a value lies outside its range or the stable function is unknown.
     """
-    skin = np.asarray(skin_temperature, dtype=float)
-    _within("skin_temperature", skin, 200.0, 350.0, "K; is it in °C?")
     z0 = np.asarray(roughness, dtype=float)
     _within("roughness", z0, 1e-5, 5.0, "m")
     z0t = 0.1 * z0 if scalar_roughness is None else np.asarray(scalar_roughness, dtype=float)
     return _solve(
-        wind_speed, air_temperature, specific_humidity, pressure, skin, surface_humidity,
-        wind_height, air_height, boundary_layer_height, z0, z0t, stable_function,
+        wind_speed, air_temperature, specific_humidity, pressure, skin_temperature,
+        surface_humidity, wind_height, air_height, boundary_layer_height, z0, z0t,
+        stable_function, ("skin_temperature", 200.0, 350.0),
     )  # fmt: skip
 
 
@@ -200,117 +217,158 @@ def _within(name: str, value: np.ndarray, low: float, high: float, unit: str) ->
 
 def _solve(
     wind: Any, t: Any, q: Any, p: Any, surface_t: Any, surface_q: Any, wind_height: Any,
-    air_height: Any, inversion: Any, z0: Any, z0t: Any, stable_function: str
+    air_height: Any, inversion: Any, z0: Any, z0t: Any, stable_function: str,
+    surface: tuple[str, float, float],
 ) -> SurfaceLayer:  # fmt: skip
     if stable_function not in STABLE_FUNCTIONS:
         known = ", ".join(STABLE_FUNCTIONS)
         raise ValueError(f"stable_function {stable_function!r}; choose from {known}")
-    speed = np.asarray(wind, dtype=float)
-    _within("wind_speed", speed, 0.0, 120.0, "m/s")
-    _within("air_temperature", np.asarray(t, dtype=float), 180.0, 340.0, "K; is it in °C?")
-    arrays = np.broadcast_arrays(
-        *(
-            np.asarray(a, dtype=float)
-            for a in (
-                speed,
-                t,
-                q,
-                surface_t,
-                surface_q,
-                wind_height,
-                air_height,
-                inversion,
-                z0,
-                z0t,
-            )
-        )
-    )
-    flat = [np.array(np.ravel(a)) for a in arrays]
-    size = flat[0].size
-    out = np.full((6, size), np.nan)
-    converged = np.zeros(size, dtype=np.bool_)
-    iterations = np.zeros(size, dtype=np.int16)
+    given = [
+        np.asarray(a, dtype=float)
+        for a in (wind, t, q, p, surface_t, surface_q, wind_height, air_height, inversion, z0, z0t)
+    ]
+    shape = np.broadcast_shapes(*(a.shape for a in given))
+    size = int(np.prod(shape))
+    # A single value is not spread out: the kernel steps through it by nought.
+    flat = [(a if a.size == 1 else np.broadcast_to(a, shape)).reshape(-1) for a in given]
+    steps = np.array([0 if a.size == 1 else 1 for a in flat])
+    scales = np.empty((8, size))
+    converged, too_stable = np.empty(size, dtype=np.bool_), np.empty(size, dtype=np.bool_)
+    iterations = np.empty(size, dtype=np.int8)
     code = STABLE_FUNCTIONS[stable_function]
-    _solve_all(*flat, code, out, converged, iterations)
-    codes = np.full(size, code, dtype=np.int8)
-    return SurfaceLayer(
-        out[0], out[1], out[2], out[3], out[4], out[5], flat[3], flat[4], converged, iterations,
-        codes,
+    faults = _solve_all(
+        *flat, steps, code, LARGEST_ZETA[code], surface[1], surface[2], unstable_table(), scales,
+        converged, too_stable, iterations,
     )  # fmt: skip
+    if faults:
+        _within("wind_speed", given[0], 0.0, 120.0, "m/s")
+        _within("air_temperature", given[1], 180.0, 340.0, "K; is it in °C?")
+        _within(surface[0], given[4], *surface[1:], "K; is it in °C?")
+    codes = np.full(size, code, dtype=np.int8)
+    return SurfaceLayer._make([*scales, converged, too_stable, iterations, codes])
+
+
+@njit(cache=True, nogil=True, error_model="numpy", inline="always")
+def _humidity_of_sea(t, p):  # pragma: no cover - compiled
+    """Specific humidity next to salt water; `forecast.physics.moisture` for one value."""
+    t_c, p_hpa = t - CELSIUS_OFFSET, 1e-2 * p
+    enhancement = 1.0 + 1e-4 * (_E0 + p_hpa * (_E1 + _E2 * t_c * t_c))
+    e = _SALT * 100.0 * _A * enhancement * np.exp((_B - t_c / _D) * t_c / (t_c + _C))
+    return EPSILON * e / (p - (1.0 - EPSILON) * e)
 
 
 @njit(cache=True, nogil=True, parallel=True, error_model="numpy")
 def _solve_all(
-    wind,
-    t,
-    q,
-    surface_t,
-    surface_q,
-    zu,
-    zt,
-    inversion,
-    z0_given,
-    z0t_given,
-    code,
-    out,
-    converged,
-    iterations,
+    wind, air_t, air_q, air_p, skin_t, skin_q, wind_z, air_z, inversion, z0_given, z0t_given,
+    step, code, largest_zeta, coldest, warmest, table, out, converged, too_stable, iterations,
+):  # fmt: skip  # pragma: no cover - compiled
+    faults = 0
+    for c in prange(converged.size):
+        u, t, q, p = (
+            wind[c * step[0]], air_t[c * step[1]], air_q[c * step[2]], air_p[c * step[3]]
+        )  # fmt: skip
+        ts, zu, zt = skin_t[c * step[4]], wind_z[c * step[6]], air_z[c * step[7]]
+        given, given_t = z0_given[c * step[9]], z0t_given[c * step[10]]
+        over_sea = np.isnan(given)
+        qs = _humidity_of_sea(ts, p) if over_sea else skin_q[c * step[5]]
+        if u < 0.0 or u > 120.0 or t < 180.0 or t > 340.0 or ts < coldest or ts > warmest:
+            faults += 1
+        out[6, c], out[7, c] = ts, qs
+        answer, state, n = _solve_one(
+            u, t, t + ADIABATIC * zt - ts, q, q - qs, zu, zt, inversion[c * step[8]], over_sea,
+            given, given_t, code, largest_zeta, table,
+        )  # fmt: skip
+        for k in range(6):
+            out[k, c] = answer[k]
+        converged[c], too_stable[c], iterations[c] = state == 0, state == 1, n
+    return faults
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _solve_one(
+    wind, t, dt, q, dq, zu, zt, inversion, over_sea, z0, z0t, code, largest_zeta, table
 ):  # pragma: no cover - compiled
-    for c in prange(wind.size):
-        virtual = 1.0 + 0.61 * q[c]
-        dt = t[c] + ADIABATIC * zt[c] - surface_t[c]
-        dq = q[c] - surface_q[c]
-        if not np.isfinite(wind[c] + dt + dq + zu[c] + zt[c]):
-            continue
-        t_c = t[c] - CELSIUS_OFFSET
-        viscosity = 1.326e-5 * (1.0 + t_c * (6.542e-3 + t_c * (8.301e-6 - t_c * 4.84e-9)))
-        over_sea = np.isnan(z0_given[c])
-        gust = 0.5
-        ut = np.sqrt(wind[c] ** 2 + gust**2)
-        charnock = 0.011
-        z0 = 1e-4 if over_sea else z0_given[c]
-        z0t = 1e-4 if over_sea else z0t_given[c]
-        us = ut * KARMAN / np.log(zu[c] / z0)
-        ts = dt * KARMAN / np.log(zt[c] / z0t)
-        qs = dq * KARMAN / np.log(zt[c] / z0t)
-        inverse_l = 0.0
-        for n in range(_MOST_ITERATIONS):
-            buoyancy = ts * virtual + 0.61 * t[c] * qs
-            new = KARMAN * GRAVITY / t[c] * buoyancy / (us * us)
-            new = min(new, _LARGEST_ZETA / zu[c])
-            # Stable cases swing; meeting half-way after a few steps settles them.
-            inverse_l = new if n < 4 else 0.5 * (inverse_l + new)
-            if over_sea:
-                z0 = charnock * us * us / GRAVITY + 0.11 * viscosity / us
-                z0t = min(1.6e-4, 5.8e-5 / (z0 * us / viscosity) ** 0.72)
-            us1 = ut * KARMAN / (np.log(zu[c] / z0) - psi_momentum(zu[c] * inverse_l, code))
-            heat = KARMAN / (np.log(zt[c] / z0t) - psi_heat(zt[c] * inverse_l, code))
-            ts1, qs1 = dt * heat, dq * heat
-            change = max(
-                abs(us1 - us) / us1,
-                abs(ts1 - ts) / (abs(ts1) + 1e-6),
-                abs(qs1 - qs) / (abs(qs1) + 1e-9),
-            )
-            us, ts, qs = us1, ts1, qs1
-            flux = -GRAVITY / t[c] * us * (ts * virtual + 0.61 * t[c] * qs)
-            gust = _LEAST_GUST
-            if flux > 0.0:
-                gust = max(_LEAST_GUST, _GUST_FACTOR * (flux * inversion[c]) ** (1.0 / 3.0))
-            ut = np.sqrt(wind[c] ** 2 + gust**2)
-            if over_sea:
-                # Edson et al. 2013: the mean 10 m neutral wind, gusts taken out.
-                mean = us / KARMAN * np.log(10.0 / z0) * wind[c] / ut
-                charnock = max(0.0017 * min(mean, 19.0) - 0.005, 0.0)
-            iterations[c] = n + 1
-            if n > 3 and change < _TOLERANCE:
-                converged[c] = True
-                break
-        out[0, c] = us
-        out[1, c] = ts
-        out[2, c] = qs
-        out[3, c] = 1.0 / inverse_l if inverse_l != 0.0 else np.inf
-        out[4, c] = z0
-        out[5, c] = z0t
+    """(u*, T*, q*, L, z0, z0t), state (0 solved, 1 too stable, 2 neither), iterations.
+
+    Every quantity follows from x = 1/L, u* and gustiness; x is sought as the fixed point of
+    ``g(x) = g/T · B/U² · f_m²/f_h`` with ``f = ln(z/z0) − ψ(z x)``, by the secant through the
+    last two pairs (Anderson 1965, J. ACM 12, 547–560, depth one).
+    """
+    nothing = (np.nan, np.nan, np.nan, np.nan, np.nan, np.nan)
+    if not np.isfinite(wind + dt + dq + zu + zt + inversion):
+        return nothing, 2, 0
+    buoyancy = GRAVITY / t * (dt * (1.0 + 0.61 * q) + 0.61 * t * dq)
+    t_c = t - CELSIUS_OFFSET
+    viscosity = 1.326e-5 * (1.0 + t_c * (6.542e-3 + t_c * (8.301e-6 - t_c * 4.84e-9)))
+    log_viscosity = np.log(viscosity)
+    log_zu = np.log(zu)
+    log_zt = log_zu if zt == zu else np.log(zt)
+    largest = largest_zeta / max(zu, zt)
+    # First guess: u* of neutral air, 1/L from the bulk Richardson number (Grachev & Fairall 1997,
+    # J. Appl. Meteor. 36, 406–414).
+    ut = np.sqrt(wind * wind + 0.25)
+    charnock = 0.0
+    if over_sea:
+        u10 = ut * (_LOG_10 + 9.2) / (log_zu + 9.2)  # z0 of 0.1 mm
+        us = u10 * (0.0265 + 0.00095 * u10)  # the drag of Edson et al. 2013, as a line
+        charnock = max(0.0017 * min(u10, 19.0) - 0.005, 0.0)
+    else:
+        log_z0, log_z0t = np.log(z0), np.log(z0t)
+        us = KARMAN * ut / (log_zu - log_z0)
+    x, x_before, g_before = 0.0, 0.0, 0.0
+    fm, fh = 0.0, 0.0
+    for n in range(_MOST_ITERATIONS):
+        if over_sea:
+            z0 = charnock * us * us / GRAVITY + 0.11 * viscosity / us
+            log_z0 = np.log(z0)
+            log_z0t = min(_LOG_LARGEST_Z0T, _LOG_Z0T - 0.72 * (log_z0 + np.log(us) - log_viscosity))
+        if n == 0:
+            rough = log_zu - log_z0
+            cc = rough * rough / (log_zt - log_z0t)
+            richardson = zu * buoyancy / (ut * ut)
+            if richardson < 0.0:
+                limit = -zu / (inversion * 0.004 * _GUST_FACTOR**3)
+                x = cc * richardson / (1.0 + richardson / limit) / zu
+            else:
+                x = min(cc * richardson * (1.0 + 3.0 * richardson / cc) / zu, largest)
+        if x < 0.0:
+            fm = log_zu - log_z0 - psi_unstable(zu * x, 0, table)
+            fh_new = log_zt - log_z0t - psi_unstable(zt * x, 1, table)
+        else:
+            fm = log_zu - log_z0 - psi_momentum(zu * x, code)
+            fh_new = log_zt - log_z0t - psi_heat(zt * x, code)
+        us_new = KARMAN * ut / fm
+        change = max(abs(us_new - us) / us_new, abs(fh_new - fh) / fh_new)
+        us, fh = us_new, fh_new
+        g = buoyancy / (ut * ut) * fm * fm / fh
+        if buoyancy < 0.0:
+            # ts·us = κ dθ us / f_h is minus the flux.
+            gust = _GUST_FACTOR * np.cbrt(-buoyancy * KARMAN / fh * us * inversion)
+            ut = np.sqrt(wind * wind + max(gust, _LEAST_GUST) ** 2)
+        else:
+            ut = np.sqrt(wind * wind + _LEAST_GUST**2)
+        if over_sea:
+            # Edson et al. 2013: the mean 10 m neutral wind, gusts taken out.
+            mean = us / KARMAN * (_LOG_10 - log_z0) * wind / ut
+            charnock = max(0.0017 * min(mean, 19.0) - 0.005, 0.0)
+        if x == largest and g > largest and n > 2:
+            return nothing, 1, n + 1
+        if n > 0 and change < _TOLERANCE and abs(g - x) * zu < 1e-3 + 1e-3 * abs(x) * zu:
+            if not over_sea:
+                z0, z0t = np.exp(log_z0), np.exp(log_z0t)
+            else:
+                z0t = np.exp(log_z0t)
+            scale = KARMAN / fh
+            return (us, dt * scale, dq * scale, 1.0 / x if x != 0.0 else np.inf, z0, z0t), 0, n + 1
+        slope = (g - g_before) / (x - x_before) if n > 0 and x != x_before else 0.0
+        # The step of a fixed point, or that of the secant where it is one of a contraction or of
+        # a swing; g never changes sign with x.
+        new = x + (g - x) / (1.0 - slope) if slope < 0.9 else g
+        if new * g < 0.0:
+            new = g
+        x_before, g_before = x, g
+        x = min(new, largest)
+    return nothing, 2, _MOST_ITERATIONS
 
 
 @njit(cache=True, nogil=True, parallel=True, error_model="numpy")

@@ -46,7 +46,8 @@ def test_differences_of_temperature_are_told_from_temperatures(case, tmp_path):
             for name in raw.variables
             if raw[name].attrs.get("units") == "K"
         }
-    assert kinds.pop("air_temperature") == "on_scale"
+    for name in ("air_temperature", "joined_air_temperature"):
+        assert kinds.pop(name) == "on_scale"
     assert set(kinds) == {"near_ground_warming", "air_sea_temperature_difference"}
     assert set(kinds.values()) == {"difference"}
 

@@ -9,11 +9,20 @@ import pytest
 
 from forecast.physics.evaporation_duct import evaporation_duct
 from forecast.physics.moisture import (
+    saturation_vapour_pressure,
     specific_humidity_from_relative_humidity,
+    specific_humidity_from_vapour_pressure,
     vapour_pressure_from_specific_humidity,
 )
 from forecast.physics.refractive_index import radio_refractivity
-from forecast.physics.stability import STABLE_FUNCTIONS, psi_heat, psi_momentum
+from forecast.physics.stability import (
+    LARGEST_ZETA,
+    STABLE_FUNCTIONS,
+    psi_heat,
+    psi_momentum,
+    psi_unstable,
+    unstable_table,
+)
 from forecast.physics.surface_layer import solve_land, solve_sea, surface_profile
 from tests.reference import records
 
@@ -121,17 +130,18 @@ def test_the_profile_closes_on_the_air_it_was_made_from(name):
     q = specific_humidity_from_relative_humidity(rng.uniform(0.5, 0.95, n), t, p)
     layer = solve_sea(u, t, q, p, sst, 10.0, 12.0, stable_function=name)
     ok = layer.converged
-    assert ok.mean() > 0.95
+    assert (ok | layer.too_stable).all()
+    assert ok.mean() > 0.8
     air_t, air_q = surface_profile(layer, np.array([12.0]))
-    # Closing is what joins the profile without a jump; the iteration stops at 1e-5.
-    assert np.abs(air_t[ok, 0] - t[ok]).max() < 2e-3
-    assert np.abs(air_q[ok, 0] - q[ok]).max() < 2e-6
+    # Closing is what joins the profile without a jump: exact but for the table of ψ.
+    assert np.abs(air_t[ok, 0] - t[ok]).max() < 1e-6
+    assert np.abs(air_q[ok, 0] - q[ok]).max() < 1e-9
 
 
 def test_stable_functions_spread_as_published():
     # The scheme choice is a real uncertainty: Grachev lies above, Dyer and Beljaars–Holtslag
     # nearly together at ζ = 0.1 and apart at 2 (record psi_2).
-    air = {"wind": 4.0, "t": 293.15, "q": 0.010, "p": 101300.0, "sst": 289.15}
+    air = {"wind": 6.0, "t": 293.15, "q": 0.010, "p": 101300.0, "sst": 289.15}
     t5 = {}
     for name in STABLE_FUNCTIONS:
         layer = solve_sea(air["wind"], air["t"], air["q"], air["p"], air["sst"], 10.0, 10.0,
@@ -139,7 +149,118 @@ def test_stable_functions_spread_as_published():
         assert layer.converged.all()
         t5[name] = surface_profile(layer, np.array([3.0]))[0][0, 0]
     spread = max(t5.values()) - min(t5.values())
-    assert 0.05 < spread < 1.0
+    assert 0.02 < spread < 1.0
+
+
+def test_stable_air_agrees_with_the_reference_within_the_spread_of_the_functions():
+    # Reference: pycoare 0.4.3 (test only), whose stable form is Beljaars–Holtslag's for heat.
+    import pycoare
+
+    rng = np.random.default_rng(5)
+    n = 1000
+    u, z = rng.uniform(2.0, 15.0, n), rng.uniform(5.0, 20.0, n)
+    t, rh = rng.uniform(5.0, 28.0, n), rng.uniform(45.0, 98.0, n)
+    sst, p = t - rng.uniform(0.5, 6.0, n), rng.uniform(990.0, 1030.0, n)
+    reference = pycoare.coare_35(
+        u.copy(), t=t.copy(), rh=rh.copy(), zu=z.copy(), zt=z.copy(), zq=z.copy(), ts=sst.copy(),
+        p=p.copy(), lat=45, zi=600, rs=0, rl=370, jcool=0, nits=30,
+    )  # fmt: skip
+    q = specific_humidity_from_relative_humidity(rh / 100.0, t + 273.15, 100.0 * p)
+    layers = {
+        name: solve_sea(
+            u, t + 273.15, q, 100.0 * p, sst + 273.15, z, z, 600.0, stable_function=name
+        )
+        for name in STABLE_FUNCTIONS
+    }
+    own = layers["beljaars_holtslag_1991"]
+    compared = own.converged
+    assert compared.mean() > 0.9
+    every = np.all([layer.converged for layer in layers.values()], axis=0)
+    assert every.sum() > 300
+    for k, theirs in enumerate((reference.ustar(), reference.tstar())):
+        theirs = np.asarray(theirs)
+        assert np.abs(own[k][compared] / theirs[compared] - 1.0).max() < 0.02
+        values = np.stack([layer[k][every] for layer in layers.values()])
+        assert (theirs[every] >= 0.98 * values.min(axis=0)).all()
+        assert (theirs[every] <= 1.02 * values.max(axis=0)).all()
+
+
+def drawn(n, seed, difference=(-8.0, 8.0), wind=(0.0, 15.0)):
+    """Arguments of `solve_sea`, air and water drawn apart from the strongest winds."""
+    rng = np.random.default_rng(seed)
+    u, z = rng.uniform(*wind, n), rng.uniform(2.0, 40.0, n)
+    t, p = rng.uniform(277.0, 303.0, n), rng.uniform(980e2, 1040e2, n)
+    q = specific_humidity_from_relative_humidity(rng.uniform(0.4, 1.0, n), t, p)
+    sst = np.clip(t + rng.uniform(*difference, n), 270.0, None)
+    return u, t, q, p, sst, z, rng.uniform(2.0, 40.0, n)
+
+
+def bulk_laws(u, t, q, p, sst, zu, zt, us, inverse_l, code):
+    """u* and 1/L that the bulk laws give for a guess of both, written out as Fairall et al. do."""
+    saturated = 0.98 * saturation_vapour_pressure(sst, p)
+    dq = q - specific_humidity_from_vapour_pressure(saturated, p)
+    dt = t + 0.0098 * zt - sst
+    c = t - 273.15
+    nu = 1.326e-5 * (1.0 + 6.542e-3 * c + 8.301e-6 * c**2 - 4.84e-9 * c**3)
+    psi_m = np.array([psi_momentum(a, code) for a in zu * inverse_l])
+    psi_h = np.array([psi_heat(a, code) for a in zt * inverse_l])
+    charnock = np.full(u.shape, 0.011)
+    for _ in range(60):  # roughness and gusts at this stability
+        z0 = charnock * us**2 / 9.80665 + 0.11 * nu / us
+        z0t = np.minimum(1.6e-4, 5.8e-5 / (z0 * us / nu) ** 0.72)
+        heat = 0.4 / (np.log(zt / z0t) - psi_h)
+        buoyancy = 9.80665 / t * heat * (dt * (1.0 + 0.61 * q) + 0.61 * t * dq)
+        gust = np.maximum(0.2, 1.2 * np.cbrt(np.maximum(0.0, -us * buoyancy * 600.0)))
+        ut = np.hypot(u, gust)
+        us = 0.4 * ut / (np.log(zu / z0) - psi_m)
+        u10 = us / 0.4 * np.log(10.0 / z0) * u / ut
+        charnock = np.maximum(0.0017 * np.minimum(u10, 19.0) - 0.005, 0.0)
+    return us, 0.4 * buoyancy / us**2
+
+
+@pytest.mark.parametrize("name", STABLE_FUNCTIONS)
+def test_an_answer_obeys_the_bulk_laws_and_no_answer_has_none(name):
+    # Very stable air, light winds and free convection included. Where the column is called too
+    # stable, the laws want a stronger stability even at the largest that the function is for.
+    code = STABLE_FUNCTIONS[name]
+    args = drawn(2000, 11)
+    layer = solve_sea(*args, stable_function=name)
+    assert (layer.converged | layer.too_stable).all()
+    ok, largest = layer.converged, LARGEST_ZETA[code] / np.maximum(args[5], args[6])
+    inverse_l = 1.0 / layer.obukhov_length
+    assert (inverse_l[ok] <= largest[ok] * (1.0 + 1e-9)).all()
+    us, wanted = bulk_laws(*(a[ok] for a in args), layer.friction_velocity[ok], inverse_l[ok], code)
+    assert np.abs(layer.friction_velocity[ok] / us - 1.0).max() < 0.005
+    assert np.abs(inverse_l[ok] - wanted).max() < 0.01 * np.abs(wanted).max()
+    assert (np.abs(inverse_l[ok] - wanted) <= 0.01 * np.abs(wanted) + 1e-4).all()
+    calm = layer.too_stable
+    assert 0.02 < calm.mean() < 0.5
+    _, wanted = bulk_laws(*(a[calm] for a in args), np.full(calm.sum(), 0.01), largest[calm], code)
+    assert (wanted > 0.99 * largest[calm]).all()
+    for scale in layer[:6]:
+        assert np.isnan(scale[calm]).all()
+
+
+def test_light_wind_over_cold_water_is_modelled_to_where_functions_reach():
+    # 5 K over 10 m: bulk Richardson number 9.81·10·5.1/(290·U²) = 1.72/U². Beljaars–Holtslag at
+    # z/L = 10 takes 0.49 (from ψ_h −29.7, ψ_m −17.6 and ln z/z0 = 11.5), Dyer at 1 only 0.06.
+    wind = np.array([1.0, 1.5, 2.2, 3.0, 4.5, 6.5])
+    t, sst, p = 292.15, 287.15, 101300.0
+    q = specific_humidity_from_relative_humidity(0.75, t, p)
+    holds = {
+        name: solve_sea(wind, t, q, p, sst, 10.0, 10.0, stable_function=name).converged.tolist()
+        for name in STABLE_FUNCTIONS
+    }
+    assert holds["beljaars_holtslag_1991"] == [False, False, True, True, True, True]
+    assert holds["grachev_2007"] == [False, False, True, True, True, True]
+    assert holds["dyer_1974"] == [False, False, False, False, False, True]
+
+
+def test_the_table_of_unstable_functions_is_the_functions():
+    table = unstable_table()
+    for zeta in -np.concatenate([[0.0], np.geomspace(1e-8, 50.0, 400)]):
+        assert psi_unstable(zeta, 0, table) == pytest.approx(psi_momentum(zeta, 0), abs=1e-7)
+        assert psi_unstable(zeta, 1, table) == pytest.approx(psi_heat(zeta, 0), abs=1e-7)
 
 
 def test_cold_water_warms_upward_and_warm_water_cools():
@@ -214,6 +335,9 @@ def test_ship_records_go_through_with_failures_counted():
     q = specific_humidity_from_relative_humidity(column("RH") / 100.0, t, p)
     layer = solve_sea(wind, t, q, p, sst, column("zu"), column("zt"))
     complete = np.isfinite(wind + q + sst)
-    failed = complete & ~layer.converged
-    assert failed.sum() <= 0.01 * complete.sum()
+    # Counted: all that is complete settles or is told to be too stable; 15 are, at z/L > 10.
+    assert not layer.unsettled.any()
+    assert (layer.converged | layer.too_stable)[complete].all()
+    assert 0 < layer.too_stable.sum() <= 0.01 * complete.sum()
+    assert (t - sst)[layer.too_stable].min() > 0.0
     assert not layer.converged[~complete].any()
