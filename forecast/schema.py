@@ -28,7 +28,10 @@ __all__ = [
     "SURFACE_SOURCES",
     "SURFACE_STATES",
     "SURFACE_WIND_SOURCES",
+    "TWILIGHT_CLASSES",
     "VARIABLES",
+    "VISUAL_RANGE_SOURCES",
+    "WEATHER_ON_PATH",
     "Variable",
     "attributes",
     "describe",
@@ -61,6 +64,22 @@ APPEARANCES = {
     "superior_mirage": 1 << 4,
     "inferior_mirage": 1 << 5,
 }
+
+#: Daylight by the Sun's altitude; the value is the code stored in `twilight_class`.
+TWILIGHT_CLASSES = {
+    "day": 0,
+    "civil_twilight": 1,
+    "nautical_twilight": 2,
+    "astronomical_twilight": 3,
+    "night": 4,
+}
+
+#: What the visual range is told from; code of `visual_range_source`.
+VISUAL_RANGE_SOURCES = {"none": 0, "settings": 1, "profile": 2, "humidity": 3}
+
+#: What the profile shows of fog and low cloud at the heights of the ray; code of
+#: `weather_on_path`.
+WEATHER_ON_PATH = {"no_saturated_level": 0, "near_saturation": 1, "saturated_level": 2, "unknown": 3}
 
 #: What is known of the air between the surface and the lowest trusted level; code of
 #: `surface_layer_state`.
@@ -326,8 +345,74 @@ _ROWS = [
         "rad",
         ("sightline",),
     ),
+    Variable(
+        "sun_altitude",
+        "geometric altitude of the Sun's centre",
+        "degree",
+        PROFILE,
+        "solar_elevation_angle",
+    ),
+    Variable(
+        "sun_azimuth",
+        "azimuth of the Sun, clockwise from north",
+        "degree",
+        PROFILE,
+        "solar_azimuth_angle",
+    ),
+    Variable(
+        "twilight_class", "day, twilight or night", None, PROFILE, extra=_codes(TWILIGHT_CLASSES)
+    ),
+    Variable("sun_separation", "angle between the target and the Sun", "degree", SIGHT),
+    Variable(
+        "visual_range",
+        "distance at which a black target on the horizon fades to a contrast of 0.02",
+        "m",
+        SIGHT,
+    ),
+    Variable("visual_range_lower", "lower bound of the visual range", "m", SIGHT),
+    Variable("visual_range_upper", "upper bound of the visual range", "m", SIGHT),
+    Variable(
+        "visual_range_limit", "visual range in air without haze (Rayleigh scattering)", "m", SIGHT
+    ),
+    Variable(
+        "visual_range_source",
+        "what the visual range is told from",
+        None,
+        SIGHT,
+        extra=_codes(VISUAL_RANGE_SOURCES),
+    ),
+    Variable(
+        "apparent_contrast",
+        "the target's contrast against the horizon sky at the observer",
+        "1",
+        SIGHT,
+    ),
+    Variable(
+        "target_range", "distance at which this target fades to a contrast of 0.02", "m", SIGHT
+    ),
+    Variable("lamp_illuminance", "illuminance from the lamp at the observer", "lx", SIGHT),
+    Variable("lamp_range", "distance at which the lamp is lost to the eye", "m", SIGHT),
+    Variable(
+        "path_relative_humidity",
+        "largest relative humidity of the profile at the heights of the ray",
+        "1",
+        SIGHT,
+    ),
+    Variable(
+        "weather_on_path",
+        "fog and low cloud at the heights of the ray",
+        None,
+        SIGHT,
+        extra=_codes(WEATHER_ON_PATH),
+    ),
     # --- Where to stand -----------------------------------------------------------------------
     Variable("stand_height", "height of the observer that is tried", "m", ("sightline", "stand")),
+    Variable(
+        "stand_eye_height",
+        "the same above the water or ground, sea level offset taken off",
+        "m",
+        ("sightline", "stand"),
+    ),
     Variable(
         "stand_probability", "probability that the sightline is open from this height", "1", STAND
     ),

@@ -29,6 +29,7 @@ if TYPE_CHECKING:
 __all__ = [
     "StandShares",
     "Views",
+    "eye_heights",
     "join_shares",
     "place_distances",
     "place_grounds",
@@ -78,6 +79,12 @@ def stand_heights(lines: list[Sightline]) -> np.ndarray:
     return _padded([np.sort(np.asarray(line.stand_heights, dtype=float)) for line in lines])
 
 
+def eye_heights(lines: list[Sightline]) -> np.ndarray:
+    """The same heights above the water or ground that the air's heights count from, m."""
+    offset = np.array([line.sea_level_offset for line in lines], dtype=float)
+    return stand_heights(lines) - offset[:, None]
+
+
 def place_distances(lines: list[Sightline]) -> np.ndarray:
     """Distances of the candidate places to the target, m, (sightline, place), padded with NaN."""
     return _padded([np.array([p.distance for p in line.places], dtype=float) for line in lines])
@@ -90,7 +97,10 @@ def place_grounds(lines: list[Sightline]) -> np.ndarray:
 
 def stand_geometry(lines: list[Sightline]) -> dict[str, Any]:
     """Heights and places as variables, {name: (dims, array)}; places only if there are any."""
-    out: dict[str, Any] = {"stand_height": (("sightline", "stand"), stand_heights(lines))}
+    out: dict[str, Any] = {
+        "stand_height": (("sightline", "stand"), stand_heights(lines)),
+        "stand_eye_height": (("sightline", "stand"), eye_heights(lines)),
+    }
     distance = place_distances(lines)
     if distance.shape[1]:
         both = ("sightline", "place")
@@ -125,16 +135,15 @@ def trace_stands(
         (column, sightline, stand); NaN for columns of other sites, columns without air and heights
         under water.
     """
-    heights = stand_heights(lines)
+    heights = eye_heights(lines)
     views = _unseen((site.size, *heights.shape))
     for i, line in enumerate(lines):
         own = np.flatnonzero(site == line.site)
-        eyes = heights[i] - line.sea_level_offset
-        possible = np.flatnonzero(eyes >= 0.0)
+        possible = np.flatnonzero(heights[i] >= 0.0)
         if own.size == 0 or possible.size == 0:
             continue
         medium = _medium(line, {n: a[own] for n, a in state.items()}, latitude[own])
-        seen = _view(medium, line, eyes[possible], np.full(possible.size, line.distance))
+        seen = _view(medium, line, heights[i, possible], np.full(possible.size, line.distance))
         for whole, part in zip(views, seen, strict=True):
             whole[own[:, None], i, possible] = part
     return views
@@ -157,14 +166,14 @@ def trace_places(
         (column, sightline, place, stand).
     """
     heights, distances, grounds = (
-        part(lines) for part in (stand_heights, place_distances, place_grounds)
+        part(lines) for part in (eye_heights, place_distances, place_grounds)
     )
     views = _unseen((site.size, *distances.shape, heights.shape[1]))
     for i, line in enumerate(lines):
         own = np.flatnonzero(site == line.site)
         if own.size == 0 or not line.places:
             continue
-        eyes = grounds[i, :, None] + heights[i] - line.sea_level_offset
+        eyes = grounds[i, :, None] + heights[i]
         p, s = np.nonzero(eyes >= 0.0)
         if p.size == 0:
             continue

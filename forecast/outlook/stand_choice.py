@@ -13,7 +13,13 @@ import numpy as np
 import xarray as xr
 
 from forecast.errors import printable
-from forecast.outlook.stand import StandShares, place_distances, place_grounds, stand_heights
+from forecast.outlook.stand import (
+    StandShares,
+    eye_heights,
+    place_distances,
+    place_grounds,
+    stand_heights,
+)
 from forecast.outlook.statistics import probability_interval
 from forecast.schema import SURFACE_STATES
 
@@ -63,8 +69,7 @@ def stand_statistics(
         ``best_place_overall`` (positions along ``place``, −1 for none).
     """
     heights = stand_heights(lines)
-    offset = np.array([line.sea_level_offset for line in lines])
-    eye = heights - offset[:, None]
+    eye = eye_heights(lines)
     dims: tuple[str, ...] = ("profile", "sightline", "stand")
     out: dict[str, Any] = {
         "stand_visible_extent": (dims, shares.stand_extent),
@@ -220,7 +225,8 @@ def _comparison(outlook: xr.Dataset, row: int, sightline: int, best: int) -> str
     heights = outlook["stand_height"].values[sightline]
     chance = outlook["stand_probability"].values[row, sightline]
     known = known_from(outlook["surface_layer_state"].values, outlook["lowest_level"].values)[row]
-    judged = np.flatnonzero(np.isfinite(chance) & (heights >= known))
+    eye = outlook["stand_eye_height"].values[sightline]
+    judged = np.flatnonzero(np.isfinite(chance) & (eye >= known))
     low, high = judged[0], judged[-1]
     worst = int(judged[np.argmin(chance[judged])])
 
@@ -236,9 +242,7 @@ def _comparison(outlook: xr.Dataset, row: int, sightline: int, best: int) -> str
         return f"as found, low beats high: from {said(high)}{ducts}"
     if worst > low and chance[low] - chance[worst] >= _CLEAR:
         ducts = _ducts(outlook, row, sightline, low, worst)
-        return (
-            f"as found, low beats middling, not high: from {said(low)}, from {said(worst)}{ducts}"
-        )
+        return f"as found, middling is worst: from {said(worst)}, but from {said(low)}{ducts}"
     return f"as found, higher is better: from {said(worst)}"
 
 

@@ -409,7 +409,7 @@ def test_words_give_no_duct_as_the_reason_where_the_numbers_show_none():
     ("chance", "expected"),
     [
         ([0.2, 0.5, 0.9], "as found, higher is better: from 0.5 m 20 %"),
-        ([0.5, 0.2, 0.9], "low beats middling, not high: from 0.5 m 50 %, from 10 m 20 %"),
+        ([0.5, 0.2, 0.9], "middling is worst: from 10 m 20 %, but from 0.5 m 50 %"),
         ([0.52, 0.5, 0.55], "other heights do as well, none under 50 %"),
     ],
 )
@@ -428,6 +428,14 @@ def test_words_say_what_is_not_known():
     assert "Heights below 12 m are not known" in words
     assert "not known" in stand_words(_outlook([[0.0] * 3], surface="unknown"), 0)
     assert "no usable air" in stand_words(_outlook([[np.nan] * 3]), 0)
+
+
+def test_the_tide_counts_in_what_is_known():
+    """Eyes stand 3 m higher above water that is 3 m lower: 10 m is then above the lowest level."""
+    line = _line(stand_heights=(1.0, 10.0), sea_level_offset=-3.0)
+    out = stand_statistics([line], _shares([[0.9, 0.5]]), np.full(1, 20.0), np.array([12.0]))
+    assert out["best_stand_height"][1].tolist() == [[10.0]]
+    assert stand_geometry([line])["stand_eye_height"][1].tolist() == [[4.0, 13.0]]
 
 
 def test_words_look_ahead_of_the_latest_ascent():
