@@ -262,7 +262,9 @@ def _table(
     when, _ = _column(labels, _TIME, source, "times")
     water, unit = _column(labels, _TEMPERATURE, source, "water temperatures")
     blowing, wind_unit = _column(labels, _WIND, source, None)
-    times, degrees, speeds = [], [], []
+    times: list[np.datetime64] = []
+    degrees: list[float] = []
+    speeds: list[float] = []
     for number, line in lines:
         if len(times) == _MOST_ROWS:
             raise InputError(f"has more than {_MOST_ROWS} rows", source=source)

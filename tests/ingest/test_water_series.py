@@ -38,12 +38,12 @@ def series(hours, kelvin, wind=None):
 
 
 def test_a_csv_is_sorted_converted_and_its_faults_counted(tmp_path):
-    # 02:00+02:00 is midnight UTC again (the first stays); 2000 degC is a buoy's own fill value.
+    # 02:00+02:00 is midnight UTC again (the first stays); no water has 99 or 2000 degC.
     water = read_water_series(write(tmp_path, CSV))
     assert water.time.tolist() == (START + np.array([0, 1, 2, 20, 21]) * HOUR).tolist()
     np.testing.assert_allclose(water.temperature, [284.15, np.nan, 285.15, 287.15, np.nan])
     np.testing.assert_allclose(water.wind, [4.0, 5.0, np.nan, 6.0, 7.0])
-    assert water.refused == 1
+    assert water.refused == 2
 
 
 def test_linear_in_time_and_nothing_beyond_the_tolerance():
