@@ -8,7 +8,7 @@ from datetime import UTC, datetime
 import numpy as np
 import xarray as xr
 
-from forecast.output.sun import CIVIL_TWILIGHT, sun_altitude
+from forecast.physics.sun import CIVIL_TWILIGHT, sun_altitude
 
 __all__ = ["Strip", "TimeHeight", "best_profile", "column_edges", "time_height", "utc"]
 
