@@ -99,6 +99,11 @@ class SurfaceInputs:
         return self.kind != _NONE
 
     @property
+    def over_sea(self) -> np.ndarray:
+        """Where they run over water."""
+        return self.kind == _SEA
+
+    @property
     def screened(self) -> np.ndarray:
         """Where the air at 2 m is known."""
         return np.isfinite(self.warmer + self.moister)

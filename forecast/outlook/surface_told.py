@@ -38,7 +38,8 @@ def surface_variables(told: Speaking) -> dict[str, Any]:
     height, strength = np.full((2, trusted.size), np.nan)
     if laid.layer is not None:
         duct = evaporation_duct(laid.layer, told.guess["air_pressure"][:, 0])
-        height, strength = duct.height, duct.strength
+        # Dry ground evaporates nothing.
+        height, strength = (np.where(inputs.over_sea, a, np.nan) for a in duct)
     values = {
         "surface_layer_state": laid.state,
         "surface_layer_reason": laid.reason,
