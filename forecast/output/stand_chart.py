@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import textwrap
 from datetime import UTC
 from pathlib import Path
@@ -332,6 +333,7 @@ def _head_lines(texts: tuple[str, str, str], form: _Layout) -> list[tuple[str, f
         texts, (1.0, form.answer, 0.5), ("normal", "bold", "normal"), strict=True
     ):
         size = form.size + larger
+        text = re.sub(r"(?<=\d) (?=%|m\b)", "\N{NO-BREAK SPACE}", text)
         # Bold letters are wider.
         letters = int(form.letters * form.size / size * (0.88 if weight == "bold" else 1.0))
         lines += [(line, size, weight) for line in textwrap.wrap(text, letters)]
