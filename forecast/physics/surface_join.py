@@ -21,9 +21,10 @@ from forecast.schema import LEVEL_ORIGINS
 
 __all__ = ["SURFACE_HEIGHTS", "JoinedColumns", "join_surface_layer", "trusted_level"]
 
-#: Heights (m) at which the surface layer is laid out; finest where gradients are steepest.
+#: Heights (m) at which the surface layer is laid out; finest where gradients are steepest, and
+#: 2 m, where models give the air, among them.
 SURFACE_HEIGHTS = np.array(
-    [0.02, 0.05, 0.12, 0.25, 0.5, 0.9, 1.5, 2.3, 3.3, 4.6, 6.3, 8.5, 11.5, 15.5, 21.0, 28.0, 37.0,
+    [0.02, 0.05, 0.12, 0.25, 0.5, 0.9, 1.4, 2.0, 3.0, 4.4, 6.2, 8.5, 11.5, 15.5, 21.0, 28.0, 37.0,
      50.0, 67.0, 90.0]
 )  # fmt: skip
 

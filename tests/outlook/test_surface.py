@@ -113,7 +113,7 @@ def test_air_at_two_metres_is_what_the_layer_is_solved_from():
     between = z[names["interpolated"]]
     assert between.min() > 2.0 and between.max() < 20.0
     # At 2 m the air is what was given; the level above is as measured.
-    assert np.interp(2.0, z[:12], t[:12]) == pytest.approx(289.5, abs=0.05)
+    assert t[z == 2.0] == pytest.approx(289.5, abs=1e-3)
     assert t[names["measured"]][0] == pytest.approx(LEVEL_T, abs=1e-6)
     alone = told(site, wind=6.0, air_temperature_2m=289.5)  # no humidity: the level's own air
     assert code_name(alone, "surface_air_source", SURFACE_AIR_SOURCES) == "level"
@@ -184,12 +184,13 @@ def test_very_stable_air_is_modelled_while_a_function_holds_and_the_interval_is_
 def test_members_that_do_not_settle_are_counted(monkeypatch):
     def stubborn(wind, *args, **keywords):
         layer = solve_sea(wind, *args, **keywords)
-        lost = np.arange(layer.converged.size) % 4 == 1
-        return layer._replace(converged=layer.converged & ~lost)
+        members = layer.converged.size > 1  # the profile itself settles
+        return layer._replace(converged=layer.converged & (not members))
 
     monkeypatch.setattr(surface_module, "solve_sea", stubborn)
     outlook = told({"sea_surface_temperature": 290.0}, members=64)
-    assert 8 <= value(outlook, "surface_layer_unconverged") <= 24
+    assert value(outlook, "surface_layer_unconverged") == 64
+    assert value(outlook, "surface_layer_state") == SURFACE_STATES["modelled"]
     assert value(outlook, "surface_layer_too_stable") == 0
     monkeypatch.undo()
     settled = told({"sea_surface_temperature": 290.0}, members=64)
@@ -222,10 +223,9 @@ def test_the_joined_air_is_what_refraction_sees():
     # Warm water: M falls to the height of the evaporation duct, then rises.
     lowest = z[np.nanargmin(m[z < 20.0])]
     assert lowest == pytest.approx(value(outlook, "evaporation_duct_height"), rel=0.35)
-    own = {float(a): float(b) for a, b in zip(
-        value(outlook, "height"), value(outlook, "modified_refractivity"), strict=True)}  # fmt: skip
-    for a, b in zip(z[z >= 20.0], m[z >= 20.0], strict=True):
-        assert b == pytest.approx(own[float(a)], abs=1e-6)
+    above = z >= 20.0
+    own = np.interp(z[above], value(outlook, "height"), value(outlook, "modified_refractivity"))
+    np.testing.assert_allclose(m[above], own, atol=1e-6)
     plain = told({"surface": "none"})
     assert (value(plain, "level_origin")[:16] == LEVEL_ORIGINS["measured"]).all()
     assert value(plain, "surface_layer_state") == SURFACE_STATES["none"]
