@@ -79,7 +79,12 @@ VISUAL_RANGE_SOURCES = {"none": 0, "settings": 1, "profile": 2, "humidity": 3}
 
 #: What the profile shows of fog and low cloud at the heights of the ray; code of
 #: `weather_on_path`.
-WEATHER_ON_PATH = {"no_saturated_level": 0, "near_saturation": 1, "saturated_level": 2, "unknown": 3}
+WEATHER_ON_PATH = {
+    "no_saturated_level": 0,
+    "near_saturation": 1,
+    "saturated_level": 2,
+    "unknown": 3,
+}
 
 #: What is known of the air between the surface and the lowest trusted level; code of
 #: `surface_layer_state`.
