@@ -9,7 +9,8 @@ from forecast.physics.column_batch import analyse_columns
 from forecast.physics.ducts import find_ducts
 from forecast.physics.moisture import specific_humidity_from_relative_humidity
 from forecast.physics.surface_join import SURFACE_HEIGHTS, join_surface_layer, trusted_level
-from forecast.physics.surface_layer import solve_sea
+from forecast.physics.surface_layer import SurfaceLayer, solve_sea, surface_profile
+from forecast.schema import LEVEL_ORIGINS
 
 N = SURFACE_HEIGHTS.size
 
@@ -90,3 +91,97 @@ def test_columns_that_cannot_be_modelled_stay_as_they_are():
 def test_trusted_levels_lie_over_the_water_and_in_the_surface_layer():
     z = np.array([[0.0, 2.0, 9.0, 30.0], [0.0, 2.0, 70.0, 90.0], [np.nan, 12.0, 30.0, 60.0]])
     assert trusted_level(z).tolist() == [2, -1, 1]
+
+
+def drawn_columns(n, seed, lapse=None):
+    """Levels from 9…40 m up over drawn water, wind and humidity; the air above has any gradient."""
+    rng = np.random.default_rng(seed)
+    z = rng.uniform(9.0, 40.0, n)[:, None] + np.concatenate([[0.0], np.arange(6.0, 300.0, 12.0)])
+    t0, rh = rng.uniform(276.0, 302.0, n), rng.uniform(0.5, 0.98, n)
+    p = rng.uniform(985e2, 1035e2, n)[:, None] * np.exp(-z / 8300.0)
+    slope = rng.uniform(-0.05, 0.05, n) if lapse is None else np.full(n, lapse)
+    t = t0[:, None] + slope[:, None] * (z - z[:, :1])
+    q0 = specific_humidity_from_relative_humidity(rh, t0, p[:, 0])
+    q = q0[:, None] * (1.0 - rng.uniform(-2e-4, 8e-4, n)[:, None] * (z - z[:, :1]))
+    sst = np.clip(t0 + rng.uniform(-6.0, 6.0, n), 271.0, None)
+    return (z, p, t, q), rng.uniform(1.0, 14.0, n), sst
+
+
+def modified(z, p, t, q):
+    return analyse_columns(p, t, q, z, 6371e3).modified_refractivity
+
+
+def test_the_joint_is_no_extremum_that_neither_side_has():
+    # M of the layer itself, on fine heights up to the joint, says which way it runs there.
+    state, wind, sst = drawn_columns(400, 21)
+    z, p, t, q = state
+    trusted = trusted_level(z)
+    layer = solve_sea(wind, t[:, 0], q[:, 0], p[:, 0], sst, z[:, 0], z[:, 0])
+    joined = join_surface_layer(*state, trusted, layer)
+    m = modified(*joined[:4])
+    seen = 0
+    for c in np.flatnonzero(layer.converged):
+        last = np.flatnonzero(np.isfinite(joined.height[c, :N]))[-1]
+        below = m[c, N] - m[c, last]
+        above = m[c, N + 1] - m[c, N]
+        fine = np.linspace(joined.height[c, last], z[c, 0], 25)
+        one = SurfaceLayer._make([a[c : c + 1] for a in layer])
+        air_t, air_q = surface_profile(one, fine)
+        scale = 287.05 * air_t.mean() * (1.0 + 0.608 * air_q.mean())
+        air_p = p[c, 0] * np.exp(9.80665 * (z[c, 0] - fine) / scale)
+        of_layer = np.diff(modified(fine[None], air_p[None], air_t, air_q)[0])
+        if below * above < 0.0:
+            seen += 1
+            # One side rises and the other falls: so must the layer itself next to the joint, or
+            # turn within the last step.
+            assert of_layer[-1] * above < 0.0 or (np.sign(of_layer) != np.sign(of_layer[0])).any()
+        # Nor a jump: the step below spans no more than the layer does there.
+        assert below == pytest.approx(of_layer.sum(), abs=0.02)
+    assert 10 < seen < 250
+
+
+def test_similarity_continued_above_the_joint_gives_the_extrema_of_similarity():
+    # Where the profile itself follows the law beyond its lowest level, M turns where the law does
+    # (once, at the height of the evaporation duct, but for the most stable air) and nowhere else.
+    (z, p, t, q), wind, sst = drawn_columns(300, 22)
+    layer = solve_sea(wind, t[:, 0], q[:, 0], p[:, 0], sst, z[:, 0], z[:, 0])
+    with np.errstate(invalid="ignore"):
+        t, q = surface_profile(layer, z)
+    joined = join_surface_layer(z, p, t, q, trusted_level(z), layer)
+    m = modified(*joined[:4])
+    with np.errstate(invalid="ignore"):
+        law_t, law_q = surface_profile(layer, joined.height)
+    law = modified(joined.height, joined.air_pressure, law_t, law_q)
+    turning = 0
+    for c in np.flatnonzero(layer.converged):
+        here = np.isfinite(m[c])
+        turns, own = (np.diff(np.sign(np.diff(a[c][here]))) for a in (m, law))
+        np.testing.assert_array_equal(turns, own)
+        turning += np.abs(turns).sum() == 2.0
+    assert turning > 150
+
+
+def test_from_two_metres_the_air_runs_between_the_two_values():
+    (z, p, t, q), wind, sst = drawn_columns(300, 23)
+    rng = np.random.default_rng(24)
+    screen_t = t[:, 0] + rng.uniform(-2.0, 2.0, 300)
+    screen_q = q[:, 0] * rng.uniform(0.9, 1.1, 300)
+    layer = solve_sea(wind, screen_t, screen_q, p[:, 0], sst, 10.0, 2.0)
+    joined = join_surface_layer(z, p, t, q, trusted_level(z, True), layer, 2.0)
+    modelled, between = LEVEL_ORIGINS["modelled_surface_layer"], LEVEL_ORIGINS["interpolated"]
+    two = int(np.flatnonzero(SURFACE_HEIGHTS == 2.0)[0])
+    checked = 0
+    for c in np.flatnonzero(layer.converged):
+        law = joined.origin[c, : two + 1]
+        assert (law[law >= 0] == modelled).all()
+        gap = np.flatnonzero(joined.origin[c] == between)
+        assert gap[0] == two + 1 and joined.origin[c, N] == LEVEL_ORIGINS["measured"]
+        assert joined.air_temperature[c, two] == pytest.approx(screen_t[c], abs=1e-6)
+        assert joined.specific_humidity[c, two] == pytest.approx(screen_q[c], abs=1e-9)
+        span = np.concatenate([[two], gap, [N]])
+        theta = joined.air_temperature[c, span] + 0.0098 * joined.height[c, span]
+        for values in (theta, joined.specific_humidity[c, span]):
+            steps = np.diff(values)
+            assert (steps >= -1e-9).all() or (steps <= 1e-9).all()
+        checked += 1
+    assert checked > 200
