@@ -22,12 +22,13 @@ from forecast.output.sight_data import (
     AIR_NAMES,
     ARC_MINUTE,
     is_point,
+    is_traced,
     seen_directions,
     sightings,
 )
 from forecast.output.sight_layers import draw_looks, draw_profile, draw_rays, draw_transfer
 from forecast.output.text import local_time, metres, percent, shorten, zone_name
-from forecast.schema import CAUTION
+from forecast.schema import CAUTION, SIGHTLINE_STATES
 
 if TYPE_CHECKING:
     from forecast.outlook.view import SightlineView
@@ -139,15 +140,10 @@ def sight_alt_text(view: SightlineView) -> str:
         A few sentences.
     """
     zone, time = ZoneInfo(view.zone), utc(view.time)
-    what = (
-        f"a point at {metres(view.top)}"
-        if is_point(view)
-        else f"{view.base:.0f} to {metres(view.top)} high"
-    )
     parts = [
         f"Sightline {shorten(view.line.name, 80)} at {time:%Y-%m-%d %H:%M} UTC "
         f"({local_time(time, zone)} {zone_name(zone)}): {_chance_words(view)}.",
-        f"Observer at {metres(view.observer_height)}, target {what}, "
+        f"Observer at {metres(view.observer_height)}, target {_target_words(view)}, "
         f"{view.line.distance / 1e3:.1f} km away.",
         *(_look_words(view, air) for air in AIR_NAMES),
     ]
@@ -177,7 +173,7 @@ def _header_rows(view: SightlineView, wide: bool) -> list[tuple[str, float, str,
     clock = "" if zone.key == "UTC" else f" · {local_time(time, zone)} {zone_name(zone)}"
     when = f"{time:%Y-%m-%d %H:%M} UTC{clock}"
     line = view.line
-    what = f"{view.top:.0f} m" if is_point(view) else f"{view.base:.0f} to {view.top:.0f} m"
+    what = _target_words(view)
     where = (
         f"observer at {metres(view.observer_height)}, target {what}, {line.distance / 1e3:.1f} km"
     )
@@ -227,6 +223,8 @@ def _chance_words(view: SightlineView) -> str:
     """State in the best guess, and how likely the sightline is open, in one line."""
     best, lower, upper = view.probability
     if not np.isfinite(best):
+        if view.state not in SIGHTLINE_STATES:
+            return "not known whether it is open"
         return f"{view.state} in the best guess, cannot tell how likely it is open"
     return (
         f"{view.state} in the best guess, {percent(best)} likely to be open "
@@ -234,11 +232,18 @@ def _chance_words(view: SightlineView) -> str:
     )
 
 
+def _target_words(view: SightlineView) -> str:
+    """Heights of the target; a dash if they are not known."""
+    if not np.isfinite([view.base, view.top]).all():
+        return "–"
+    return f"{view.top:.0f} m" if is_point(view) else f"{view.base:.0f} to {view.top:.0f} m"
+
+
 def _look_words(view: SightlineView, air: str) -> str:
     """What one air shows of the target, and where."""
     name = AIR_NAMES[air].capitalize()
-    if not np.isfinite(np.asarray(view.heights.get(air, ()), dtype=float)).any():
-        return f"{name}: no ray reaches the target's distance."
+    if not is_traced(view, air):
+        return f"{name}: not known."
     shown = seen_directions(view, air)
     if not shown.size:
         return f"{name}: nothing of the target visible."

@@ -26,6 +26,8 @@ __all__ = [
     "hidden_parts",
     "is_known",
     "is_point",
+    "is_traced",
+    "land_heights",
     "outline_heights",
     "picture_top",
     "profile_top",
@@ -59,6 +61,21 @@ def is_known(view: SightlineView) -> bool:
     """Whether the geometry can be drawn at all."""
     numbers = (view.line.distance, view.radius, view.observer_height, view.base, view.top)
     return bool(np.all(np.isfinite(numbers))) and min(view.line.distance, view.radius) > 0.0
+
+
+def is_traced(view: SightlineView, air: str) -> bool:
+    """Whether rays could be followed through an air, wherever they ended."""
+    reached = np.isfinite(np.asarray(view.heights.get(air, ()), dtype=float))
+    return bool(reached.any()) or bool(np.isfinite(view.horizon.get(air, np.nan)))
+
+
+def land_heights(view: SightlineView, distance: np.ndarray) -> np.ndarray:
+    """Height of the land above the water at distances, m; 0 where there is none or none known."""
+    land = np.zeros((0, 2)) if view.terrain is None else np.asarray(view.terrain, dtype=float)
+    land = land[np.isfinite(land).all(axis=1)]
+    if not len(land):
+        return np.zeros(distance.shape)
+    return np.maximum(np.interp(distance, land[:, 0], land[:, 1], left=0.0, right=0.0), 0.0)
 
 
 def bulge(view: SightlineView, distance: np.ndarray) -> np.ndarray:
@@ -238,8 +255,10 @@ def silhouette(
         ]
     known = np.asarray(view.elevation, dtype=float)
     horizon = view.horizon.get(air, np.nan)
-    computed = known.size > 0 and np.isfinite(view.heights.get(air, np.nan)).any()
-    ends = np.isnan(height) & (angle <= known[-1]) if computed else angle <= horizon
+    if known.size and is_traced(view, air):
+        ends = np.isnan(height) & (angle <= known[-1])
+    else:
+        ends = angle <= horizon
     return covered, ends
 
 
@@ -289,6 +308,11 @@ def angle_range(view: SightlineView) -> tuple[float, float]:
             [view.horizon.get(a, np.nan) for a in AIR_NAMES],
         ]
     )
+    for air in AIR_NAMES:
+        # Where nothing is seen, the line above which one looks past what is in the way.
+        open_sky = view.elevation[np.isfinite(view.heights.get(air, np.nan * view.elevation))]
+        if open_sky.size and not seen_directions(view, air).size:
+            found = np.append(found, open_sky[0])
     found = found[np.isfinite(found)]
     low, high = (float(found.min()), float(found.max())) if found.size else (0.0, 0.0)
     short = max(0.0, _LEAST_SPAN - (high - low))
@@ -313,12 +337,9 @@ def height_range(view: SightlineView) -> tuple[float, float]:
 def _scene_top(view: SightlineView) -> float:
     """Height above the line between the ends that holds observer, target, water and land, m."""
     middle = float(bulge(view, np.array(0.5 * view.line.distance)))
-    wanted = [view.observer_height, view.top, 1.15 * middle, 5.0]
-    if view.terrain is not None and len(view.terrain):
-        land = np.asarray(view.terrain, dtype=float)
-        land = land[(land[:, 0] >= 0.0) & (land[:, 0] <= view.line.distance)]
-        wanted.append(float(np.nanmax(land[:, 1] + bulge(view, land[:, 0]), initial=0.0)))
-    return max(wanted)
+    along = np.linspace(0.0, view.line.distance, 241)
+    land = float((land_heights(view, along) + bulge(view, along)).max())
+    return max(view.observer_height, view.top, 1.15 * middle, land, 5.0)
 
 
 def picture_top(view: SightlineView) -> float:

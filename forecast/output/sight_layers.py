@@ -26,6 +26,8 @@ from forecast.output.sight_data import (
     hidden_parts,
     is_known,
     is_point,
+    is_traced,
+    land_heights,
     picture_top,
     profile_top,
     sightings,
@@ -121,12 +123,10 @@ def draw_rays(axis: Axes, view: SightlineView, scale: float) -> None:
             duct = Patch(color=_DUCT, label="duct (holds rays)")
             handles = [duct]
     axis.fill_between(km, low, water, color=_WATER, lw=0, zorder=3.0)
-    if view.terrain is not None and len(view.terrain):
-        land = np.asarray(view.terrain, dtype=float)
-        ground = np.interp(along, land[:, 0], land[:, 1])
-        axis.fill_between(km, water, water + np.maximum(ground, 0.0), color=_LAND, lw=0, zorder=3.1)
-        if (ground > 0.0).any():
-            handles.append(Patch(color=_LAND, label="land"))
+    land = land_heights(view, along)
+    if land.any():
+        axis.fill_between(km, water, water + land, color=_LAND, lw=0, zorder=3.1)
+        handles.append(Patch(color=_LAND, label="land"))
     handles = _draw_target(axis, view) + _draw_fan(axis, view, scale) + handles
     dot: Any = {"marker": "o", "color": INK, "ms": 5.5 * scale, "ls": "none"}
     axis.plot([0.0], [view.observer_height], clip_on=False, zorder=7.0, **dot)
@@ -191,16 +191,17 @@ def _draw_target(axis: Axes, view: SightlineView) -> list[Any]:
     """The target at its distance: strong where it is seen, hatched where it is hidden."""
     far = view.line.distance / 1e3
     seen, hidden = visible_parts(view), hidden_parts(view)
+    unseen = "target, hidden" if is_traced(view, "air") else "target, not known whether visible"
     if is_point(view):
         face = LIKELIHOOD if seen.size else "white"
-        name = "target, visible" if seen.size else "target, hidden"
+        name = "target, visible" if seen.size else unseen
         style: Any = {"marker": "D", "ms": 6.0, "mfc": face, "mec": LIKELIHOOD, "ls": "none"}
         axis.plot([far], [view.top], clip_on=False, zorder=8.0, **style)
         return [Line2D([], [], label=name, **style)]
     handles = []
     strong: Any = {"facecolor": LIKELIHOOD, "edgecolor": LIKELIHOOD}
     pale: Any = {"facecolor": "white", "edgecolor": "#8a8a8a", "hatch": "//////"}
-    for parts, name, style in ((seen, "target, visible", strong), (hidden, "target, hidden", pale)):
+    for parts, name, style in ((seen, "target, visible", strong), (hidden, unseen, pale)):
         for low, high in parts:
             box = (far, low), 0.022 * far, high - low
             axis.add_patch(Rectangle(*box, lw=0.8, zorder=6.0, **style))
@@ -218,6 +219,7 @@ def draw_looks(boxes: list[Axes], view: SightlineView, scale: float) -> None:
     known = is_known(view)
     # 1 km as the unit where metres would crowd the axis.
     unit, per = ("km", 1e3) if right - left > 4000.0 else ("m", 1.0)
+    middle = 0.5 * (left + right) / per
     extent = (left / per, right / per, low / ARC_MINUTE, high / ARC_MINUTE)
     for box, (air, name) in zip(boxes, AIR_NAMES.items(), strict=True):
         covered, ends = silhouette(view, air, angle, offset)
@@ -231,23 +233,22 @@ def draw_looks(boxes: list[Axes], view: SightlineView, scale: float) -> None:
         horizon = view.horizon.get(air, np.nan) / ARC_MINUTE
         if np.isfinite(horizon):
             box.axhline(horizon, color=_LINES["standard"][0], lw=1.0, ls=(0, (4, 2)), zorder=2.0)
-        shown = covered.any()
+        shown = bool(covered.any())
         if is_point(view):
             at = sightings(view, air, view.top)[0] / ARC_MINUTE
-            box.plot(np.zeros(at.size), at, "o", ms=4.5 * scale + 1.0, color=INK, zorder=3.0)
+            box.plot(np.full(at.size, middle), at, "o", ms=4.5 * scale + 1.0, color=INK, zorder=3.0)
             shown = at.size > 0
         if not shown:
-            computed = np.isfinite(np.asarray(view.heights.get(air, np.nan), dtype=float)).any()
-            what = "nothing of the\ntarget visible" if computed else "not known:\nno ray arrives"
+            what = "nothing of the\ntarget visible" if is_traced(view, air) else "not known"
             _say(box, what, scale, 0.62)
         box.set_title(name.replace(" (no air)", ""), fontsize=8.5 * scale, pad=3.0, color=INK)
         box.set_xlim(*extent[:2])
         box.set_ylim(*extent[2:])
-        box.xaxis.set_major_locator(MaxNLocator(5, steps=_STEPS, prune="both"))
+        ticks = np.array(MaxNLocator(6, steps=_STEPS).tick_values(*extent[:2]))
+        inner = np.abs(ticks - middle) < 0.4 * (extent[1] - extent[0])
+        box.set_xticks([] if nominal else ticks[inner])
         box.yaxis.set_major_locator(MaxNLocator(7, steps=_STEPS))
         box.tick_params(labelsize=8.0 * scale, labelleft=box is boxes[0])
-        if nominal:
-            box.set_xticks([])
     boxes[0].set_ylabel("arc minutes above horizontal", fontsize=8.5 * scale, labelpad=1.5)
     across = f"{unit} across at the target" if not nominal else "width not to scale"
     if not nominal and known:
@@ -274,11 +275,9 @@ def draw_transfer(axis: Axes, view: SightlineView, scale: float) -> None:
     low, high = (angle / ARC_MINUTE for angle in angle_range(view))
     left, right = height_range(view)
     handles: list[Any] = []
-    drawn = False
     for i, (air, name) in enumerate(AIR_NAMES.items()):
         colour, dash = _LINES[air]
         angle, height = broken_curve(view, air)
-        drawn = drawn or bool(np.any(np.isfinite(height)))
         axis.plot(
             height, angle / ARC_MINUTE, color=colour, ls=dash, lw=2.6 - 0.5 * i, zorder=3.0 + i,
             gid=f"transfer-{air}",
@@ -296,8 +295,9 @@ def draw_transfer(axis: Axes, view: SightlineView, scale: float) -> None:
         axis.axvspan(view.base, view.top, color=_BAND, lw=0, zorder=1.0)
     handles.insert(1, Patch(color=_BAND, label="target"))
     handles.append(Line2D([], [], color=FAINT, marker=5, ls="none", ms=6.0, label="horizon"))
-    if not drawn:
-        _say(axis, "No ray reaches the target's distance.", scale)
+    if not any(np.isfinite(view.heights.get(air, ())).any() for air in AIR_NAMES):
+        traced = is_traced(view, "air")
+        _say(axis, "All rays end before the target." if traced else "not known", scale)
     axis.set_xlim(left, right)
     axis.set_ylim(low, high)
     axis.set_xlabel("height at the target's distance (m)", fontsize=8.5 * scale, labelpad=2.0)
@@ -351,7 +351,7 @@ def draw_profile(axis: Axes, view: SightlineView, scale: float) -> None:
     axis.set_xlabel("temperature (°C)", fontsize=8.5 * scale, labelpad=2.0, color=warm)
     axis.set_ylabel("height (m)", fontsize=8.5 * scale, labelpad=1.5)
     for home, colour in ((axis, warm), (beside, cool)):
-        home.xaxis.set_major_locator(MaxNLocator(4, steps=_STEPS, min_n_ticks=2))
+        home.xaxis.set_major_locator(MaxNLocator(4, steps=[1, 2, 5, 10], min_n_ticks=2))
         home.tick_params(axis="x", labelsize=8.0 * scale, colors=colour, pad=1.5)
         home.margins(x=0.08)
     columns = 1 if scale == 1.0 else 2

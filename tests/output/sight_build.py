@@ -180,7 +180,7 @@ CASES = {
         "terrain": ((0, 0), (18e3, 0), (21e3, 160), (24e3, 640), (26e3, 520), (30e3, 0), (60e3, 0)),
         "name": "Far ridge behind the island",
         "silhouette": ((-4e3, 200.0), (-1e3, 900.0), (2e3, 500.0), (5e3, 100.0)),
-        "words": ("Land at 24.0 km stands in the way.",),
+        "probability": (0.0, 0.0, 0.03), "words": ("Land at 24.0 km stands in the way.",),
     },
     "superior mirage": {
         "temperature": INVERSION, "observer": 20.0, "top": 150.0, "distance": 40e3,
