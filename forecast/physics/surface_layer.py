@@ -46,9 +46,10 @@ GRAVITY = 9.80665  # m/s²
 ADIABATIC = 0.0098  # K/m, as COARE uses it
 _GUST_FACTOR = 1.2  # β of the convective gustiness
 _LEAST_GUST = 0.2  # m/s
+_CHARNOCK_SLOPE, _CHARNOCK_WIND = 0.0017, 19.0  # s/m, m/s
 _SALT = 0.98  # saturation over sea water relative to fresh water
 _MOST_ITERATIONS = 60
-_TOLERANCE = 1e-3  # relative, on u* and the transfer coefficient of heat
+_TOLERANCE = 1e-3  # relative, residual of u* before its last step, and of 1/L
 _LOG_10 = np.log(10.0)
 _LOG_LARGEST_Z0T = np.log(1.6e-4)
 _LOG_Z0T = np.log(5.8e-5)
@@ -292,7 +293,7 @@ def _solve_one(
 
     Every quantity follows from x = 1/L, u* and gustiness; x is sought as the fixed point of
     ``g(x) = g/T · B/U² · f_m²/f_h`` with ``f = ln(z/z0) − ψ(z x)``, by the secant through the
-    last two pairs (Anderson 1965, J. ACM 12, 547–560, depth one).
+    last two pairs in stable air.
     """
     nothing = (np.nan, np.nan, np.nan, np.nan, np.nan, np.nan)
     if not np.isfinite(wind + dt + dq + zu + zt + inversion):
@@ -300,28 +301,32 @@ def _solve_one(
     buoyancy = GRAVITY / t * (dt * (1.0 + 0.61 * q) + 0.61 * t * dq)
     t_c = t - CELSIUS_OFFSET
     viscosity = 1.326e-5 * (1.0 + t_c * (6.542e-3 + t_c * (8.301e-6 - t_c * 4.84e-9)))
-    log_viscosity = np.log(viscosity)
+    log_viscosity = np.log(viscosity) if over_sea else 0.0
     log_zu = np.log(zu)
     log_zt = log_zu if zt == zu else np.log(zt)
     largest = largest_zeta / max(zu, zt)
     # First guess: u* of neutral air, 1/L from the bulk Richardson number (Grachev & Fairall 1997,
     # J. Appl. Meteor. 36, 406–414).
-    ut = np.sqrt(wind * wind + 0.25)
+    ut = np.sqrt(wind * wind + (0.25 if buoyancy < 0.0 else _LEAST_GUST**2))
     charnock = 0.0
     if over_sea:
         u10 = ut * (_LOG_10 + 9.2) / (log_zu + 9.2)  # z0 of 0.1 mm
         us = u10 * (0.0265 + 0.00095 * u10)  # the drag of Edson et al. 2013, as a line
-        charnock = max(0.0017 * min(u10, 19.0) - 0.005, 0.0)
+        charnock = max(_CHARNOCK_SLOPE * min(u10, _CHARNOCK_WIND) - 0.005, 0.0)
+        log_us = np.log(us)
     else:
-        log_z0, log_z0t = np.log(z0), np.log(z0t)
+        log_z0, log_z0t, log_us = np.log(z0), np.log(z0t), 0.0
         us = KARMAN * ut / (log_zu - log_z0)
-    x, x_before, g_before = 0.0, 0.0, 0.0
-    fm, fh = 0.0, 0.0
+    x, x_before, g_before, gust = 0.0, 0.0, 0.0, _LEAST_GUST
     for n in range(_MOST_ITERATIONS):
+        inverse_us = 1.0 / us
+        steepness = 0.0  # d ln z0 / d ln u*
         if over_sea:
-            z0 = charnock * us * us / GRAVITY + 0.11 * viscosity / us
+            waves, smooth = charnock * us * us / GRAVITY, 0.11 * viscosity * inverse_us
+            z0 = waves + smooth
             log_z0 = np.log(z0)
-            log_z0t = min(_LOG_LARGEST_Z0T, _LOG_Z0T - 0.72 * (log_z0 + np.log(us) - log_viscosity))
+            log_z0t = min(_LOG_LARGEST_Z0T, _LOG_Z0T - 0.72 * (log_z0 + log_us - log_viscosity))
+            steepness = (3.0 * waves - smooth) / z0
         if n == 0:
             rough = log_zu - log_z0
             cc = rough * rough / (log_zt - log_z0t)
@@ -333,41 +338,49 @@ def _solve_one(
                 x = min(cc * richardson * (1.0 + 3.0 * richardson / cc) / zu, largest)
         if x < 0.0:
             fm = log_zu - log_z0 - psi_unstable(zu * x, 0, table)
-            fh_new = log_zt - log_z0t - psi_unstable(zt * x, 1, table)
+            inverse_fh = 1.0 / (log_zt - log_z0t - psi_unstable(zt * x, 1, table))
         else:
             fm = log_zu - log_z0 - psi_momentum(zu * x, code)
-            fh_new = log_zt - log_z0t - psi_heat(zt * x, code)
-        us_new = KARMAN * ut / fm
-        change = max(abs(us_new - us) / us_new, abs(fh_new - fh) / fh_new)
-        us, fh = us_new, fh_new
-        g = buoyancy / (ut * ut) * fm * fm / fh
-        if buoyancy < 0.0:
-            # ts·us = κ dθ us / f_h is minus the flux.
-            gust = _GUST_FACTOR * np.cbrt(-buoyancy * KARMAN / fh * us * inversion)
-            ut = np.sqrt(wind * wind + max(gust, _LEAST_GUST) ** 2)
-        else:
-            ut = np.sqrt(wind * wind + _LEAST_GUST**2)
-        if over_sea:
-            # Edson et al. 2013: the mean 10 m neutral wind, gusts taken out.
-            mean = us / KARMAN * (_LOG_10 - log_z0) * wind / ut
-            charnock = max(0.0017 * min(mean, 19.0) - 0.005, 0.0)
+            inverse_fh = 1.0 / (log_zt - log_z0t - psi_heat(zt * x, code))
+        inverse_fm = 1.0 / fm
+        drift = KARMAN * ut * inverse_fm * inverse_us - 1.0
+        g = buoyancy * inverse_fh * (fm / ut) ** 2
         if x == largest and g > largest and n > 2:
             return nothing, 1, n + 1
-        if n > 0 and change < _TOLERANCE and abs(g - x) * zu < 1e-3 + 1e-3 * abs(x) * zu:
-            if not over_sea:
-                z0, z0t = np.exp(log_z0), np.exp(log_z0t)
+        if n > 0 and abs(drift) < _TOLERANCE and abs(g - x) * zu < _TOLERANCE * (0.2 + abs(x) * zu):
+            scale = KARMAN * inverse_fh
+            length = 1.0 / x if x != 0.0 else np.inf
+            us *= 1.0 + drift / (1.0 - steepness * inverse_fm)
+            return (us, dt * scale, dq * scale, length, np.exp(log_z0), np.exp(log_z0t)), 0, n + 1
+        # u* by Newton's step, roughness going along; bounded far from the answer.
+        factor = 1.0 + min(max(drift / (1.0 - steepness * inverse_fm), -0.5), 1.0)
+        if buoyancy < 0.0:
+            # w*³ = −g/T θ_v* u* h; after the first, Halley's step from the gust before.
+            cube = -buoyancy * KARMAN * inverse_fh * us * factor * inversion * _GUST_FACTOR**3
+            if n == 0:
+                gust = np.exp(np.log(cube) / 3.0)
             else:
-                z0t = np.exp(log_z0t)
-            scale = KARMAN / fh
-            return (us, dt * scale, dq * scale, 1.0 / x if x != 0.0 else np.inf, z0, z0t), 0, n + 1
-        slope = (g - g_before) / (x - x_before) if n > 0 and x != x_before else 0.0
-        # The step of a fixed point, or that of the secant where it is one of a contraction or of
-        # a swing; g never changes sign with x.
-        new = x + (g - x) / (1.0 - slope) if slope < 0.9 else g
-        if new * g < 0.0:
-            new = g
-        x_before, g_before = x, g
-        x = min(new, largest)
+                before = gust * gust * gust
+                gust *= (before + 2.0 * cube) / (2.0 * before + cube)
+            speed = np.sqrt(wind * wind + max(gust, _LEAST_GUST) ** 2)
+            # In unstable air f_m²/f_h hardly changes: gusts aside, g is the answer.
+            gustier = speed / ut
+            x = g / (gustier * gustier)
+            factor *= gustier
+            ut = speed
+        else:
+            slope = (g - g_before) / (x - x_before) if n > 0 and x != x_before else 0.0
+            # The step of the secant, or of a fixed point where the secant leads astray.
+            new = x + (g - x) / (1.0 - slope) if slope < 0.9 else g
+            x_before, g_before = x, g
+            x = min(new if new >= 0.0 else g, largest)
+        us *= factor
+        log_us = np.log(us)
+        if over_sea:
+            # Edson et al. 2013: the mean 10 m neutral wind, gusts taken out.
+            ahead = log_z0 + steepness * (factor - 1.0)
+            mean = us / KARMAN * (_LOG_10 - ahead) * wind / ut
+            charnock = max(_CHARNOCK_SLOPE * min(mean, _CHARNOCK_WIND) - 0.005, 0.0)
     return nothing, 2, _MOST_ITERATIONS
 
 
