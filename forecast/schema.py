@@ -395,8 +395,12 @@ _ROWS = [
     Variable(
         "target_range", "distance at which this target fades to a contrast of 0.02", "m", SIGHT
     ),
+    Variable("target_range_lower", "lower bound of the target's range", "m", SIGHT),
+    Variable("target_range_upper", "upper bound of the target's range", "m", SIGHT),
     Variable("lamp_illuminance", "illuminance from the lamp at the observer", "lx", SIGHT),
     Variable("lamp_range", "distance at which the lamp is lost to the eye", "m", SIGHT),
+    Variable("lamp_range_lower", "lower bound of the lamp's range", "m", SIGHT),
+    Variable("lamp_range_upper", "upper bound of the lamp's range", "m", SIGHT),
     Variable(
         "path_relative_humidity",
         "largest relative humidity of the profile at the heights of the ray",

@@ -88,15 +88,10 @@ def rayleigh_cross_section(wavelength: float, co2: float = 420e-6) -> float:
 
     References
     ----------
-    Bodhaine et al. (1999), eqs. 2, 4–6, 18–19 and 23 (numbers from memory): refractive index of
-    Peck & Reeder (1972), depolarisation of Bates (1984).
+    Bodhaine et al. (1999), numbers from memory: refractive index of Peck & Reeder (1972),
+    depolarisation of Bates (1984).
     """
-    low, high = OPTICAL_WAVELENGTHS
-    if not low <= wavelength <= high:
-        raise ValueError(
-            f"rayleigh_cross_section: wavelength {wavelength * 1e9:.0f} nm; the equations hold "
-            f"for {low * 1e9:.0f} to {high * 1e9:.0f} nm"
-        )
+    _check_wavelength("rayleigh_cross_section", wavelength)
     s = (1e-6 / wavelength) ** 2  # µm⁻²
     index = 1.0 + 1e-8 * (8060.51 + 2480990.0 / (132.274 - s) + 17455.7 / (39.32957 - s)) * (
         1.0 + 0.54 * (co2 - 300e-6)
@@ -142,7 +137,7 @@ def haze_extinction(relative_humidity: Any, dry: Any, exponent: float = GROWTH_E
     Parameters
     ----------
     relative_humidity : array_like
-        Relative humidity over water (1), 0 or more. Above `HAZE_HUMIDITY`, and in supersaturated
+        Over water (1), 0 or more. Above `HAZE_HUMIDITY`, and in supersaturated
         air, the growth is held: the result is the least that there is, and fog is more.
     dry : array_like
         Extinction of the dry haze, m⁻¹; broadcasts.
@@ -172,10 +167,9 @@ def extinction_from_visibility(visibility: Any, clean: Any, wavelength: float = 
 
     Parameters
     ----------
-    visibility : array_like
-        Meteorological optical range, m, above 0.
-    clean : array_like
-        Extinction by clean air at 550 nm, m⁻¹, which the report includes; broadcasts.
+    visibility, clean : array_like
+        Meteorological optical range, m, above 0; extinction by clean air at 550 nm, m⁻¹, which the
+        report includes.
     wavelength : float
         m, 300e-9…1700e-9. Haze is more transparent to longer waves, fog is not.
 
@@ -194,12 +188,7 @@ def extinction_from_visibility(visibility: Any, clean: Any, wavelength: float = 
         raise ValueError(
             f"extinction_from_visibility: visibility {np.nanmin(v):g} m; expected more than 0 m"
         )
-    low, high = OPTICAL_WAVELENGTHS
-    if not low <= wavelength <= high:
-        raise ValueError(
-            f"extinction_from_visibility: wavelength {wavelength * 1e9:.0f} nm; expected "
-            f"{low * 1e9:.0f} to {high * 1e9:.0f} nm"
-        )
+    _check_wavelength("extinction_from_visibility", wavelength)
     colour = np.interp(1e-3 * v, _HAZE_RANGE, _HAZE_COLOUR)
     grey = np.maximum(-np.log(REPORT_THRESHOLD) / v - clean, 0.0)
     return grey * (_VISIBLE / wavelength) ** colour
@@ -210,10 +199,9 @@ def profile_at(level_height: Any, values: Any, height: Any) -> np.ndarray:
 
     Parameters
     ----------
-    level_height, values : array_like
-        Heights (m) that rise, and any quantity, (column, level); levels with NaN are skipped.
-    height : array_like
-        m, (column, step).
+    level_height, values, height : array_like
+        Heights (m) and any quantity of levels, (column, level), those with NaN or without rise
+        skipped; heights of the rays, m, (column, step).
 
     Returns
     -------
@@ -237,26 +225,21 @@ def profile_at(level_height: Any, values: Any, height: Any) -> np.ndarray:
     return out
 
 
-def optical_depth(level_height: Any, extinction: Any, distance: Any, height: Any) -> np.ndarray:
-    """Optical depth along rays through the heights that they cross.
+def optical_depth(extinction: Any, distance: Any) -> np.ndarray:
+    """Optical depth along rays.
 
     Parameters
     ----------
-    level_height, extinction : array_like
-        Heights (m) and extinction (m⁻¹) of profiles, (column, level).
-    distance : array_like
-        Distances of the steps along the surface, m, rising, (step,).
-    height : array_like
-        Heights of the rays there, m, (column, step).
+    extinction, distance : array_like
+        At the heights that the rays cross, m⁻¹, (..., step); along the surface, m, rising, (step,).
 
     Returns
     -------
     ndarray
-        (column,), by the trapezoidal rule. Lengths are those along the surface, short by less than
+        (...), by the trapezoidal rule. Lengths are those along the surface, short by less than
         0.1 % for sightlines.
     """
-    along = profile_at(level_height, extinction, height)
-    return np.trapezoid(along, np.asarray(distance, dtype=float), axis=1)
+    return np.trapezoid(np.asarray(extinction, dtype=float), np.asarray(distance, dtype=float))
 
 
 def apparent_contrast(inherent: Any, depth: Any) -> Any:
@@ -264,11 +247,9 @@ def apparent_contrast(inherent: Any, depth: Any) -> Any:
 
     Parameters
     ----------
-    inherent : array_like
-        ``(L_target − L_sky) / L_sky``, −1 (black) or more; above 0 for a target brighter than the
-        sky.
-    depth : array_like
-        Optical depth of the path; broadcasts.
+    inherent, depth : array_like
+        ``(L_target − L_sky) / L_sky``, −1 (black) or more, above 0 for a target brighter than the
+        sky; optical depth of the path.
 
     Returns
     -------
@@ -299,10 +280,8 @@ def contrast_range(inherent: Any, extinction: Any, threshold: float = CONTRAST_T
 
     Parameters
     ----------
-    inherent : array_like
-        As in `apparent_contrast`.
-    extinction : array_like
-        m⁻¹; broadcasts.
+    inherent, extinction : array_like
+        As in `apparent_contrast`; m⁻¹.
     threshold : float
         0…1. The usual 0.02 is for targets that look larger than half a degree or so; a smaller one
         is lost earlier.
@@ -327,21 +306,12 @@ def contrast_range(inherent: Any, extinction: Any, threshold: float = CONTRAST_T
 
 
 def lamp_illuminance(intensity: Any, depth: Any, distance: Any) -> Any:
-    """Illuminance from a lamp, by Allard's law.
+    """Illuminance (lx) from a lamp, by Allard's law.
 
     Parameters
     ----------
-    intensity : array_like
-        Towards the observer, cd.
-    depth : array_like
-        Optical depth of the path.
-    distance : array_like
-        m, above 0.
-
-    Returns
-    -------
-    ndarray or float
-        lx.
+    intensity, depth, distance : array_like
+        Towards the observer, cd; optical depth of the path; m.
 
     Raises
     ------
@@ -361,12 +331,8 @@ def lamp_range(intensity: Any, extinction: Any, threshold: Any) -> Any:
 
     Parameters
     ----------
-    intensity : array_like
-        cd, 0 or more.
-    extinction : array_like
-        m⁻¹.
-    threshold : array_like
-        Least illuminance that the eye notices, lx.
+    intensity, extinction, threshold : array_like
+        Towards the observer, cd; m⁻¹; least illuminance that the eye notices, lx.
 
     Returns
     -------
@@ -391,6 +357,15 @@ def lamp_range(intensity: Any, extinction: Any, threshold: Any) -> Any:
     return np.where(np.isfinite(depth), vacuum * share, np.nan)
 
 
+def _check_wavelength(function: str, wavelength: float) -> None:
+    low, high = OPTICAL_WAVELENGTHS
+    if not low <= wavelength <= high:
+        raise ValueError(
+            f"{function}: wavelength {wavelength * 1e9:.0f} nm; the equations hold for "
+            f"{low * 1e9:.0f} to {high * 1e9:.0f} nm"
+        )
+
+
 def _extinction(function: str, extinction: Any) -> np.ndarray:
     sigma = np.asarray(extinction, dtype=float)
     if np.any(sigma < 0.0):
@@ -404,9 +379,11 @@ def _interpolate(z, v, at, out):  # pragma: no cover - compiled
         heights = np.empty(z.shape[1])
         values = np.empty(z.shape[1])
         count = 0
+        last = -np.inf
         for i in range(z.shape[1]):
-            if np.isfinite(z[c, i]) and np.isfinite(v[c, i]):
-                heights[count] = z[c, i]
+            if last < z[c, i] < np.inf and np.isfinite(v[c, i]):
+                last = z[c, i]
+                heights[count] = last
                 values[count] = v[c, i]
                 count += 1
         if count == 0:

@@ -73,7 +73,7 @@ def test_clean_air_scatters_in_proportion_to_its_density():
 def test_wavelength_outside_validity_is_refused(wavelength):
     with pytest.raises(ValueError, match="nm; the equations hold for 300 to 1700 nm"):
         rayleigh_cross_section(wavelength)
-    with pytest.raises(ValueError, match="expected 300 to 1700 nm"):
+    with pytest.raises(ValueError, match="extinction_from_visibility: wavelength"):
         extinction_from_visibility(1e4, 0.0, wavelength)
 
 
@@ -152,8 +152,9 @@ def test_humidity_in_per_cent_is_refused(humidity):
 
 
 def test_profiles_are_read_between_levels_and_held_beyond():
-    z = np.array([[0.0, 10.0, np.nan, 30.0], [np.nan] * 4])
-    v = np.array([[1.0, 2.0, 99.0, 4.0], [1.0, 2.0, 3.0, 4.0]])
+    # A missing height and a dip are skipped.
+    z = np.array([[0.0, 10.0, np.nan, 8.0, 30.0], [np.nan] * 5])
+    v = np.array([[1.0, 2.0, 99.0, 99.0, 4.0], [1.0, 2.0, 3.0, 4.0, 5.0]])
     found = profile_at(z, v, np.array([[-1.0, 5.0, 20.0, 40.0, np.nan]] * 2))
     assert found[0, :4].tolist() == [1.0, 1.5, 3.0, 4.0]
     assert np.isnan(found[0, 4])
@@ -173,7 +174,8 @@ def test_optical_depth_through_thinning_haze():
     x = np.linspace(0.0, 50e3, 201)
     height = (20.0 + 4e-8 * x**2)[None, :]
     expected = 50e3 * 1e-4 * (1.0 - (20.0 + 4e-8 * 50e3**2 / 3.0) / 1000.0)
-    assert optical_depth(z, extinction, x, height)[0] == pytest.approx(expected, rel=1e-5)
+    on_ray = profile_at(z, extinction, height)
+    assert optical_depth(on_ray, x)[0] == pytest.approx(expected, rel=1e-5)
 
 
 @given(st.floats(1.0, 1e9), st.floats(0.0, 0.05), st.floats(3e-8, 1e-3))
