@@ -27,7 +27,7 @@ from forecast.output.sight_data import (
     sightings,
 )
 from forecast.output.sight_layers import draw_looks, draw_profile, draw_rays, draw_transfer
-from forecast.output.text import local_time, metres, percent, shorten, zone_name
+from forecast.output.text import local_time, percent, shorten, zone_name
 from forecast.schema import CAUTION, SIGHTLINE_STATES
 
 if TYPE_CHECKING:
@@ -143,7 +143,7 @@ def sight_alt_text(view: SightlineView) -> str:
     parts = [
         f"Sightline {shorten(view.line.name, 80)} at {time:%Y-%m-%d %H:%M} UTC "
         f"({local_time(time, zone)} {zone_name(zone)}): {_chance_words(view)}.",
-        f"Observer at {metres(view.observer_height)}, target {_target_words(view)}, "
+        f"Observer at {round(view.observer_height, 1):g} m, target {_target_words(view)}, "
         f"{view.line.distance / 1e3:.1f} km away.",
         *(_look_words(view, air) for air in AIR_NAMES),
     ]
@@ -173,12 +173,10 @@ def _header_rows(view: SightlineView, wide: bool) -> list[tuple[str, float, str,
     clock = "" if zone.key == "UTC" else f" · {local_time(time, zone)} {zone_name(zone)}"
     when = f"{time:%Y-%m-%d %H:%M} UTC{clock}"
     line = view.line
-    what = _target_words(view)
-    where = (
-        f"observer at {metres(view.observer_height)}, target {what}, {line.distance / 1e3:.1f} km"
-    )
+    where = f"observer at {round(view.observer_height, 1):g} m, target {_target_words(view)}"
+    where += f", {line.distance / 1e3:.1f} km"
     where += f" away at {line.azimuth:.0f}°" if np.isfinite(line.azimuth) else " away"
-    chance = _chance_words(view).replace(" %", "\u00a0%")
+    chance = _chance_words(view).replace(" %", "\u00a0%").replace("% to ", "%\u00a0to\u00a0")
     chance = chance[0].upper() + chance[1:]
     said = shorten(view.words[0], 260) if view.words else ""
     if wide:
@@ -186,15 +184,20 @@ def _header_rows(view: SightlineView, wide: bool) -> list[tuple[str, float, str,
             (shorten(line.name, 90), 13.0, "bold", INK, 0.27),
             (chance, 11.0, "bold", INK, 0.24),
             (f"{when} · {where}", 9.5, "normal", FAINT, 0.21),
-            *((text, 10.0, "normal", INK, 0.21) for text in textwrap.wrap(said, 130)[:2]),
+            *((text, 10.0, "normal", INK, 0.21) for text in _lines(said, 130, 2)),
         ]
     return [
-        *((t, 10.0, "bold", INK, 0.2) for t in textwrap.wrap(shorten(line.name, 90), 42)[:2]),
+        *((t, 10.0, "bold", INK, 0.2) for t in _lines(shorten(line.name, 90), 42, 2)),
         *((text, 8.5, "bold", INK, 0.17) for text in textwrap.wrap(chance, 50)),
         *((text, 7.8, "normal", FAINT, 0.16) for text in textwrap.wrap(when, 60)),
         *((text, 7.8, "normal", FAINT, 0.16) for text in textwrap.wrap(where, 60)),
-        *((text, 8.2, "normal", INK, 0.165) for text in textwrap.wrap(said, 58)[:4]),
+        *((text, 8.2, "normal", INK, 0.165) for text in _lines(said, 58, 4)),
     ]
+
+
+def _lines(text: str, width: int, most: int) -> list[str]:
+    """Text in at most so many lines; what is cut off shows as such."""
+    return textwrap.wrap(text, width, max_lines=most, placeholder=" …")
 
 
 def _write_header(figure: Figure, rows: list[tuple[str, float, str, str, float]]) -> None:
@@ -236,7 +239,8 @@ def _target_words(view: SightlineView) -> str:
     """Heights of the target; a dash if they are not known."""
     if not np.isfinite([view.base, view.top]).all():
         return "–"
-    return f"{view.top:.0f} m" if is_point(view) else f"{view.base:.0f} to {view.top:.0f} m"
+    top = f"{round(view.top, 1):g} m"
+    return top if is_point(view) else f"{round(view.base, 1):g} to {top}"
 
 
 def _look_words(view: SightlineView, air: str) -> str:

@@ -330,7 +330,7 @@ def height_range(view: SightlineView) -> tuple[float, float]:
             wanted.append(float(np.nanmin(height)))
     numbers = np.array(wanted)[np.isfinite(wanted)]
     low, high = float(numbers.min()), float(numbers.max())
-    high = max(high, low + 10.0)
+    high = max(high, low + 1.0)
     return low, high + 2.0 * _MARGIN * (high - low)
 
 
