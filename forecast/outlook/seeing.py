@@ -14,7 +14,7 @@ Fog and low cloud: levels near saturation at the heights that the ray crosses. A
 humidity is good to some 4 % near saturation (WMO-No. 8, from memory), so that saturation is told
 from 99 %, and from 95 % said to be possible (as in cloud detection from soundings: Zhang et al.
 2010, J. Geophys. Res. 115, D00K30, from memory). The air within 2 m of the surface is left out:
-over water the modelled layer is saturated there in any weather. Rain and snow are known only as
+over water the modelled layer nears saturation there in any weather. Rain and snow are known only as
 far as a visibility counts them.
 """
 

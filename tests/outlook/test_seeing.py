@@ -18,7 +18,10 @@ from forecast.outlook.seeing import (
 from forecast.outlook.sightlines import look_along, sightline_geometry
 from forecast.outlook.surface import STATE_NAMES
 from forecast.physics.contrast import CONTRAST_THRESHOLD, HAZE_SCALE_HEIGHT, lamp_range
-from forecast.physics.moisture import specific_humidity_from_relative_humidity
+from forecast.physics.moisture import (
+    relative_humidity,
+    specific_humidity_from_relative_humidity,
+)
 from forecast.physics.surface_join import join_surface_layer, trusted_level
 from forecast.physics.surface_layer import solve_sea
 from forecast.schema import (
@@ -170,6 +173,16 @@ def test_fog_counts_where_the_ray_goes(between, humidity, observer, expected):
     assert seen["weather_on_path"].item() == WEATHER_ON_PATH[expected]
 
 
+def test_ray_sags_into_fog_that_both_ends_stand_above():
+    # Rays between two points 30 m high and 30 km apart sag by some d²/8ka = 15 m (k = 1.2, closed
+    # form) towards the Earth: into fog of 20 m, not into fog of 10 m.
+    line = _line(observer_height=30.0, target_height=30.0, target_base_height=30.0, distance=30e3)
+    fine = np.arange(2.0, 3000.0, 2.0)
+    for top, expected in ((20.0, "saturated_level"), (10.0, "no_saturated_level")):
+        seen = _see(line, _air(0.6, height=fine, above=(0.0, top)))
+        assert seen["weather_on_path"].item() == WEATHER_ON_PATH[expected]
+
+
 def test_fog_under_the_lowest_level_is_not_known():
     seen = _see(_line(), _air(0.6, height=HEIGHT[HEIGHT > 60.0]))
     assert seen["weather_on_path"].item() == WEATHER_ON_PATH["unknown"]
@@ -184,13 +197,16 @@ def test_fog_above_a_profile_s_top_is_not_known():
 
 def test_saturated_skin_of_the_sea_is_no_fog():
     # Air in touch with sea water is nearly saturated in any weather (98 % over salt water,
-    # Kraus & Businger 1994, from memory); at 2 m the air above is back.
-    one = {name: a[None, :] for name, a in _air(0.65, height=HEIGHT[HEIGHT > 5.0]).items()}
+    # Kraus & Businger 1994, from memory); at 2 m the air above is back, damp here but not near it.
+    one = {name: a[None, :] for name, a in _air(0.92, height=HEIGHT[HEIGHT > 5.0]).items()}
     z, p, t, q = (one[name] for name in STATE_NAMES)
     water = t[:, 0] - 0.5
     layer = solve_sea(np.array([6.0]), t[:, 0], q[:, 0], p[:, 0], water, z[:, 0], z[:, 0])
     joined = join_surface_layer(z, p, t, q, trusted_level(z), layer)
-    seen = _see(_line(), {name: getattr(joined, name)[0] for name in STATE_NAMES})
+    state = {name: getattr(joined, name)[0] for name in STATE_NAMES}
+    skin = relative_humidity(*(state[name][:1] for name in reversed(STATE_NAMES[1:])))
+    assert skin[0] > NEAR_SATURATION
+    seen = _see(_line(observer_height=0.0), state)  # the ray starts at the water itself
     assert seen["weather_on_path"].item() == WEATHER_ON_PATH["no_saturated_level"]
     assert seen["path_relative_humidity"].item() < NEAR_SATURATION
 
@@ -237,11 +253,11 @@ def test_sun_near_the_target_is_warned_of():
 
 
 def test_sun_below_the_horizon_is_not_warned_of():
-    alone = _see(_line(), _air(), SUNSET + np.timedelta64(2, "h"))
-    toward = _see(
-        _line(azimuth=float(alone["sun_azimuth"][0])), _air(), SUNSET + np.timedelta64(2, "h")
-    )
-    assert toward["sun_separation"].item() < 20.0
+    dusk = SUNSET + np.timedelta64(1, "h")
+    alone = _see(_line(), _air(), dusk)
+    toward = _see(_line(azimuth=float(alone["sun_azimuth"][0])), _air(), dusk)
+    assert toward["twilight_class"].item() == TWILIGHT_CLASSES["civil_twilight"]
+    assert toward["sun_separation"].item() < SUN_WARNING
     assert "never point" not in seeing_words(toward, 0, 0)
 
 
