@@ -252,6 +252,8 @@ def _sun_words(value: dict[str, float]) -> str:
     if light in ("night", "astronomical twilight") or not np.isfinite(value["azimuth"]):
         return head
     turn = (value["sun_azimuth"] - value["azimuth"] + 180.0) % 360.0 - 180.0
+    if abs(turn) > 150.0:
+        return f"{head}, behind the observer"
     hand = "right" if turn >= 0.0 else "left"
     return f"{head}, {abs(turn):.0f}° {hand} of the target"
 
@@ -278,7 +280,7 @@ def _range_words(value: dict[str, float]) -> str:
         verdict = "near enough" if far <= low else "perhaps near enough"
     words = (
         f"{source}, {what} shows out to some {_about(best)} ({_about(low)} to {_about(high)}), "
-        f"and is {_about(far)} away: {verdict}"
+        f"and is {_about(far, 3)} away: {verdict}"
     )
     if not lamp and far > value["visual_range_limit"]:
         words += f" (even clean air ends sight at {_about(value['visual_range_limit'])})"
@@ -297,15 +299,14 @@ def _weather_words(value: dict[str, float]) -> str:
     else:
         words = "fog and low cloud are not known (no level near the heights of the ray)"
     counted = (VISUAL_RANGE_SOURCES["settings"], VISUAL_RANGE_SOURCES["profile"])
-    if value["visual_range_source"] in counted:
-        return words
-    return f"{words}, rain and snow are not known"
+    known = value["visual_range_source"] in counted
+    return words if known else f"{words}, rain and snow are not known"
 
 
-def _about(length: float) -> str:
-    """A length to two digits: it is not known better."""
+def _about(length: float, digits: int = 2) -> str:
+    """A length, rounded: ranges are not known better than to two digits."""
     if length >= 1e4:
-        return f"{float(f'{1e-3 * length:.2g}'):.0f} km"
+        return f"{float(f'{1e-3 * length:.{digits}g}'):.0f} km"
     return f"{1e-3 * length:.1f} km" if length >= 1e3 else f"{float(f'{length:.2g}'):.0f} m"
 
 

@@ -215,7 +215,7 @@ def test_hidden_target_has_a_sight_too():
     # 300 km away nothing of it shows; the path then follows the Earth.
     seen = _see(_line(distance=300e3), _air())
     assert np.isfinite(seen["visual_range"]).all()
-    assert "too far" in seeing_words(seen, 0, 0)
+    assert "is 300 km away: too far" in seeing_words(seen, 0, 0)
 
 
 def test_night_asks_for_a_lamp():
@@ -250,6 +250,7 @@ def test_sun_near_the_target_is_warned_of():
     assert words.endswith("never point optics near the Sun.")
     assert away["sun_separation"].item() > 170.0
     assert "never point" not in seeing_words(away, 0, 0)
+    assert "behind the observer" in seeing_words(away, 0, 0)
 
 
 def test_sun_below_the_horizon_is_not_warned_of():
