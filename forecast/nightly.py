@@ -14,7 +14,6 @@ from __future__ import annotations
 import json
 import os
 import platform
-import time
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass, field
@@ -24,17 +23,8 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from forecast import __version__
-from forecast.errors import BendcastError, printable
-from forecast.inputs import (
-    InputFile,
-    Stray,
-    find_inputs,
-    fingerprint,
-    join_profiles,
-    reading_groups,
-    share_out,
-    unclaimed,
-)
+from forecast.errors import BendcastError
+from forecast.inputs import find_inputs
 from forecast.products import (
     RECORD,
     Progress,
@@ -44,10 +34,9 @@ from forecast.products import (
     publish,
     staging_folder,
 )
+from forecast.reading import Plan, RunRecord, read_profiles, read_surroundings
 
 if TYPE_CHECKING:
-    import xarray as xr
-
     from forecast.settings import Settings, Site
 
 __all__ = [
@@ -56,7 +45,6 @@ __all__ = [
     "EXIT_OUTPUT_FAILED",
     "EXIT_SOME_SET_ASIDE",
     "OutputError",
-    "Plan",
     "RunResult",
     "plan_run",
     "run_nightly",
@@ -68,9 +56,6 @@ EXIT_ALL_DONE = 0
 EXIT_SOME_SET_ASIDE = 3
 EXIT_NOTHING_USABLE = 4
 EXIT_OUTPUT_FAILED = 6
-
-#: Steps of a run, in order.
-STEPS = ("find inputs", "read profiles", "outlook", "products", "publish, the page last")
 
 _OUTCOMES = {
     EXIT_ALL_DONE: "all done",
@@ -85,17 +70,6 @@ class OutputError(BendcastError, OSError):
     """The products cannot be written."""
 
 
-@dataclass(frozen=True)
-class Plan:
-    """What a run will do."""
-
-    settings: Settings
-    inputs: list[InputFile]
-    warnings: list[str]
-    output: Path
-    steps: tuple[str, ...] = STEPS
-
-
 @dataclass
 class RunResult:
     """What a run did."""
@@ -107,24 +81,6 @@ class RunResult:
     warnings: list[str] = field(default_factory=list)
     windows: list[Any] = field(default_factory=list)
     profiles: int = 0
-
-
-@dataclass
-class _Record:
-    """What run.json tells, gathered along the way."""
-
-    started: str
-    inputs: list[dict[str, Any]] = field(default_factory=list)
-    set_aside: list[dict[str, str]] = field(default_factory=list)
-    warnings: list[str] = field(default_factory=list)
-    seconds: dict[str, float] = field(default_factory=dict)
-
-    @contextmanager
-    def timed(self, step: str) -> Iterator[None]:
-        """Note how long a step takes."""
-        start = time.monotonic()
-        yield
-        self.seconds[step] = time.monotonic() - start
 
 
 def plan_run(settings: Settings, output: Path | None = None) -> Plan:
@@ -196,25 +152,30 @@ def writing(output: Path) -> Iterator[None]:
 
 def _run(plan: Plan, tell: Progress) -> RunResult:
     from forecast.outlook import find_windows, make_outlook
+    from forecast.outlook.speaking import speaking_profiles
+    from forecast.outlook.viewing import window_views
 
-    record = _Record(time_stamp(), warnings=list(plan.warnings))
+    record = RunRecord(time_stamp(), warnings=list(plan.warnings))
     settings = plan.settings
     with record.timed("read profiles"):
-        profiles = _read(plan, record, tell)
+        profiles = read_profiles(plan, record, tell)
+        around = read_surroundings(settings, record)
     result = RunResult(EXIT_NOTHING_USABLE, plan.output)
     result.set_aside, result.warnings = record.set_aside, record.warnings
     if profiles is None:
         _write_record(plan, record, plan.output, result.exit_code, earlier_record(plan.output))
         return result
     with record.timed("outlook"):
-        outlook = make_outlook(profiles, settings, tell)
+        outlook = make_outlook(profiles, settings, tell, around)
         result.windows = find_windows(outlook, settings)
+        told = speaking_profiles(profiles, settings, around)
+        views = window_views(told, outlook, result.windows, settings, around)
     result.profiles = int(profiles.sizes["profile"])
     result.exit_code = EXIT_SOME_SET_ASIDE if record.set_aside else EXIT_ALL_DONE
     with staging_folder(plan.output, alone=True) as staging:
         with record.timed("products"):
             products = make_products(
-                outlook, result.windows, settings, staging, set_aside=record.set_aside,
+                outlook, result.windows, views, settings, staging, set_aside=record.set_aside,
                 warnings=record.warnings, stamp=record.started, tell=tell,
             )  # fmt: skip
         made = {"products": products, "products_made": record.started}
@@ -223,84 +184,8 @@ def _run(plan: Plan, tell: Progress) -> RunResult:
     return result
 
 
-def _read(plan: Plan, record: _Record, tell: Progress) -> xr.Dataset | None:
-    """Profiles of every site, matched to it; None if nothing is usable."""
-    from forecast.ingest import read_files
-
-    readable = _fingerprints(plan, record)
-    groups = reading_groups(
-        [item for item in plan.inputs if item.path in readable], plan.settings.sites
-    )
-    total = sum(len(paths) for _, paths in groups)
-    parts: list[xr.Dataset] = []
-    strays = []
-    done = 0
-    for sites, paths in groups:
-        label = printable(", ".join(site.name for site in sites))
-
-        def step(count: int, _: int, __: str, offset: int = done) -> None:
-            tell(offset + count, total, "read profiles")
-
-        reading = read_files(
-            paths,
-            names=plan.settings.names or None,
-            points=[(site.name, site.latitude, site.longitude) for site in sites],
-            method=sites[0].point_method,
-            progress=step,
-        )
-        done += len(paths)
-        for item in reading.set_aside:
-            record.set_aside.append({"site": label, "file": item.file, "reason": item.reason})
-        noun = "site" if len(sites) == 1 else "sites"
-        record.warnings += [f"{noun} {label}: {printable(note)}" for note in reading.notes]
-        if reading.profiles is not None:
-            served, left = share_out(reading.profiles, sites)
-            parts += served
-            strays += left
-    _settle(plan, record, parts, strays)
-    return join_profiles(parts) if parts else None
-
-
-def _settle(plan: Plan, record: _Record, parts: list[xr.Dataset], strays: list[Stray]) -> None:
-    """Record what was read but serves no site, and sites that nothing serves."""
-    used = {file for part in parts for file in part["source_file"].values.astype(str)}
-    refused, notes = unclaimed(strays, used)
-    for stray in refused:
-        record.set_aside.append(
-            {"site": stray.site, "file": printable(stray.file), "reason": printable(stray.reason)}
-        )
-    record.warnings += notes
-    served = {str(part["site"].values[0]) for part in parts}
-    record.warnings += [
-        f"site {site.name}: no usable profile"
-        for site in plan.settings.sites
-        if site.name not in served
-    ]
-
-
-def _fingerprints(plan: Plan, record: _Record) -> set[Path]:
-    """Note size and sha256 of each input; one that cannot be opened is set aside here."""
-    sites: dict[Path, list[str]] = {}
-    for item in plan.inputs:
-        sites.setdefault(item.path, []).append(item.site)
-    readable = set()
-    for path, names in sites.items():
-        file = printable(os.path.relpath(path, plan.settings.base))
-        try:
-            size, digest = fingerprint(path)
-        except OSError as error:
-            reason = f"cannot be read: {error.strerror}"
-            record.set_aside.append(
-                {"site": ", ".join(names), "file": printable(path.name), "reason": reason}
-            )
-            continue
-        record.inputs.append({"sites": names, "file": file, "bytes": size, "sha256": digest})
-        readable.add(path)
-    return readable
-
-
 def _write_record(
-    plan: Plan, record: _Record, folder: Path, exit_code: int, made: dict[str, Any]
+    plan: Plan, record: RunRecord, folder: Path, exit_code: int, made: dict[str, Any]
 ) -> None:
     settings = plan.settings
     body = {

@@ -15,17 +15,21 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
+
 from forecast import __version__
 from forecast.inputs import fingerprint
 
 if TYPE_CHECKING:
     import xarray as xr
 
+    from forecast.outlook.view import SightlineView
     from forecast.settings import Settings, Site
 
 __all__ = [
     "earlier_record",
     "make_charts",
+    "make_pictures",
     "make_products",
     "product_names",
     "publish",
@@ -98,9 +102,51 @@ def make_charts(
     return charts
 
 
+def make_pictures(
+    outlook: xr.Dataset,
+    views: list[tuple[int, SightlineView]],
+    folder: Path,
+    tell: Progress,
+    stems: set[str],
+) -> list[dict[str, Any]]:
+    """Draw what observers would see, and for each sightline where to stand, as PNG and SVG.
+
+    Returns
+    -------
+    list of dict
+        One per view: ``view``; ``pictures``, one or two as `forecast.output.charts.save_chart`
+        returns them, each with ``phone`` (bytes).
+    """
+    from forecast.output.charts import figure_bytes
+    from forecast.output.files import safe_stem
+    from forecast.output.sight_charts import save_sightline_figure, sightline_phone_figure
+    from forecast.output.stand_chart import save_stand_chart, stand_chart
+
+    made = []
+    stood: set[int] = set()
+    for i, (number, view) in enumerate(views):
+        stem = safe_stem(f"{view.line.name} {np.datetime_as_string(view.time, 'h')}", stems)
+        stems.add(stem)
+        picture = save_sightline_figure(folder / stem, view)
+        picture["phone"] = figure_bytes(sightline_phone_figure(view), "png", picture["alt"])
+        pictures = [picture]
+        if number not in stood:
+            stood.add(number)
+            stem = safe_stem(f"{view.line.name} where to stand", stems)
+            stems.add(stem)
+            stand = save_stand_chart(folder / stem, outlook, number, timezone=view.zone)
+            figure = stand_chart(outlook, number, timezone=view.zone, phone=True)
+            stand["phone"] = figure_bytes(figure, "png", stand["alt"])
+            pictures.append(stand)
+        made.append({"view": view, "pictures": pictures})
+        tell(i + 1, len(views), "pictures")
+    return made
+
+
 def make_products(
     outlook: xr.Dataset,
     windows: list[Any],
+    views: list[tuple[int, SightlineView]],
     settings: Settings,
     folder: Path,
     *,
@@ -117,6 +163,8 @@ def make_products(
         From `forecast.make_outlook`.
     windows : list of forecast.outlook.Window
         From `forecast.outlook.find_windows`.
+    views : list of (int, SightlineView)
+        From `forecast.outlook.viewing.window_views`.
     settings : forecast.settings.Settings
         Title, sites, chart top.
     folder : Path
@@ -154,11 +202,13 @@ def make_products(
             low_stretch=settings.chart_stretch_low,
             windows=windows,
         )
+    stems = {path.stem for path in folder.iterdir()}
     write_page(
         folder / PAGE,
         outlook=outlook,
         windows=windows,
         charts=charts,
+        sights=make_pictures(outlook, views, folder, tell, stems),
         settings_title=settings.title,
         sites=[(site.name, site.timezone) for site in sites],
         set_aside=set_aside,

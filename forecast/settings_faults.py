@@ -8,7 +8,7 @@ import os
 import re
 from collections.abc import Iterator, Mapping
 from pathlib import Path
-from typing import Any
+from typing import Any, TypeGuard
 
 from forecast.errors import InputError, printable
 
@@ -291,7 +291,7 @@ def _position_faults(row: dict[str, Any]) -> Iterator[tuple[str, str]]:
         )
 
 
-def _is_number(value: Any) -> bool:
+def _is_number(value: Any) -> TypeGuard[float]:
     return isinstance(value, int | float) and not isinstance(value, bool)
 
 

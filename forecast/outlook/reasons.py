@@ -5,10 +5,11 @@ from __future__ import annotations
 import numpy as np
 import xarray as xr
 
+from forecast.physics.appearance import class_words
 from forecast.physics.moisture import CELSIUS_OFFSET
-from forecast.schema import DUCT_KINDS, SURFACE_STATES
+from forecast.schema import DUCT_KINDS, SIGHTLINE_STATES, SURFACE_STATES
 
-__all__ = ["duct_reason", "limits", "sightline_reason"]
+__all__ = ["duct_reason", "limits", "sightline_reason", "view_sentence"]
 
 _KIND_WORDS = {code: name.replace("_", " ") for name, code in DUCT_KINDS.items()}
 _LOW_LAYER = 65.0  # m, the lowest layer for which Rec. ITU-R P.453 gives gradient statistics
@@ -45,6 +46,45 @@ def sightline_reason(outlook: xr.Dataset, row: int, item: int) -> str:
     parts.append(_duct_sentence(outlook, row, base_under=reach))
     parts.append(limits(outlook, row))
     return " ".join(part for part in parts if part)
+
+
+def view_sentence(outlook: xr.Dataset, row: int, item: int) -> str:
+    """What shows of a target, where it appears and what it looks like."""
+    state = int(outlook["sightline_state"].values[row, item])
+    base = float(outlook["target_base_height"].values[item])
+    top = float(outlook["target_height"].values[item])
+    if state < 0:
+        return "The air of that time says nothing about the sightline."
+    if state == SIGHTLINE_STATES["shut"]:
+        hidden = float(outlook["hidden_height"].values[row, item])
+        lowest = f"all under {hidden:.0f} m is hidden there" if np.isfinite(hidden) else "no ray"
+        return f"Nothing shows of the target, which reaches {top:.0f} m: {lowest}."
+    extent = float(outlook["visible_extent"].values[row, item])
+    what = (
+        f"{extent:.0f} of {top - base:.0f} m show"
+        if top > base
+        else f"the point at {top:.0f} m shows"
+    )
+    minutes = np.degrees(float(outlook["apparent_elevation"].values[row, item])) * 60.0
+    side = "above" if minutes >= 0.0 else "below"
+    parts = [f"{what}, the highest part {abs(minutes):.1f}′ {side} the horizontal"]
+    lift = np.degrees(float(outlook["lift"].values[row, item])) * 60.0
+    if np.isfinite(lift) and abs(lift) >= 0.05:
+        parts.append(f"{abs(lift):.1f}′ {'higher' if lift > 0 else 'lower'} than in standard air")
+    stretch = float(outlook["magnification"].values[row, item])
+    if np.isfinite(stretch):
+        parts.append(f"{stretch:.2f} times as high as in straight rays")
+    change = 1e6 * float(outlook["arrival_change"].values[row, item])
+    if np.isfinite(change) and abs(change) >= 1.0:
+        parts.append(
+            f"{abs(change):.0f} µrad {'above' if change > 0 else 'below'} the day's median"
+        )
+    words = class_words(int(outlook["appearance"].values[row, item]))
+    told = f" ({', '.join(words)})" if words else ""
+    sentence = f"{', '.join(parts)}{told}."
+    if state == SIGHTLINE_STATES["grazing"]:
+        return f"Barely: {sentence}"
+    return sentence[0].upper() + sentence[1:]
 
 
 def duct_reason(outlook: xr.Dataset, row: int, ceiling: float) -> str:

@@ -4,27 +4,28 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from datetime import datetime
+from functools import partial
 from typing import TYPE_CHECKING, Any
 from zoneinfo import ZoneInfo
 
 import numpy as np
 
+from forecast.outlook.line_air import LineAir, SiteAir, over_water
 from forecast.outlook.surface import STATE_NAMES
 from forecast.physics.appearance import appearance
 from forecast.physics.column_batch import analyse_columns
 from forecast.physics.earth import MEAN_EARTH_RADIUS, euler_radius
-from forecast.physics.rays import Medium, build_medium
+from forecast.physics.rays import build_medium
 from forecast.physics.refractive_index import optical_refractivity
-from forecast.physics.sightline import SightlineTable, standard_medium, trace_sightlines
+from forecast.physics.sightline import SightlineTable, standard_medium
 
 if TYPE_CHECKING:
     from forecast.settings import Sightline
 
 __all__ = [
     "arrival_change",
-    "line_media",
+    "line_airs",
     "look_along",
-    "over_water",
     "sightline_geometry",
     "trace_paths",
     "wave_refractivity",
@@ -56,7 +57,7 @@ def sightline_geometry(
             here = latitude[site == line.site]
             radius = float(euler_radius(np.mean(here) if here.size else 45.0, line.azimuth))
             air = standard_medium(line.wave if label == "standard" else "straight", radius)
-            table = trace_sightlines(air, *over_water(line))
+            table = SiteAir(air).trace(line)
             hidden[i] = table.hidden_height[0, 0]
             elevation[i] = table.apparent_elevation[0, 0]
         geometry[f"hidden_height_{label}"] = ("sightline", hidden)
@@ -64,15 +65,15 @@ def sightline_geometry(
     return geometry
 
 
-def line_media(
+def line_airs(
     lines: list[Sightline], state: dict[str, np.ndarray], latitude: np.ndarray, site: np.ndarray
-) -> Iterator[tuple[int, Sightline, np.ndarray, Medium]]:
+) -> Iterator[tuple[int, Sightline, np.ndarray, LineAir]]:
     """The air of each sightline: columns of its own site, as the light or radio wave meets them.
 
     Yields
     ------
     tuple
-        Number of the sightline, the sightline, its columns, the medium over those columns;
+        Number of the sightline, the sightline, its columns, the air of those columns;
         sightlines without a column are left out.
     """
     refractivity: dict[tuple[str, str, float], np.ndarray] = {}
@@ -84,9 +85,10 @@ def line_media(
         key = (line.site, line.wave, line.wavelength if line.wave == "optical" else 0.0)
         if key not in refractivity:
             refractivity[key] = wave_refractivity(air, line)
-        yield i, line, own, build_medium(
+        medium = build_medium(
             air["height"], refractivity[key], euler_radius(latitude[own], line.azimuth), line.wave
-        )  # fmt: skip
+        )
+        yield i, line, own, SiteAir(medium)
 
 
 def trace_paths(
@@ -94,8 +96,8 @@ def trace_paths(
 ) -> dict[str, Any]:
     """Every sightline through the columns of its own site; columns may be rows or members."""
     found = _Table(site.size, len(lines))
-    for i, line, own, medium in line_media(lines, state, latitude, site):
-        found.put(own, i, trace_sightlines(medium, *over_water(line)))
+    for i, line, own, air in line_airs(lines, state, latitude, site):
+        found.put(own, i, air.trace(line))
     return found.named()
 
 
@@ -115,13 +117,16 @@ def look_along(
     names = ("lift", "magnification", "apparent_height")
     looks = {name: np.full(shape, np.nan) for name in names}
     classes = np.zeros(shape, dtype=np.int16)
-    for i, line, own, medium in line_media(lines, state, latitude, site):
-        observer, top, distance, base = over_water(line)
-        table = trace_sightlines(medium, observer, top, distance, base)
+    for i, line, own, air in line_airs(lines, state, latitude, site):
+        table = air.trace(line)
         found.put(own, i, table)
         if line.wave == "optical":
+            observer, top, distance, base = over_water(line)
             hidden = bool(geometry["hidden_height_standard"][1][i] > top)
-            seen = appearance(medium, observer, base, top, distance, table, hidden)
+            seen = appearance(
+                partial(air.heights, line, distance=distance),
+                air.radius, observer, base, top, distance, table, hidden,
+            )  # fmt: skip
             for name, values in looks.items():
                 values[own, i] = getattr(seen, name)
             classes[own, i] = seen.classes
@@ -129,13 +134,6 @@ def look_along(
     named = found.named(intervals=True)
     named.update({name: (both, values) for name, values in looks.items()})
     return {**named, "appearance": (both, classes)}
-
-
-def over_water(line: Sightline) -> tuple[float, float, float, float]:
-    """Observer height, top of the target, distance and its base, m, heights above the water."""
-    tide = line.sea_level_offset
-    base = max(line.target_base_height - tide, 0.0)
-    return line.observer_height - tide, line.target_height - tide, line.distance, base
 
 
 def arrival_change(

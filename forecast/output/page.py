@@ -43,6 +43,7 @@ def write_page(
     outlook: xr.Dataset,
     windows: list[Window],
     charts: dict[str, dict[str, Any]],
+    sights: list[dict[str, Any]],
     settings_title: str,
     sites: list[tuple[str, str]],
     set_aside: list[dict[str, str]],
@@ -61,6 +62,8 @@ def write_page(
     charts : dict
         By site: ``png`` (bytes), ``alt``, ``file``, as `forecast.output.charts.save_chart` gives,
         and ``phone`` (bytes), as `forecast.output.phone_chart.phone_chart` gives.
+    sights : list of dict
+        ``view`` (SightlineView) and its ``pictures`` in the form of `charts`.
     settings_title : str
         Title of the run.
     sites : list of (str, str)
@@ -89,6 +92,7 @@ def write_page(
             windows=rows,
             threshold=percent(float(meta["threshold"])),
             sites=[_site(outlook, name, charts[name]) for name, _ in sites],
+            sights=[_sight(outlook, sight) for sight in sights],
             resolution=[_resolution(outlook, name) for name, _ in sites],
             error_model=outlook.attrs["error_model"],
             calibration=outlook.attrs["calibration"],
@@ -192,11 +196,22 @@ def _site(outlook: xr.Dataset, name: str, chart: dict[str, Any]) -> dict[str, An
     for s in range(outlook.sizes["sightline"]):
         if str(outlook["sightline_site"].values[s]) == name:
             lines.append(_line(outlook, ahead if ahead.size else rows, now, s))
+    return {
+        "name": printable(name, _NAME),
+        **_picture(chart),
+        "now": f"the {'latest ascent' if ascents.size else 'first valid time'}, "
+        f"{_minute(outlook['time'].values[now])} UTC",
+        "best": "the likeliest time after it" if ahead.size else "the likeliest time of all",
+        "lines": lines,
+    }
+
+
+def _picture(chart: dict[str, Any]) -> dict[str, Any]:
+    """A chart as the page embeds it, in two widths."""
     # Width and height stand in the PNG header, ISO/IEC 15948 section 11.2.2.
     width, height = struct.unpack(">II", chart["png"][16:24])
     phone_width, phone_height = struct.unpack(">II", chart["phone"][16:24])
     return {
-        "name": printable(name, _NAME),
         "png": base64.b64encode(chart["png"]).decode(),
         "phone": base64.b64encode(chart["phone"]).decode(),
         "phone_width": phone_width,
@@ -205,10 +220,23 @@ def _site(outlook: xr.Dataset, name: str, chart: dict[str, Any]) -> dict[str, An
         "file": chart["file"],
         "width": width,
         "height": height,
-        "now": f"the {'latest ascent' if ascents.size else 'first valid time'}, "
-        f"{_minute(outlook['time'].values[now])} UTC",
-        "best": "the likeliest time after it" if ahead.size else "the likeliest time of all",
-        "lines": lines,
+    }
+
+
+def _sight(outlook: xr.Dataset, sight: dict[str, Any]) -> dict[str, Any]:
+    """What an observer would see at a window's best time, and where to stand."""
+    view = sight["view"]
+    zone = ZoneInfo(view.zone)
+    moment = utc(view.time)
+    pictures = [_picture(picture) for picture in sight["pictures"]]
+    for picture, words in zip(pictures, ("seen", "stand"), strict=False):
+        picture["what"] = words
+    return {
+        "name": printable(view.line.name, _NAME),
+        "when": f"{moment:%Y-%m-%d %H:%M} UTC",
+        "local": "" if zone.key == "UTC" else f"{local_time(moment, zone)} {zone.key}",
+        "words": [printable(words, 2000) for words in view.words],
+        "pictures": pictures,
     }
 
 

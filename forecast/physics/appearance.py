@@ -6,17 +6,16 @@ is finer than the eye can tell is all that gets lost.
 
 from __future__ import annotations
 
-from typing import NamedTuple
+from collections.abc import Callable
+from typing import Any, NamedTuple
 
 import numpy as np
 
 from forecast.physics.compiled import njit, prange
-from forecast.physics.rays import Medium
 from forecast.physics.sightline import SightlineTable
 from forecast.physics.transfer_curve import (
     ARC_SECOND,
     straight_elevation,
-    transfer_heights,
     view_elevations,
 )
 from forecast.schema import APPEARANCES
@@ -51,7 +50,8 @@ class Appearance(NamedTuple):
 
 
 def appearance(
-    medium: Medium,
+    transfer: Callable[[np.ndarray], np.ndarray],
+    radius: Any,
     observer_height: float,
     base: float,
     top: float,
@@ -63,8 +63,11 @@ def appearance(
 
     Parameters
     ----------
-    medium : Medium
-        The air, (column,).
+    transfer : callable
+        The transfer curve: from elevations, rad, (column, ray), to heights at the target's
+        distance, m, NaN where the surface is met before.
+    radius : array_like
+        Radius of the Earth along the path, m, (column,).
     observer_height, base, top, distance : float
         Observer, lowest and highest part of the target above the surface, distance, m.
     table : SightlineTable
@@ -89,10 +92,10 @@ def appearance(
     seen = table.apparent_elevation[:, 0]
     horizon = table.horizon_elevation[:, 0]
     visible = np.isfinite(seen) & np.isfinite(horizon)
-    radius = np.where(np.isfinite(medium.radius), medium.radius, 1.0)
+    radius = np.broadcast_to(np.nan_to_num(np.asarray(radius, dtype=float), nan=1.0), seen.shape)
     low = np.minimum(horizon, straight_elevation(observer_height, base, distance, radius))
     angle = view_elevations(np.where(visible, low, 0.0), np.where(visible, seen, 0.0))
-    height = transfer_heights(medium, observer_height, angle, distance)
+    height = transfer(angle)
     # A point has images too: heights near it stand for it.
     slack = max(0.0, 0.5 * (2.0 * _SMALLEST_FOLD - (top - base)))
     columns = seen.size

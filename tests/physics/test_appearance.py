@@ -30,7 +30,11 @@ STANDARD = 288.15 - 0.0065 * FINE
 
 def looks(medium, observer, base, top, distance, hidden=False):
     table = trace_sightlines(medium, observer, top, distance, base)
-    return appearance(medium, observer, base, top, distance, table, hidden), table
+
+    def transfer(angle):
+        return transfer_heights(medium, observer, angle, distance)
+
+    return appearance(transfer, A, observer, base, top, distance, table, hidden), table
 
 
 def words(medium, *geometry, hidden=False):
