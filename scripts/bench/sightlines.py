@@ -78,6 +78,17 @@ def main() -> None:
     observer = np.linspace(2.0, 60.0, lines)
     rate = 20 * lines / median_seconds(lambda: trace_sightlines(week, observer, TARGET, DISTANCE))
 
+    # Twenty sightlines through each of a thousand profiles, with their visible intervals.
+    many = min(1000, members)
+    twenty = np.linspace(2.0, 60.0, 20)
+    away = np.linspace(20e3, 110e3, 20)
+
+    def night() -> np.ndarray:
+        air = build_medium(height[:many], n[:many], radius[:many])
+        return trace_sightlines(air, twenty, TARGET, away).visible_bottom
+
+    intervals = median_seconds(night)
+
     script = median_seconds(lambda: script_sightline(z, n[0]), warm=False, repeats=5)
     state = trace_sightlines(build_medium(height, n, radius), OBSERVER, TARGET, DISTANCE).state
     rows = [
@@ -85,6 +96,8 @@ def main() -> None:
         ("members_seconds", f"{members:,} member profiles x 1 sightline, s", whole, 2.5),
         ("members_build_seconds", "of which preparing the air, s", building, None),
         ("members_per_second", "member sightlines/s, 60 levels", members / whole, None),
+        ("night_seconds", f"{many:,} profiles x 20 sightlines with intervals, s", intervals, 1.5),
+        ("night_vs_script", "the same by script / ours", script * 20 * many / intervals, None),
         ("share_open", "share of members open or grazing", float(np.mean(state > 0)), None),
         ("script_seconds", f"solve_ivp fan of {FAN} rays, s per sightline", script, None),
         ("sightlines_vs_script", "script / ours", script / (whole / members), None),
