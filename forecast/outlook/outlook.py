@@ -9,7 +9,6 @@ coarse profiles.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -21,6 +20,7 @@ from forecast.outlook.sightlines import arrival_change, look_along, sightline_ge
 from forecast.outlook.speaking import speaking_profiles
 from forecast.outlook.statistics import Progress, height_bins, member_statistics
 from forecast.outlook.surface_told import joined_air, surface_variables
+from forecast.outlook.surroundings import NOTHING_AROUND, Surroundings
 from forecast.physics.column_batch import analyse_columns
 from forecast.physics.columns import duct_dataset
 from forecast.physics.curvature import classify_layers, ray_curvature
@@ -28,7 +28,6 @@ from forecast.physics.earth import euler_radius
 from forecast.schema import CAUTION, CEILINGS_M, describe
 
 if TYPE_CHECKING:
-    from forecast.ingest.water_series import WaterSeries
     from forecast.settings import Settings
 
 __all__ = ["make_outlook"]
@@ -40,7 +39,7 @@ def make_outlook(
     profiles: xr.Dataset,
     settings: Settings,
     progress: Progress | None = None,
-    series: Mapping[str, WaterSeries] | None = None,
+    around: Surroundings = NOTHING_AROUND,
 ) -> xr.Dataset:
     """Probabilities of ducts and open sightlines for every site and valid time.
 
@@ -53,8 +52,8 @@ def make_outlook(
         Members, seed, thresholds, sightlines.
     progress : callable, optional
         Called with (done, total, label).
-    series : mapping, optional
-        Site name → water temperatures from `forecast.ingest.water_series.read_water_series`.
+    around : Surroundings
+        Water series and terrain.
 
     Returns
     -------
@@ -70,7 +69,7 @@ def make_outlook(
     if profiles.sizes.get("profile", 0) == 0:
         raise InputError("no profile to work on", source="make_outlook")
     lines = list(settings.sightlines)
-    told = speaking_profiles(profiles, settings, series)
+    told = speaking_profiles(profiles, settings, around)
     radius = euler_radius(told.latitude)
     data = _best_guess(told.guess, radius, settings.chart_top)
     geometry = sightline_geometry(lines, told.latitude, told.site)

@@ -5,7 +5,6 @@ An ascent speaks before a model profile, the shortest lead time before longer on
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -19,10 +18,10 @@ from forecast.outlook.surface import (
     lay_surface,
     surface_inputs,
 )
+from forecast.outlook.surroundings import NOTHING_AROUND, Surroundings
 from forecast.schema import CEILINGS_M, QUALITY_FLAGS
 
 if TYPE_CHECKING:
-    from forecast.ingest.water_series import WaterSeries
     from forecast.settings import Settings
 
 __all__ = ["Row", "Speaking", "speaking_profiles"]
@@ -69,7 +68,7 @@ class Speaking:
 
 
 def speaking_profiles(
-    profiles: xr.Dataset, settings: Settings, series: Mapping[str, WaterSeries] | None = None
+    profiles: xr.Dataset, settings: Settings, around: Surroundings = NOTHING_AROUND
 ) -> Speaking:
     """Choose the profiles that speak and prepare their air.
 
@@ -79,8 +78,8 @@ def speaking_profiles(
         Profiles (profile, level); without the coordinate ``site`` the station is the site.
     settings : forecast.settings.Settings
         Sites, sightlines, heights needed.
-    series : mapping, optional
-        Water series of sites by name.
+    around : Surroundings
+        Water series.
 
     Returns
     -------
@@ -91,7 +90,7 @@ def speaking_profiles(
         profiles = profiles.assign_coords(site=("profile", profiles["station"].values.astype(str)))
     rows = _speaking_rows(profiles)
     state, wind, filled, tops = _usable_levels(profiles, _reach(settings))
-    water = surface_inputs(profiles, wind, state, settings, series)
+    water = surface_inputs(profiles, wind, state, settings, around.water)
     index = [row.index for row in rows]
     chosen = profiles.isel(profile=index)
     guess = {name: a[index] for name, a in state.items()}

@@ -13,6 +13,7 @@ import numpy as np
 import xarray as xr
 
 from forecast.errors import printable
+from forecast.outlook.intervals import probability_interval
 from forecast.outlook.stand import (
     StandShares,
     eye_heights,
@@ -20,7 +21,6 @@ from forecast.outlook.stand import (
     place_grounds,
     stand_heights,
 )
-from forecast.outlook.statistics import probability_interval
 from forecast.schema import SURFACE_STATES
 
 if TYPE_CHECKING:

@@ -7,12 +7,14 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import xarray as xr
-from scipy.special import betaincinv
 
 from forecast.outlook import members as draws
 from forecast.outlook.duct_events import duct_cover, duct_under
+from forecast.outlook.intervals import probability_interval
 from forecast.outlook.sightlines import trace_paths
 from forecast.outlook.speaking import Row, Speaking
+from forecast.outlook.stand import StandShares, join_shares, stand_geometry, stand_shares
+from forecast.outlook.stand_choice import known_from, stand_statistics
 from forecast.outlook.surface import STATE_NAMES, draw_errors, lay_surface
 from forecast.physics.column_batch import analyse_columns
 from forecast.physics.earth import euler_radius
@@ -21,34 +23,12 @@ from forecast.schema import CEILINGS_M, SIGHTLINE_STATES, SURFACE_REASONS, SURFA
 if TYPE_CHECKING:
     from forecast.settings import Settings, Sightline
 
-__all__ = ["Progress", "height_bins", "member_statistics", "probability_interval"]
+__all__ = ["Progress", "height_bins", "member_statistics"]
 
 _CHUNK_VALUES = 3_000_000  # member values worked on at once; bounds memory to some 300 MB
 
 #: Called with (done, total, label).
 Progress = Callable[[int, int, str], None]
-
-
-def probability_interval(hits: Any, trials: Any) -> tuple[np.ndarray, np.ndarray]:
-    """Central 90 % interval of a probability from hits in trials (Jeffreys' prior).
-
-    Parameters
-    ----------
-    hits, trials : array_like
-        Counts; trials may be a fractional effective number.
-
-    Returns
-    -------
-    tuple of ndarray
-        5 % and 95 % quantiles of the Beta(hits + ½, trials − hits + ½) posterior; the lower is 0
-        without a hit and the upper 1 without a miss.
-    """
-    k = np.asarray(hits, dtype=float)
-    n = np.asarray(trials, dtype=float)
-    lower = np.where(k <= 0.0, 0.0, betaincinv(k + 0.5, n - k + 0.5, 0.05))
-    upper = np.where(k >= n, 1.0, betaincinv(k + 0.5, n - k + 0.5, 0.95))
-    missing = np.isnan(k)
-    return np.where(missing, np.nan, lower), np.where(missing, np.nan, upper)
 
 
 def height_bins(chart_top: float) -> np.ndarray:
@@ -80,6 +60,7 @@ def member_statistics(
     count = np.array([len(r.ensemble) or settings.members for r in rows])
     levels = state["height"].shape[1]
     step = max(1, _CHUNK_VALUES // (int(count.max()) * levels))
+    stands: list[StandShares] = []
     done = 0
     while done < n_rows:
         part = rows[done : done + step]
@@ -95,6 +76,8 @@ def member_statistics(
         below = water.take([r.index for r in part]).take(owner)
         laid = lay_surface(batch, below, errors)
         traced = trace_paths(lines, laid.air, row_latitude, row_site)
+        if lines:
+            stands.append(stand_shares(lines, laid.air, row_latitude, row_site, owner, len(part)))
         is_open = traced["sightline_state"][1] == SIGHTLINE_STATES["open"]
         hidden = traced["hidden_height"][1]
         for k in range(len(part)):
@@ -131,6 +114,10 @@ def member_statistics(
         out[f"{name}_probability"] = (("profile", dim), chance)
         out[f"{name}_probability_lower"] = (("profile", dim), np.minimum(lower, chance))
         out[f"{name}_probability_upper"] = (("profile", dim), np.maximum(upper, chance))
+    if lines:
+        judged = known_from(data["surface_layer_state"][1], data["lowest_level"][1])
+        out.update(stand_geometry(lines))
+        out.update(stand_statistics(lines, join_shares(stands), surest["sightline"], judged))
     for label, why in (("unconverged", "not_converged"), ("too_stable", "too_stable")):
         out[f"surface_layer_{label}"] = ("profile", reasons[:, SURFACE_REASONS[why]])
     out["duct_likelihood"] = (("profile", "height_bin"), cover)

@@ -17,7 +17,7 @@ from forecast.physics.curvature import modified_refractivity
 from forecast.physics.ducts import find_ducts
 from forecast.physics.sightline import standard_medium
 from forecast.physics.transfer_curve import ARC_SECOND, straight_elevation, view_elevations
-from forecast.schema import LEVEL_ORIGINS, SIGHTLINE_STATES
+from forecast.schema import SIGHTLINE_STATES
 
 if TYPE_CHECKING:
     from forecast.outlook.windows import Window
@@ -142,7 +142,10 @@ def view_sightline(
         float(outlook[f"sightline_probability{end}"].values[row, number])
         for end in ("", "_lower", "_upper")
     ]
-    level = _lowest_air(column, line, radius, max(_LOW_AIR, observer, min(top, 3.0 * _LOW_AIR)))
+    origin = told.surface.origin[row]
+    level = _lowest_air(
+        column, origin, line, radius, max(_LOW_AIR, observer, min(top, 3.0 * _LOW_AIR))
+    )
     return SightlineView(
         line=line,
         time=outlook["time"].values[row],
@@ -186,7 +189,11 @@ def _outline(line: Sightline, base: float, top: float) -> np.ndarray:
 
 
 def _lowest_air(
-    column: dict[str, np.ndarray], line: Sightline, radius: float, ceiling: float
+    column: dict[str, np.ndarray],
+    origin: np.ndarray,
+    line: Sightline,
+    radius: float,
+    ceiling: float,
 ) -> dict[str, np.ndarray]:
     """The lowest levels, their origin, and the layers that hold rays of the line's wave."""
     refractivity = wave_refractivity(column, line)
@@ -195,14 +202,11 @@ def _lowest_air(
     bounds = np.stack([ducts.base[0], ducts.top[0]], axis=-1)
     height = column["height"][0]
     keep = np.isfinite(height) & np.isfinite(modified[0]) & (height <= ceiling)
-    origin = column.get("origin")
     return {
         "level_height": height[keep],
         "level_temperature": column["air_temperature"][0][keep],
         "level_modified_refractivity": modified[0][keep],
-        "level_origin": np.full(int(keep.sum()), LEVEL_ORIGINS["measured"])
-        if origin is None
-        else origin[0][keep].astype(int),
+        "level_origin": origin[keep].astype(int),
         "ducts": bounds[np.isfinite(bounds[:, 0]) & (bounds[:, 0] <= ceiling)],
     }
 

@@ -11,7 +11,7 @@ from scipy.stats import beta
 import forecast
 from forecast.outlook import make_outlook
 from forecast.outlook.duct_events import duct_cover, duct_under
-from forecast.outlook.statistics import probability_interval
+from forecast.outlook.intervals import probability_interval
 from forecast.physics.ducts import find_ducts
 from forecast.schema import SIGHTLINE_STATES
 from forecast.settings import Site

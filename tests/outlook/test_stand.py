@@ -7,6 +7,7 @@ import pytest
 import xarray as xr
 from scipy.stats import beta
 
+from forecast.outlook.intervals import probability_interval
 from forecast.outlook.stand import (
     StandShares,
     Views,
@@ -24,7 +25,6 @@ from forecast.outlook.stand_choice import (
     stand_statistics,
     stand_words,
 )
-from forecast.outlook.statistics import probability_interval
 from forecast.outlook.surface import STATE_NAMES
 from forecast.physics.earth import euler_radius
 from forecast.physics.rays import build_medium
