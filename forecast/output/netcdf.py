@@ -50,8 +50,8 @@ def write_outlook(outlook: xr.Dataset, path: str | Path, stamp: str) -> None:
     data = data.reset_coords([n for n in data.coords if n not in data.dims])
     for name in data.variables:
         attrs = data[name].attrs
-        if "flag_values" in attrs:  # CF section 3.5: of the variable's own type
-            attrs["flag_values"] = np.array(attrs["flag_values"], dtype=data[name].dtype)
+        for flags in {"flag_values", "flag_masks"} & set(attrs):  # CF section 3.5: of its own type
+            attrs[flags] = np.array(attrs[flags], dtype=data[name].dtype)
         if attrs.get("standard_name") == "height":
             attrs["positive"] = "up"
         if attrs.get("units") == "K":
