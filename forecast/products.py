@@ -117,27 +117,21 @@ def make_pictures(
         One per view: ``view``; ``pictures``, one or two as `forecast.output.charts.save_chart`
         returns them, each with ``phone`` (bytes).
     """
-    from forecast.output.charts import figure_bytes
     from forecast.output.files import safe_stem
-    from forecast.output.sight_charts import save_sightline_figure, sightline_phone_figure
-    from forecast.output.stand_chart import save_stand_chart, stand_chart
+    from forecast.output.sight_charts import save_sightline_figure
+    from forecast.output.stand_chart import save_stand_chart
 
     made = []
     stood: set[int] = set()
     for i, (number, view) in enumerate(views):
         stem = safe_stem(f"{view.line.name} {np.datetime_as_string(view.time, 'h')}", stems)
         stems.add(stem)
-        picture = save_sightline_figure(folder / stem, view)
-        picture["phone"] = figure_bytes(sightline_phone_figure(view), "png", picture["alt"])
-        pictures = [picture]
+        pictures = [save_sightline_figure(folder / stem, view)]
         if number not in stood:
             stood.add(number)
             stem = safe_stem(f"{view.line.name} where to stand", stems)
             stems.add(stem)
-            stand = save_stand_chart(folder / stem, outlook, number, timezone=view.zone)
-            figure = stand_chart(outlook, number, timezone=view.zone, phone=True)
-            stand["phone"] = figure_bytes(figure, "png", stand["alt"])
-            pictures.append(stand)
+            pictures.append(save_stand_chart(folder / stem, outlook, number, timezone=view.zone))
         made.append({"view": view, "pictures": pictures})
         tell(i + 1, len(views), "pictures")
     return made

@@ -164,7 +164,7 @@ def draw_sightlines(
             save_sightline_figure(staging / stem, view)
             stand = safe_stem(f"{line.name} where to stand", stems)
             stems.add(stand)
-            save_stand_chart(staging / stand, outlook, number, view.zone)
+            save_stand_chart(staging / stand, outlook, number, timezone=view.zone)
             words.append(_told(view, stand_words(outlook, number)))
             tell(done, len(numbers), "pictures")
         files = publish(staging, output)

@@ -230,14 +230,15 @@ def window_views(
     Returns
     -------
     list of (int, SightlineView)
-        Number of the sightline and its view; at most twelve.
+        Number of the sightline and its view; at most twelve, of windows that lie ahead if any do.
     """
     names = [line.name for line in settings.sightlines]
+    ahead = [window for window in windows if window.kind == "sightline" and window.ahead]
+    past = [window for window in windows if window.kind == "sightline" and not window.ahead]
     views: list[tuple[int, SightlineView]] = []
-    for window in windows:
-        if window.kind == "sightline" and len(views) < _MOST_VIEWS:
-            number = names.index(window.subject)
-            time = np.datetime64(window.best_time.replace(tzinfo=None), "s")
-            row = nearest_row(outlook, settings.sightlines[number], time)
-            views.append((number, view_sightline(told, outlook, settings, number, row, around)))
+    for window in (ahead or past)[:_MOST_VIEWS]:
+        number = names.index(window.subject)
+        time = np.datetime64(window.best_time.replace(tzinfo=None), "s")
+        row = nearest_row(outlook, settings.sightlines[number], time)
+        views.append((number, view_sightline(told, outlook, settings, number, row, around)))
     return views

@@ -20,7 +20,7 @@ from tests.output.conftest import HOSTILE
 
 
 @pytest.fixture(scope="module")
-def page(case, tmp_path_factory):
+def page(case, sights, tmp_path_factory):
     outlook, windows, chosen = case
     folder = tmp_path_factory.mktemp("page")
     sites = [(HOSTILE, "UTC"), ("cape", "Atlantic/Azores")]
@@ -37,6 +37,7 @@ def page(case, tmp_path_factory):
             outlook=outlook,
             windows=windows,
             charts=charts,
+            sights=sights,
             settings_title=chosen.title,
             sites=sites,
             set_aside=[
@@ -105,7 +106,7 @@ def test_ids_are_unique_and_charts_have_text(page):
     ids = [attrs["id"] for _, attrs in tags if "id" in attrs]
     assert len(ids) == len(set(ids))
     images = [attrs for tag, attrs in tags if tag == "img"]
-    assert len(images) == 2
+    assert len(images) == 4  # two sites, and a view with where to stand
     assert all(len(attrs["alt"]) > 80 for attrs in images)
     for tag, attrs in tags:
         if "aria-labelledby" in attrs:
