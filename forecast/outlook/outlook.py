@@ -16,6 +16,7 @@ import xarray as xr
 
 from forecast.errors import InputError
 from forecast.outlook import members as draws
+from forecast.outlook.seeing import seeing_conditions
 from forecast.outlook.sightlines import arrival_change, look_along, sightline_geometry
 from forecast.outlook.speaking import speaking_profiles
 from forecast.outlook.statistics import Progress, height_bins, member_statistics
@@ -80,6 +81,14 @@ def make_outlook(
         ("profile", "sightline"),
         arrival_change(data["apparent_elevation"][1], told.chosen["time"].values, told.site, zones),
     )
+    data.update(
+        seeing_conditions(
+            lines, told.air, told.chosen["time"].values, told.latitude,
+            told.chosen["longitude"].values.astype(float), told.site,
+            data["apparent_elevation"][1],
+            told.chosen["visibility"].values.astype(float) if "visibility" in told.chosen else None,
+        )
+    )  # fmt: skip
     data.update(_resolution(told.guess))
     data.update(surface_variables(told))
     data.update(joined_air(told, radius))

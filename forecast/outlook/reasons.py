@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import xarray as xr
 
+from forecast.outlook.seeing import seeing_words
 from forecast.physics.appearance import class_words
 from forecast.physics.moisture import CELSIUS_OFFSET
 from forecast.schema import DUCT_KINDS, SIGHTLINE_STATES, SURFACE_STATES
@@ -39,6 +40,7 @@ def sightline_reason(outlook: xr.Dataset, row: int, item: int) -> str:
             images = inverted + int(outlook["upright_images"].values[row, item])
             parts.append(f"It appears in {images} images, {inverted} of them upside down.")
         parts.append(_warming(outlook, row))
+        parts.append(seeing_words(outlook, row, item))
     parts.append(_water(outlook, row))
     parts.append(_lowest_layer(outlook, row))
     # Only a duct that the path can enter explains anything.

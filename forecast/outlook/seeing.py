@@ -24,11 +24,11 @@ from typing import TYPE_CHECKING, Any, NamedTuple
 
 import numpy as np
 
-from forecast.outlook.sightlines import line_media, over_water
+from forecast.outlook.line_air import LineAir, over_water
+from forecast.outlook.sightlines import line_airs
 from forecast.outlook.surface import STATE_NAMES
 from forecast.physics import contrast
 from forecast.physics.moisture import relative_humidity
-from forecast.physics.rays import Medium, trace_rays
 from forecast.physics.sun import (
     CIVIL_TWILIGHT,
     SUNRISE,
@@ -159,13 +159,13 @@ def seeing_conditions(
     codes = {name: np.full(shape, -1, dtype=np.int8) for name in _CODES}
     reported = _reported(visibility, site.size)
     airs: dict[str, _Air] = {}
-    for i, line, own, medium in line_media(lines, state, latitude, site):
+    for i, line, own, paths in line_airs(lines, state, latitude, site):
         if line.wave != "optical":
             continue
         if line.site not in airs:
             airs[line.site] = _air({name: a[own] for name, a in state.items()})
         air = airs[line.site]
-        along, height = _path(medium, line, apparent_elevation[own, i])
+        along, height = _path(paths, line, apparent_elevation[own, i])
         humidity, weather = _weather(air, height)
         out["path_relative_humidity"][own, i] = humidity
         codes["weather_on_path"][own, i] = weather
@@ -328,11 +328,11 @@ def _air(state: dict[str, np.ndarray]) -> _Air:
     return _Air(z, np.clip(relative_humidity(q, t, p), 0.0, 1.0), p, t)
 
 
-def _path(medium: Medium, line: Sightline, elevation: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def _path(paths: LineAir, line: Sightline, elevation: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Distances (step,) and heights (column, step) of the rays outside the skin, m."""
     observer, top, distance, _ = over_water(line)
     along = np.linspace(0.0, distance, _STEPS)
-    traced = trace_rays(medium, observer, elevation[:, None], along[None, :], reflect=False).height
+    traced = paths.heights(line, elevation[:, None], along)[:, 0]
     level = observer + (top - observer) * along / distance
     height = np.where(np.isfinite(traced), traced, level)
     return along, np.maximum(height, _SKIN)

@@ -28,6 +28,7 @@ __all__ = ["likeliest_row", "nearest_row", "view_sightline", "window_views"]
 _LOW_AIR = 300.0  # m, how much of the air is shown beside the picture
 _FAN_RAYS, _FAN_STEPS = 61, 240
 _MARGIN = 180.0 * ARC_SECOND
+_TARGET_RAYS = 5
 _MOST_VIEWS = 12
 _POLE_WIDTH = 0.05  # of a target's height, where its outline is not given
 _STATES = {code: name for name, code in SIGHTLINE_STATES.items()} | {-1: "unknown"}
@@ -134,7 +135,15 @@ def view_sightline(
     low = np.nanmin([*horizon.values(), ends[0]])
     high = np.nanmax([*horizon.values(), ends[1], *seen])
     elevation = view_elevations(low - _MARGIN, high + _MARGIN)[0]
-    fan = np.linspace(low - _MARGIN, high + _MARGIN, _FAN_RAYS)
+    curve = air.heights(line, elevation[None, :], distance)[0]
+    fan = np.unique(
+        np.concatenate(
+            [
+                np.linspace(low - _MARGIN, high + _MARGIN, _FAN_RAYS),
+                _leading_to(np.linspace(base, top, _TARGET_RAYS), elevation, curve),
+            ]
+        )
+    )
     steps = np.linspace(0.0, distance, _FAN_STEPS)
     table = tables["air"]
     visible = np.stack([table.visible_bottom[0, 0], table.visible_top[0, 0]], axis=-1)
@@ -186,6 +195,15 @@ def _outline(line: Sightline, base: float, top: float) -> np.ndarray:
         return outline
     half = 0.5 * max(_POLE_WIDTH * (top - base), 0.0)
     return np.array([[-half, top], [half, top]])
+
+
+def _leading_to(wanted: np.ndarray, elevation: np.ndarray, curve: np.ndarray) -> np.ndarray:
+    """Directions that lead to given heights, between samples of the transfer curve."""
+    above = curve[None, :] >= wanted[:, None]
+    crossing = (above[:, 1:] != above[:, :-1]) & np.isfinite(curve[1:] + curve[:-1])
+    which, at = np.nonzero(crossing)
+    share = (wanted[which] - curve[at]) / (curve[at + 1] - curve[at])
+    return elevation[at] + share * (elevation[at + 1] - elevation[at])
 
 
 def _lowest_air(

@@ -6,6 +6,7 @@ import hashlib
 import json
 import os
 import re
+import re
 import signal
 import subprocess
 import sys
@@ -23,6 +24,8 @@ from tests.end_to_end.build import SETTINGS, lay_out, write_ascent
 PRODUCTS = {
     "cape.png", "cape.svg", "index.html", "outlook.nc", "run.json", "windows.csv", "windows.json",
 }  # fmt: skip
+#: Of each sightline's windows, and of each sightline that has one.
+PICTURES = re.compile(r"(lamp|relay)-(2024-06-0\dt\d\d|where-to-stand)\.(png|svg)")
 
 
 @pytest.fixture(scope="module")
@@ -48,7 +51,11 @@ def products(folder):
 def test_everything_is_there_and_said(done):
     folder, _, result = done
     assert result.returncode == 0, result.stderr
-    assert products(folder / "out") == PRODUCTS
+    made = products(folder / "out")
+    pictures = made - PRODUCTS
+    assert made >= PRODUCTS
+    assert all(PICTURES.fullmatch(name) for name in pictures)
+    assert {"lamp-where-to-stand.png", "relay-where-to-stand.svg"} <= pictures
     assert "page:" in result.stdout
     # No terminal: plain lines, no bar and no colour codes.
     assert "read profiles: 6 of 6" in result.stderr
@@ -63,7 +70,7 @@ def test_the_record_is_true(done):
         content = (folder / item["file"]).read_bytes()
         assert item["bytes"] == len(content)
         assert item["sha256"] == hashlib.sha256(content).hexdigest()
-    assert set(record["products"]) == PRODUCTS - {"run.json"}
+    assert set(record["products"]) == products(folder / "out") - {"run.json"}
     for name, item in record["products"].items():
         content = (folder / "out" / name).read_bytes()
         assert item["sha256"] == hashlib.sha256(content).hexdigest()

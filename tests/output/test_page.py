@@ -136,7 +136,7 @@ def test_a_page_without_windows_says_so(page):
 def test_a_narrow_screen_gets_its_own_chart(page, case):
     outlook, windows, _ = case
     sources = [attrs for tag, attrs in Tags(page()).tags if tag == "source"]
-    assert len(sources) == 2
+    assert len(sources) == 4
     assert all(int(a["height"]) > int(a["width"]) for a in sources)
     png = phone_chart(outlook, "cape", timezone="Atlantic/Azores", windows=windows)
     assert any(base64.b64encode(png).decode() in a["srcset"] for a in sources)
