@@ -10,6 +10,7 @@ import pytest
 from forecast.ingest.water_series import WaterSeries
 from forecast.outlook import make_outlook
 from forecast.outlook import surface as surface_module
+from forecast.outlook.surroundings import Surroundings
 from forecast.physics.moisture import specific_humidity_from_relative_humidity
 from forecast.physics.surface_layer import solve_sea
 from forecast.schema import (
@@ -43,7 +44,8 @@ def told(site=None, wind=4.0, series=None, members=32, rows=1, **values):
     site = replace(Site("cape", 51.0, -20.0, surface="sea"), **(site or {}))
     low = line(wave="optical", observer_height=3.0, target_height=30.0, distance=30e3)
     chosen = settings(sites=(site,), sightlines=(low,), members=members)
-    return make_outlook(data, chosen, series={"cape": series} if series is not None else None)
+    around = Surroundings(water={} if series is None else {"cape": series})
+    return make_outlook(data, chosen, around=around)
 
 
 def value(outlook, name):
