@@ -6,7 +6,6 @@ import hashlib
 import json
 import os
 import re
-import re
 import signal
 import subprocess
 import sys
