@@ -8,7 +8,7 @@ from datetime import UTC, datetime
 import numpy as np
 import xarray as xr
 
-from forecast.physics.sun import CIVIL_TWILIGHT, sun_altitude
+from forecast.physics.sun import CIVIL_TWILIGHT, SUNRISE, sun_altitude
 
 __all__ = ["Strip", "TimeHeight", "best_profile", "column_edges", "time_height", "utc"]
 
@@ -200,8 +200,7 @@ def _daylight(
     if placed.size == 0:
         return time, np.full(steps, -1)
     altitude = sun_altitude(time, float(latitude[placed[0]]), float(longitude[placed[0]]))
-    # The Sun's upper limb is seen on the horizon at -0.833°: 34' refraction, 16' radius.
-    return time, (altitude > CIVIL_TWILIGHT).astype(int) + (altitude > -0.833)
+    return time, (altitude > CIVIL_TWILIGHT).astype(int) + (altitude > SUNRISE)
 
 
 def _rows_gradient(outlook: xr.Dataset, rows: np.ndarray, edges: np.ndarray) -> np.ndarray:
