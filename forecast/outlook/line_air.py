@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Protocol
 import numpy as np
 
 from forecast.physics.rays import Medium
-from forecast.physics.sightline import SightlineTable, trace_sightlines
+from forecast.physics.sightline import LARGEST_SQUEEZE, SightlineTable, trace_sightlines
 from forecast.physics.transfer_curve import transfer_heights
 
 if TYPE_CHECKING:
@@ -44,7 +44,7 @@ class SiteAir:
 
     def trace(self, line: Sightline) -> SightlineTable:
         """State and visible heights, (column, 1)."""
-        return trace_sightlines(self.medium, *over_water(line))
+        return trace_sightlines(self.medium, *over_water(line), largest_squeeze=LARGEST_SQUEEZE)
 
     def heights(
         self, line: Sightline, elevation: np.ndarray, distance: float | np.ndarray

@@ -20,7 +20,7 @@ from forecast.physics.column_batch import analyse_columns
 from forecast.physics.earth import MEAN_EARTH_RADIUS, euler_radius
 from forecast.physics.rays import Medium, build_medium
 from forecast.physics.refractive_index import optical_refractivity
-from forecast.physics.sightline import trace_sightlines
+from forecast.physics.sightline import LARGEST_SQUEEZE, trace_sightlines
 from forecast.schema import SIGHTLINE_STATES
 
 if TYPE_CHECKING:
@@ -275,7 +275,10 @@ def _view(medium: Medium, line: Sightline, eye: np.ndarray, distance: np.ndarray
     step = max(1, _BLOCK // eye.size)
     for first in range(0, columns, step):
         part = slice(first, first + step)
-        table = trace_sightlines(Medium(*(a[part] for a in medium)), eye, top, distance, base)
+        table = trace_sightlines(
+            Medium(*(a[part] for a in medium)), eye, top, distance, base,
+            largest_squeeze=LARGEST_SQUEEZE,
+        )  # fmt: skip
         told = table.state >= 0
         views.is_open[part] = np.where(told, table.state == SIGHTLINE_STATES["open"], np.nan)
         views.extent[part] = np.where(told, table.visible_extent, np.nan)

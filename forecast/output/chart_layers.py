@@ -16,6 +16,7 @@ from matplotlib.collections import PolyCollection, QuadMesh
 from matplotlib.colors import ListedColormap, Normalize
 from matplotlib.figure import Figure
 from matplotlib.patheffects import withStroke
+from PIL import Image
 
 from forecast.output.chart_data import Strip, TimeHeight, best_profile, utc
 from forecast.output.colours import (
@@ -63,8 +64,13 @@ CHART_STYLE: Any = {
 }
 
 
-def figure_bytes(figure: Figure, ending: str, alternative: str = "") -> bytes:
-    """The figure as ``png`` or ``svg``, this with a text alternative: same figure, same bytes."""
+def figure_bytes(
+    figure: Figure, ending: str, alternative: str = "", colours: int | None = None
+) -> bytes:
+    """The figure as ``png`` or ``svg``, this with a text alternative: same figure, same bytes.
+
+    A PNG of few `colours` (at most 256) is a quarter of the size: what line drawings need.
+    """
     # Neither a date nor a version: they would change the bytes.
     meta: dict[str, Any] = {"Software": None}
     if ending == "svg":
@@ -76,7 +82,14 @@ def figure_bytes(figure: Figure, ending: str, alternative: str = "") -> bytes:
         # Names may hold letters that the font lacks: they are drawn as boxes, no news for a log.
         warnings.filterwarnings("ignore", message="Glyph .* missing from")
         figure.savefig(buffer, format=ending, metadata=meta)
-    return buffer.getvalue()
+    if ending != "png" or colours is None:
+        return buffer.getvalue()
+    reduced = io.BytesIO()
+    with Image.open(buffer) as image:
+        image.convert("RGB").quantize(colours, dither=Image.Dither.NONE).save(
+            reduced, "PNG", optimize=True
+        )
+    return reduced.getvalue()
 
 
 def chosen_strips(strips: list[Strip]) -> tuple[list[Strip], int]:

@@ -144,7 +144,7 @@ def draw_time_height(
     return figure
 
 
-def save_chart(figure: Figure, stem: str | Path) -> dict[str, Any]:
+def save_chart(figure: Figure, stem: str | Path, colours: int | None = None) -> dict[str, Any]:
     """Write a chart as PNG and SVG, the same bytes for the same chart.
 
     Parameters
@@ -153,6 +153,8 @@ def save_chart(figure: Figure, stem: str | Path) -> dict[str, Any]:
         From `draw_time_height`.
     stem : str or Path
         Path without ending.
+    colours : int, optional
+        As for `forecast.output.chart_layers.figure_bytes`.
 
     Returns
     -------
@@ -164,7 +166,7 @@ def save_chart(figure: Figure, stem: str | Path) -> dict[str, Any]:
         "file": f"{Path(stem).name}.svg",
     }
     for ending in ("png", "svg"):
-        out[ending] = figure_bytes(figure, ending, out["alt"])
+        out[ending] = figure_bytes(figure, ending, out["alt"], colours)
         write_bytes_atomic(Path(f"{stem}.{ending}"), out[ending])
     figure.clear()
     return out

@@ -35,6 +35,7 @@ if TYPE_CHECKING:
 
 __all__ = ["save_sightline_figure", "sight_alt_text", "sightline_figure", "sightline_phone_figure"]
 
+_COLOURS = 96  # of the PNG: few are drawn, the rest are softened edges
 _WIDE, _PHONE = 11.0, 4.3  # inches, as the time–height charts
 _PANEL, _SMALL = 2.1, 0.82  # inches of a panel and size of its letters, on a phone
 
@@ -120,9 +121,9 @@ def save_sightline_figure(stem: str | Path, view: SightlineView) -> dict[str, An
     out: dict[str, Any] = {"alt": alt, "file": f"{Path(stem).name}.svg"}
     figure = sightline_figure(view)
     for ending in ("png", "svg"):
-        out[ending] = figure_bytes(figure, ending, alt)
+        out[ending] = figure_bytes(figure, ending, alt, _COLOURS)
         write_bytes_atomic(Path(f"{stem}.{ending}"), out[ending])
-    out["phone"] = figure_bytes(sightline_phone_figure(view), "png")
+    out["phone"] = figure_bytes(sightline_phone_figure(view), "png", colours=_COLOURS)
     return out
 
 

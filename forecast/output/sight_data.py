@@ -9,6 +9,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from forecast.physics.sightline import LARGEST_SQUEEZE
+
 if TYPE_CHECKING:
     from forecast.outlook.view import SightlineView
 
@@ -45,7 +47,6 @@ AIR_NAMES = {"air": "this air", "standard": "standard air", "straight": "straigh
 #: Fates of the rays of the fan: met water or ground, passed the target, reached it.
 ENDS, PASSES, REACHES = 0, 1, 2
 
-_STEEPEST = 30.0  # heights that run this many times as fast as in straight rays are a jump
 _LEAST_SPAN = 4.0 * ARC_MINUTE  # of the pictures' angles
 _MARGIN = 0.1  # of a range, left free on either side
 _LOWEST_AIR, _LOWEST_AIR_MOST = 60.0, 300.0  # m; how high the picture of the lowest air reaches
@@ -150,7 +151,7 @@ def target_rays(view: SightlineView) -> np.ndarray:
     rays = np.asarray(view.fan_height, dtype=float)
     found = []
     step = np.abs(np.diff(end))
-    smooth = step <= _STEEPEST * view.line.distance * np.diff(angle)
+    smooth = step <= LARGEST_SQUEEZE * view.line.distance * np.diff(angle)
     for height in visible_parts(view)[:, 1]:
         between = smooth & ((end[:-1] - height) * (end[1:] - height) <= 0.0) & (step > 0.0)
         for i in np.flatnonzero(between):
@@ -182,7 +183,7 @@ def broken_curve(view: SightlineView, air: str) -> tuple[np.ndarray, np.ndarray]
     height = np.asarray(view.heights.get(air, ()), dtype=float)
     if height.size != angle.size or angle.size == 0:
         return np.zeros(0), np.zeros(0)
-    jumps = np.abs(np.diff(height)) > _STEEPEST * view.line.distance * np.diff(angle)
+    jumps = np.abs(np.diff(height)) > LARGEST_SQUEEZE * view.line.distance * np.diff(angle)
     at = np.flatnonzero(jumps) + 1
     middle = 0.5 * (angle[at - 1] + angle[at])
     return np.insert(angle, at, middle), np.insert(height, at, np.nan)

@@ -50,6 +50,7 @@ _ODDS_COLOURS = (
     "#f5f5f5", "#efdfd9", "#e9c9be", "#e2b4a3", "#da9e88", "#d1886d", "#c87252", "#be5b34",
     LIKELIHOOD,
 )  # fmt: skip
+_COLOURS = 128  # of the PNG: one ramp and lines
 _PLACES_RIGHT = 6.2  # inches; words follow
 _LINE = 0.0185  # inches from line to line, per point of size
 _HEADROOM = 0.065  # share of the rows' height
@@ -175,9 +176,12 @@ def save_stand_chart(
         As `forecast.output.charts.save_chart` gives, and ``phone``: PNG for a narrow screen.
     """
     narrow = stand_chart(outlook, sightline, timezone=timezone, phone=True)
-    phone = figure_bytes(narrow, "png")
+    phone = figure_bytes(narrow, "png", colours=_COLOURS)
     narrow.clear()
-    return {**save_chart(stand_chart(outlook, sightline, timezone=timezone), stem), "phone": phone}
+    return {
+        **save_chart(stand_chart(outlook, sightline, timezone=timezone), stem, _COLOURS),
+        "phone": phone,
+    }
 
 
 def _centre(odds: StandOdds, height: float) -> float:

@@ -12,7 +12,7 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from forecast.physics.compiled import njit, prange
-from forecast.physics.sightline import SightlineTable
+from forecast.physics.sightline import LARGEST_SQUEEZE, SightlineTable
 from forecast.physics.transfer_curve import (
     ARC_SECOND,
     straight_elevation,
@@ -24,7 +24,6 @@ __all__ = ["Appearance", "appearance", "class_words"]
 
 _SMALLEST_IMAGE = 5.0 * ARC_SECOND  # thinner folds are not told; ours, the eye resolves some 60″
 _SMALLEST_FOLD, _FOLD_SHARE = 1.0, 0.02  # m, and share of the target: folds under both are not told
-_JUMP = 30.0  # heights that run this many times as fast as in straight rays are a jump
 _SMALLEST_LIFT = 30.0 * ARC_SECOND  # half of what the eye resolves; ours
 _SMALLEST_STRETCH = 0.1  # share by which a target must be stretched or squeezed; ours
 #: Ray curvature by Earth's curvature in standard air, to which "raised" refers: 6.5 K/km.
@@ -102,7 +101,7 @@ def appearance(
     images = np.full((columns, 2, 6), np.nan)
     fold = max(_SMALLEST_FOLD, _FOLD_SHARE * (top - base))
     _find_images(
-        angle, height, base - slack, top + slack, fold, _JUMP * distance, images
+        angle, height, base - slack, top + slack, fold, LARGEST_SQUEEZE * distance, images
     )  # fmt: skip
     upright, inverted = images[:, 0], images[:, 1]
 

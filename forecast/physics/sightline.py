@@ -13,22 +13,30 @@ import numpy as np
 from forecast.physics.compiled import njit, prange
 from forecast.physics.curvature import STANDARD_GRADIENT
 from forecast.physics.earth import MEAN_EARTH_RADIUS
+from forecast.physics.lit_intervals import count_images, horizon_energy, merge_intervals
 from forecast.physics.rays import Medium, build_medium, locate
 from forecast.physics.visible_heights import (
     MAX_LIT,
     MAX_SAMPLES,
-    count_images,
     elevation_of,
-    horizon_energy,
-    merge_intervals,
     survey_heights,
 )
 from forecast.schema import SIGHTLINE_STATES
 
-__all__ = ["GRAZING_MARGIN", "SightlineTable", "standard_medium", "trace_sightlines"]
+__all__ = [
+    "GRAZING_MARGIN",
+    "LARGEST_SQUEEZE",
+    "SightlineTable",
+    "standard_medium",
+    "trace_sightlines",
+]
 
 #: A target of which less than this (m) shows is grazing, not open; ours, no source.
 GRAZING_MARGIN = 1.0
+
+#: Heights that are squeezed together more than this against straight rays cannot be told apart and
+#: count as a jump: 1 m at 40 km under a fifth of a second of arc. Ours, no source.
+LARGEST_SQUEEZE = 30.0
 
 _INTERVALS = 12  # visible intervals kept per sightline, the lowest ones
 
@@ -68,6 +76,7 @@ def trace_sightlines(
     distance: Any,
     target_base_height: Any = 0.0,
     grazing_margin: float = GRAZING_MARGIN,
+    largest_squeeze: float = np.inf,
 ) -> SightlineTable:
     """State, hidden height and apparent elevation of sightlines through a batch of columns.
 
@@ -82,6 +91,10 @@ def trace_sightlines(
     grazing_margin : float
         Visible height (m) from which a target counts as open; for a point, its height above the
         lower end of the visible interval it lies in.
+    largest_squeeze : float
+        Heights that pass more than this many times as fast with elevation as in straight rays do
+        not count as visible (`LARGEST_SQUEEZE` for eyes and cameras); by default every height
+        does that any ray reaches, however thin the pencil.
 
     Returns
     -------
@@ -110,12 +123,17 @@ def trace_sightlines(
         raise ValueError("trace_sightlines: target_base_height must not exceed target_height")
     if not np.all((far > 0.0) & (far < 2e6)):
         raise ValueError("trace_sightlines: distance must be above 0 and below 2,000 km")
+    if not largest_squeeze >= 1.0:
+        raise ValueError("trace_sightlines: largest_squeeze must be 1 or more")
     columns = medium.z.shape[0]
     state = np.full((columns, *shape), -1, dtype=np.int8)
     floats = np.full((4, columns, *shape), np.nan)
     images = np.zeros((2, columns, *shape), dtype=np.int16)
     visible = np.full((2, columns, *shape, _INTERVALS), np.nan)
-    _trace_all(*medium, observer, base, top, far, grazing_margin, state, floats, images, visible)
+    _trace_all(
+        *medium, observer, base, top, far, grazing_margin, largest_squeeze, state, floats, images,
+        visible,
+    )  # fmt: skip
     width = max(1, int(np.isfinite(visible[0]).sum(axis=-1).max(initial=1)))
     return SightlineTable(
         state,
@@ -175,7 +193,20 @@ def standard_medium(wave: str = "radio", earth_radius: float = MEAN_EARTH_RADIUS
 
 @njit(cache=True, nogil=True, parallel=True, error_model="numpy")
 def _trace_all(
-    z, mu, count, radius, observer, base, top, distance, margin, state, floats, images, visible
+    z,
+    mu,
+    count,
+    radius,
+    observer,
+    base,
+    top,
+    distance,
+    margin,
+    squeeze,
+    state,
+    floats,
+    images,
+    visible,
 ):  # pragma: no cover
     columns = z.shape[0]
     lines = observer.size
@@ -198,7 +229,7 @@ def _trace_all(
             lits, samples = survey_heights(
                 z[c], mu[c], count[c], layer, start, mu_start, start == z[c, layer],
                 z_base, z_top, distance[s], critical, jump, edges, edge_jump, sample, branch_of,
-                lit,
+                lit, squeeze * distance[s],
             )  # fmt: skip
             lits = merge_intervals(lit, lits)
             extent = 0.0

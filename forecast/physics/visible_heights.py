@@ -22,10 +22,7 @@ from forecast.physics.rays import advance
 __all__ = [
     "MAX_LIT",
     "MAX_SAMPLES",
-    "count_images",
     "elevation_of",
-    "horizon_energy",
-    "merge_intervals",
     "survey_heights",
 ]
 
@@ -36,7 +33,6 @@ _OFFSET = 1e-10  # distance of the end samples from a critical energy, relative 
 _SHAPE_ABSOLUTE, _SHAPE_RELATIVE = 2.0, 0.02  # m and share: misfit that calls for finer sampling
 _FINE_STEPS = 10
 _LEVEL = 1e-24  # energy of a level launch, 1e-12 rad
-_SEAM = 1e-5  # m; visible intervals that come this near each other are one
 _HEIGHT_TOLERANCE = 1e-4  # m, for extremes and for the target's elevation
 
 
@@ -144,6 +140,21 @@ def _extremum(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
+def _reach(
+    lit, lits, low, high, fa, fb, energy_a, energy_b, mu_start, steepest
+):  # pragma: no cover
+    """Extend the lit heights low…high from a sample to the next, or begin anew past a step."""
+    between = abs(energy_b - energy_a) / (1.0 + mu_start)
+    angle = between / (np.sqrt(energy_a / (1.0 + mu_start)) + np.sqrt(energy_b / (1.0 + mu_start)))
+    if not abs(fb - fa) > steepest * angle:  # so that no angle is no step
+        return min(low, fb), max(high, fb), lits
+    if high > max(low, 0.0) and lits < MAX_LIT:
+        lit[0, lits], lit[1, lits] = max(low, 0.0), high
+        lits += 1
+    return fb, fb, lits
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
 def survey_heights(
     z,
     mu,
@@ -162,11 +173,13 @@ def survey_heights(
     sample,
     branch_of,
     lit,
+    steepest,
 ):  # pragma: no cover
     """Sample every branch; fill `lit` with the visible intervals and `sample` with the rays.
 
     `sample` rows: signed energy (negative: launched downwards), height; `branch_of`: branch
-    number. Returns the number of intervals and of samples.
+    number. Between samples further apart than `steepest` (m per rad) nothing counts as lit.
+    Returns the number of intervals and of samples.
     """
     below, above = _critical_energies(mu, count, layer, on_node, mu_start, critical, jump)
     largest_below = critical[0, below - 1] if below > 0 else 0.0
@@ -221,8 +234,10 @@ def survey_heights(
                 if abs(middle - cubic) > _SHAPE_ABSOLUTE + _SHAPE_RELATIVE * abs(fa - fl):
                     steps = _FINE_STEPS
                 steps += min(2 * abs(turns_l - turns_a), 30)
-                low_lit = min(low_lit, fa, fl)
-                high_lit = max(high_lit, fa, fl)
+                # The kink between two cuts is no step: on its two sides the ray is the same.
+                low_lit = min(low_lit, fa)
+                high_lit = max(high_lit, fa)
+                energy_a = energy
                 if samples < MAX_SAMPLES - 3:
                     sample[0, samples], sample[1, samples] = sign * energy, fa
                     branch_of[samples] = branch
@@ -251,20 +266,26 @@ def survey_heights(
                                 z, mu, count, layer, start, mu_start, upward, distance,
                                 low, span, ta, ga, tb, gb,
                             )  # fmt: skip
-                            low_lit = min(low_lit, extreme)
-                            high_lit = max(high_lit, extreme)
+                            low_lit, high_lit, lits = _reach(
+                                lit, lits, low_lit, high_lit, fa, extreme, energy_a, at, mu_start,
+                                steepest,
+                            )  # fmt: skip
+                            energy_a, fa = at, extreme
                             if samples < MAX_SAMPLES - 3:
                                 sample[0, samples], sample[1, samples] = sign * at, extreme
                                 branch_of[samples] = branch
                                 samples += 1
-                    low_lit = min(low_lit, fb)
-                    high_lit = max(high_lit, fb)
+                    low_lit, high_lit, lits = _reach(
+                        lit, lits, low_lit, high_lit, fa, fb, energy_a, energy, mu_start, steepest
+                    )
+                    energy_a = energy
                     if samples < MAX_SAMPLES - 3:
                         sample[0, samples], sample[1, samples] = sign * energy, fb
                         branch_of[samples] = branch
                         samples += 1
                     ta, fa, ga = tb, fb, gb
-                if edge_jump[k + 1] and high_lit > 0.0 and lits < MAX_LIT:
+                some = high_lit > max(low_lit, 0.0) or not steepest < np.inf
+                if edge_jump[k + 1] and high_lit > 0.0 and some and lits < MAX_LIT:
                     lit[0, lits], lit[1, lits] = max(low_lit, 0.0), high_lit
                     lits += 1
                     lowest = min(lowest, max(low_lit, 0.0))
@@ -272,7 +293,16 @@ def survey_heights(
         energy = limit * (1.0 + _OFFSET) if limit > 0.0 else _LEVEL
         height, _, _ = _pass_height(z, mu, count, layer, start, mu_start, energy, upward, distance)
         branch += 1
-        if height > 0.0 and lits < MAX_LIT:
+        wide = True
+        if not upward and height > 0.0 and steepest < np.inf:
+            # Down to the water within so small an angle is a step too.
+            angle = np.sqrt(energy / (1.0 + mu_start)) + height / steepest
+            end, _, _ = _pass_height(
+                z, mu, count, layer, start, mu_start, (1.0 + mu_start) * angle * angle, False,
+                distance,
+            )  # fmt: skip
+            wide = end > 0.0
+        if height > 0.0 and wide and lits < MAX_LIT:
             lit[0, lits] = height if upward else 0.0
             lit[1, lits] = np.inf if upward else height
             lits += 1
@@ -293,26 +323,6 @@ def survey_heights(
                 branch_of[samples] = branch
                 samples += 1
     return lits, samples
-
-
-@njit(cache=True, nogil=True)
-def merge_intervals(lit, lits):  # pragma: no cover - compiled
-    """Sort and merge intervals in place; returns how many remain."""
-    for i in range(1, lits):
-        a, b = lit[0, i], lit[1, i]
-        j = i - 1
-        while j >= 0 and lit[0, j] > a:
-            lit[0, j + 1], lit[1, j + 1] = lit[0, j], lit[1, j]
-            j -= 1
-        lit[0, j + 1], lit[1, j + 1] = a, b
-    n = 0
-    for i in range(lits):
-        if n > 0 and lit[0, i] <= lit[1, n - 1] + _SEAM:
-            lit[1, n - 1] = max(lit[1, n - 1], lit[1, i])
-        else:
-            lit[0, n], lit[1, n] = lit[0, i], lit[1, i]
-            n += 1
-    return n
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -353,45 +363,3 @@ def elevation_of(
         return np.nan
     angle = np.arcsin(np.sqrt(abs(best) / (1.0 + mu_start)))
     return angle if best > 0.0 else -angle
-
-
-@njit(cache=True, nogil=True)
-def count_images(height, sample, branch_of, samples):  # pragma: no cover - compiled
-    """Count the directions in which `height` appears: upright ones and inverted ones.
-
-    An image is upright where a higher line of sight meets a greater height. Extremes of each
-    branch are among the samples, so that between neighbours the height runs one way.
-    """
-    upright = 0
-    inverted = 0
-    for i in range(samples):
-        ea, fa = sample[0, i], sample[1, i]
-        if i + 1 == samples:
-            # The rays that leave for good rise with their elevation without end.
-            if fa < height:
-                upright += 1
-        elif branch_of[i + 1] == branch_of[i]:
-            eb, fb = sample[0, i + 1], sample[1, i + 1]
-            if (fa - height) * (fb - height) < 0.0 or (fa == height and fb != height):
-                if (fb > fa) == (eb > ea):
-                    upright += 1
-                else:
-                    inverted += 1
-    return upright, inverted
-
-
-@njit(cache=True, nogil=True)
-def horizon_energy(mu, layer, start_on_node, mu_start, count):  # pragma: no cover - compiled
-    """Signed energy of the highest ray that ever meets the surface (negative: below level).
-
-    Rays launched downwards meet it if they have more energy than every node below takes away;
-    those launched upwards if a node above turns them back with more energy than that.
-    """
-    lowest = mu_start
-    for j in range((layer - 1 if start_on_node else layer), -1, -1):
-        lowest = min(lowest, mu[j])
-    least = mu_start
-    for j in range(layer + 1, count):
-        least = min(least, mu[j])
-    below, above = mu_start - lowest, mu_start - least
-    return above if above > below else -below

@@ -101,9 +101,7 @@ def test_what_lies_ahead_of_the_latest_ascent_comes_first():
 
 def test_the_best_time_of_a_window_that_has_begun_lies_ahead():
     rows = [{"air": air(inversion=500.0)}]
-    rows += [
-        {"air": air(inversion=500.0), "hours": h, "kind": "model", "lead": h} for h in (6, 12)
-    ]
+    rows += [{"air": air(inversion=500.0), "hours": h, "kind": "model", "lead": h} for h in (6, 12)]
     outlook = make_outlook(profiles(rows), settings(sightlines=(line(),), members=8))
     for suffix in ("", "_lower", "_upper"):
         outlook["sightline_probability" + suffix][:, 0] = [0.9, 0.6, 0.7]

@@ -10,14 +10,15 @@ from hypothesis import assume, given
 from hypothesis import strategies as st
 
 from forecast.physics.earth import MEAN_EARTH_RADIUS
+from forecast.physics.lit_intervals import merge_intervals
 from forecast.physics.rays import Medium, build_medium, trace_rays
 from forecast.physics.sightline import (
     GRAZING_MARGIN,
+    LARGEST_SQUEEZE,
     SightlineTable,
     standard_medium,
     trace_sightlines,
 )
-from forecast.physics.visible_heights import merge_intervals
 from forecast.schema import SIGHTLINE_STATES
 from tests.physics.fan import Fan, cast_fan
 from tests.reference import record, records
@@ -388,3 +389,25 @@ def test_impossible_geometry_is_refused(arguments, message):
 def test_unknown_standard_air_is_refused():
     with pytest.raises(ValueError, match="choose radio, optical or straight"):
         standard_medium("sound")
+
+
+def test_a_pencil_too_thin_to_see_counts_only_if_asked_for():
+    # Between 1.5 and 4 m M hardly changes: rays that run level there come out at any height, but
+    # all within a few hundredths of a second of arc of the horizon.
+    z = np.array([0.0, 1.5, 4.0, 60.0, 3000.0])
+    m = np.array([300.0, 299.0, 299.001, 299.0 + 56 * 0.118, 299.0 + 2996 * 0.118])
+    medium = build_medium(z[None], (m - 1e6 * z / MEAN_EARTH_RADIUS)[None], MEAN_EARTH_RADIUS)
+    line = (medium, 60.0, 300.0, 105e3)
+    exact = trace_sightlines(*line)
+    eye = trace_sightlines(*line, largest_squeeze=LARGEST_SQUEEZE)
+    assert exact.hidden_height[0, 0] == 0.0
+    assert exact.state[0, 0] == SIGHTLINE_STATES["open"]
+    assert 320.0 < eye.hidden_height[0, 0] < 335.0
+    assert eye.state[0, 0] == SIGHTLINE_STATES["shut"]
+    # The heights in between are passed by rays within 0.2″ (1e-6 rad) of the horizon.
+    horizon = exact.horizon_elevation[0, 0]
+    ends = trace_rays(medium, 60.0, horizon + np.array([-1e-6, 1e-6]), 105e3, reflect=False)
+    assert ends.blocked_at[0, 0] < 105e3
+    assert ends.height[0, 1] == pytest.approx(eye.hidden_height[0, 0], abs=1.0)
+    with pytest.raises(ValueError, match="largest_squeeze"):
+        trace_sightlines(*line, largest_squeeze=0.5)
