@@ -75,7 +75,9 @@ def make_outlook(
     data = _best_guess(told.guess, radius, settings.chart_top)
     geometry = sightline_geometry(lines, told.latitude, told.site)
     data.update(geometry)
-    data.update(look_along(lines, told.air, told.latitude, told.site, geometry))
+    data.update(
+        look_along(lines, told.air, told.latitude, told.site, geometry, told.stations, around)
+    )
     zones = {site.name: site.timezone for site in settings.sites}
     data["arrival_change"] = (
         ("profile", "sightline"),
@@ -92,7 +94,7 @@ def make_outlook(
     data.update(_resolution(told.guess))
     data.update(surface_variables(told))
     data.update(joined_air(told, radius))
-    data.update(member_statistics(told, lines, data, settings, progress))
+    data.update(member_statistics(told, lines, data, settings, progress, around))
 
     coords = {name: c for name, c in told.chosen.coords.items() if c.dims == ("profile",)}
     coords.pop("member", None)

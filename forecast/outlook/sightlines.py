@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from datetime import datetime
 from functools import partial
 from typing import TYPE_CHECKING, Any
@@ -10,8 +10,10 @@ from zoneinfo import ZoneInfo
 
 import numpy as np
 
-from forecast.outlook.line_air import LineAir, SiteAir, over_water
+from forecast.outlook.along import NO_STATIONS, Stations
+from forecast.outlook.line_air import LineAir, PathAirs, SiteAir, over_water
 from forecast.outlook.surface import STATE_NAMES
+from forecast.outlook.surroundings import NOTHING_AROUND, Surroundings
 from forecast.physics.appearance import appearance
 from forecast.physics.column_batch import analyse_columns
 from forecast.physics.earth import MEAN_EARTH_RADIUS, euler_radius
@@ -66,37 +68,69 @@ def sightline_geometry(
 
 
 def line_airs(
-    lines: list[Sightline], state: dict[str, np.ndarray], latitude: np.ndarray, site: np.ndarray
+    lines: list[Sightline],
+    state: dict[str, np.ndarray],
+    latitude: np.ndarray,
+    site: np.ndarray,
+    stations: Mapping[int, Stations] = NO_STATIONS,
+    around: Surroundings = NOTHING_AROUND,
 ) -> Iterator[tuple[int, Sightline, np.ndarray, LineAir]]:
-    """The air of each sightline: columns of its own site, as the light or radio wave meets them.
+    """The air of each sightline as its light or radio wave meets it.
+
+    Parameters
+    ----------
+    lines : list of Sightline
+        Those whose ground could not be read, and those without a column, are left out.
+    state : dict of ndarray
+        Height (m), pressure (Pa), temperature (K), specific humidity (kg/kg), (column, level).
+    latitude, site : ndarray
+        Of each column; a column of no site stands only for the air on the way of others.
+    stations : mapping
+        Columns along the sightlines that name sites on their way.
+    around : Surroundings
+        Terrain.
 
     Yields
     ------
     tuple
-        Number of the sightline, the sightline, its columns, the air of those columns;
-        sightlines without a column are left out.
+        Number of the sightline, the sightline, its columns, the air of those columns.
     """
-    refractivity: dict[tuple[str, str, float], np.ndarray] = {}
+    refractivity: dict[tuple[str, float], np.ndarray] = {}
     for i, line in enumerate(lines):
         own = np.flatnonzero(site == line.site)
-        if own.size == 0:
+        if own.size == 0 or line.name in around.blind:
             continue
-        air = {name: a[own] for name, a in state.items()}
-        key = (line.site, line.wave, line.wavelength if line.wave == "optical" else 0.0)
+        key = (line.wave, line.wavelength if line.wave == "optical" else 0.0)
         if key not in refractivity:
-            refractivity[key] = wave_refractivity(air, line)
-        medium = build_medium(
-            air["height"], refractivity[key], euler_radius(latitude[own], line.azimuth), line.wave
+            refractivity[key] = wave_refractivity(state, line)
+        radius = euler_radius(latitude[own], line.azimuth)
+        ground = around.ground.get(line.name)
+        if i not in stations and ground is None:
+            medium = build_medium(state["height"][own], refractivity[key][own], radius, line.wave)
+            yield i, line, own, SiteAir(medium)
+            continue
+        there = (
+            stations[i] if i in stations else Stations(np.zeros(1), np.arange(site.size)[:, None])
         )
-        yield i, line, own, SiteAir(medium)
+        column = there.column[own]
+        missing = (column < 0)[:, :, None]
+        height, n = (
+            np.where(missing, np.nan, a[column]) for a in (state["height"], refractivity[key])
+        )
+        yield i, line, own, PathAirs(height, n, there.distance, radius, line, ground)
 
 
 def trace_paths(
-    lines: list[Sightline], state: dict[str, np.ndarray], latitude: np.ndarray, site: np.ndarray
+    lines: list[Sightline],
+    state: dict[str, np.ndarray],
+    latitude: np.ndarray,
+    site: np.ndarray,
+    stations: Mapping[int, Stations] = NO_STATIONS,
+    around: Surroundings = NOTHING_AROUND,
 ) -> dict[str, Any]:
-    """Every sightline through the columns of its own site; columns may be rows or members."""
+    """Every sightline through its air, columns being rows or members, as in `line_airs`."""
     found = _Table(site.size, len(lines))
-    for i, line, own, air in line_airs(lines, state, latitude, site):
+    for i, line, own, air in line_airs(lines, state, latitude, site, stations, around):
         found.put(own, i, air.trace(line))
     return found.named()
 
@@ -107,6 +141,8 @@ def look_along(
     latitude: np.ndarray,
     site: np.ndarray,
     geometry: dict[str, Any],
+    stations: Mapping[int, Stations] = NO_STATIONS,
+    around: Surroundings = NOTHING_AROUND,
 ) -> dict[str, Any]:
     """As `trace_paths`, and what each target looks like; for rows, not for members.
 
@@ -117,8 +153,10 @@ def look_along(
     names = ("lift", "magnification", "apparent_height")
     looks = {name: np.full(shape, np.nan) for name in names}
     classes = np.zeros(shape, dtype=np.int16)
-    for i, line, own, air in line_airs(lines, state, latitude, site):
+    blocked = np.full(shape, np.nan)
+    for i, line, own, air in line_airs(lines, state, latitude, site, stations, around):
         table = air.trace(line)
+        blocked[own, i] = air.blocked_by
         found.put(own, i, table)
         if line.wave == "optical":
             observer, top, distance, base = over_water(line)
@@ -133,7 +171,7 @@ def look_along(
     both = ("profile", "sightline")
     named = found.named(intervals=True)
     named.update({name: (both, values) for name, values in looks.items()})
-    return {**named, "appearance": (both, classes)}
+    return {**named, "appearance": (both, classes), "blocked_by": (both, blocked)}
 
 
 def arrival_change(

@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import xarray as xr
 
+from forecast.outlook.along import Stations, row_stations
 from forecast.outlook.surface import (
     STATE_NAMES,
     LaidSurface,
@@ -45,7 +46,8 @@ class Speaking:
     (profile, level), and what their surface layers need. By row: ``chosen`` profiles, ``guess``
     (their levels), ``filled`` (which of them were interpolated), ``tops`` (highest usable level
     before the cut, m), ``row_water``, ``surface`` (levels with the surface layer, and what became
-    of it), ``site``, ``latitude``.
+    of it), ``site``, ``latitude``, and ``stations``: rows that stand for the air along the way, by
+    number of the sightline.
     """
 
     rows: list[Row]
@@ -60,6 +62,7 @@ class Speaking:
     surface: LaidSurface
     site: np.ndarray
     latitude: np.ndarray
+    stations: dict[int, Stations]
 
     @property
     def air(self) -> dict[str, np.ndarray]:
@@ -95,6 +98,7 @@ def speaking_profiles(
     chosen = profiles.isel(profile=index)
     guess = {name: a[index] for name, a in state.items()}
     row_water = water.take(index)
+    site = chosen["site"].values.astype(str)
     return Speaking(
         rows=rows,
         profiles=profiles,
@@ -106,8 +110,11 @@ def speaking_profiles(
         tops=tops[index],
         row_water=row_water,
         surface=lay_surface(guess, row_water),
-        site=chosen["site"].values.astype(str),
+        site=site,
         latitude=chosen["latitude"].values.astype(float),
+        stations=row_stations(
+            list(settings.sightlines), settings.sites, site, chosen["time"].values
+        ),
     )
 
 

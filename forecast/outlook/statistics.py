@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import xarray as xr
 
 from forecast.outlook import members as draws
+from forecast.outlook.along import Stations, member_stations
 from forecast.outlook.duct_events import duct_cover, duct_under
 from forecast.outlook.intervals import probability_interval
 from forecast.outlook.sightlines import trace_paths
@@ -16,6 +17,7 @@ from forecast.outlook.speaking import Row, Speaking
 from forecast.outlook.stand import StandShares, join_shares, stand_geometry, stand_shares
 from forecast.outlook.stand_choice import known_from, stand_statistics
 from forecast.outlook.surface import STATE_NAMES, draw_errors, lay_surface
+from forecast.outlook.surroundings import NOTHING_AROUND, Surroundings
 from forecast.physics.column_batch import analyse_columns
 from forecast.physics.earth import euler_radius
 from forecast.schema import CEILINGS_M, SIGHTLINE_STATES, SURFACE_REASONS, SURFACE_STATES
@@ -43,6 +45,7 @@ def member_statistics(
     data: dict[str, Any],
     settings: Settings,
     progress: Progress | None,
+    around: Surroundings = NOTHING_AROUND,
 ) -> dict[str, Any]:
     """Shares of members in which ducts lie under the ceilings and sightlines are open."""
     profiles, state, water, rows = told.profiles, told.state, told.water, told.rows
@@ -64,18 +67,25 @@ def member_statistics(
     done = 0
     while done < n_rows:
         part = rows[done : done + step]
-        batch, owner, errors = _member_columns(profiles, state, part, settings)
-        row_site = site[[r.index for r in part]][owner]
-        row_latitude = latitude[[r.index for r in part]][owner]
+        # Rows of other sites come along where they stand for the air on the way.
+        index = np.arange(done, min(done + step, n_rows))
+        beside = np.setdiff1d(_on_the_way(told.stations, index), index)
+        index = np.concatenate([index, beside])
+        with_beside = [rows[i] for i in index]
+        batch, owner, errors = _member_columns(profiles, state, with_beside, settings)
+        row_site = site[[r.index for r in with_beside]][owner]
+        row_latitude = latitude[[r.index for r in with_beside]][owner]
+        row_site[owner >= len(part)] = ""
+        stations = member_stations(told.stations, index, owner)
         columns = analyse_columns(
             batch["air_pressure"], batch["air_temperature"], batch["specific_humidity"],
             batch["height"], euler_radius(row_latitude),
         )  # fmt: skip
         found = duct_under(columns.ducts, ceilings, settings.minimum_duct_strength)
         inside = duct_cover(columns.ducts, bins, settings.minimum_duct_strength)
-        below = water.take([r.index for r in part]).take(owner)
+        below = water.take([r.index for r in with_beside]).take(owner)
         laid = lay_surface(batch, below, errors)
-        traced = trace_paths(lines, laid.air, row_latitude, row_site)
+        traced = trace_paths(lines, laid.air, row_latitude, row_site, stations, around)
         if lines:
             stands.append(stand_shares(lines, laid.air, row_latitude, row_site, owner, len(part)))
         is_open = traced["sightline_state"][1] == SIGHTLINE_STATES["open"]
@@ -124,6 +134,13 @@ def member_statistics(
     out["hidden_height_lower"] = (("profile", "sightline"), hidden_low)
     out["hidden_height_upper"] = (("profile", "sightline"), hidden_high)
     return out
+
+
+def _on_the_way(stations: Mapping[int, Stations], index: np.ndarray) -> np.ndarray:
+    """Rows that stand for the air on the way of these."""
+    parts = [at.column[index].ravel() for at in stations.values()]
+    rows = np.unique(np.concatenate([*parts, np.zeros(0, dtype=int)]))
+    return rows[rows >= 0]
 
 
 def _member_columns(

@@ -7,6 +7,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 import xarray as xr
 
+from forecast.errors import InputError
+from forecast.outlook.along import Stations
 from forecast.outlook.line_air import LineAir, SiteAir, over_water
 from forecast.outlook.reasons import sightline_reason, view_sentence
 from forecast.outlook.sightlines import line_airs, wave_refractivity
@@ -119,8 +121,7 @@ def view_sightline(
     """
     line = settings.sightlines[number]
     column = {name: a[row : row + 1] for name, a in told.air.items()}
-    latitude, site = told.latitude[row : row + 1], told.site[row : row + 1]
-    (_, _, _, air) = next(iter(line_airs([line], column, latitude, site)))
+    air = _line_air(told, line, number, row, around)
     radius = float(air.radius[0])
     airs: dict[str, LineAir] = {
         "air": air,
@@ -172,7 +173,7 @@ def view_sightline(
         fan_elevation=fan,
         fan_distance=steps,
         fan_height=air.heights(line, fan[None, :], steps)[0],
-        terrain=None,
+        terrain=_ground(line, around),
         **level,
         probability=(chance[0], chance[1], chance[2]),
         state=_STATES[int(table.state[0, 0])],
@@ -180,11 +181,45 @@ def view_sightline(
     )
 
 
+def _line_air(
+    told: Speaking, line: Sightline, number: int, row: int, around: Surroundings
+) -> LineAir:
+    """The air of one sightline at one row, with the rows that stand for it on the way."""
+    rows = np.array([row])
+    stations = {}
+    if number in told.stations:
+        way = told.stations[number]
+        beside = np.setdiff1d(way.column[row], [row, -1])
+        rows = np.concatenate([rows, beside])
+        place = {int(r): k for k, r in enumerate(rows)}
+        column = np.full((rows.size, way.distance.size), -1)
+        column[0] = [place.get(int(r), -1) for r in way.column[row]]
+        stations[0] = Stations(way.distance, column)
+    site = told.site[rows]
+    site[1:] = ""
+    air = {name: a[rows] for name, a in told.air.items()}
+    for _, _, _, found in line_airs([line], air, told.latitude[rows], site, stations, around):
+        return found
+    raise InputError(
+        "its ground could not be read, so that it is not told of", source=line.name,
+        remedy="see what was set aside",
+    )  # fmt: skip
+
+
 def _source(outlook: xr.Dataset, row: int) -> str:
     if str(outlook["source_kind"].values[row]) == "ascent":
         return "ascent"
     lead = outlook["lead_time"].values[row].astype("timedelta64[s]").astype(float) / 3600.0
     return f"model, {lead:.0f} h ahead"
+
+
+def _ground(line: Sightline, around: Surroundings) -> np.ndarray | None:
+    """Terrain over the water."""
+    if line.name not in around.ground:
+        return None
+    ground = around.ground[line.name].copy()
+    ground[:, 1] -= line.sea_level_offset
+    return ground
 
 
 def _outline(line: Sightline, base: float, top: float) -> np.ndarray:

@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import numpy as np
+
 from forecast.physics.compiled import njit
 
-__all__ = ["count_images", "horizon_energy", "merge_intervals"]
+__all__ = ["count_images", "horizon_energy", "is_step", "merge_intervals"]
 
 _SEAM = 1e-5  # m; visible intervals that come this near each other are one
 
@@ -29,8 +31,28 @@ def merge_intervals(lit, lits):  # pragma: no cover - compiled
     return n
 
 
+@njit(cache=True, nogil=True, error_model="numpy")
+def is_step(ea, fa, eb, fb, mu_start, steepest):  # pragma: no cover - compiled
+    """Whether heights fa and fb of rays with signed energies ea and eb count as a jump.
+
+    They do if they lie further apart than `steepest` (m per rad) allows for the angle between.
+    """
+    if not steepest < np.inf:
+        return False
+    one = np.sqrt(abs(ea) / (1.0 + mu_start))
+    other = np.sqrt(abs(eb) / (1.0 + mu_start))
+    if (ea > 0.0) != (eb > 0.0):
+        angle = one + other
+    else:
+        # The difference of the roots, without their cancellation.
+        angle = abs(abs(eb) - abs(ea)) / (1.0 + mu_start) / max(one + other, 1e-30)
+    return abs(fb - fa) > steepest * angle
+
+
 @njit(cache=True, nogil=True)
-def count_images(height, sample, branch_of, samples):  # pragma: no cover - compiled
+def count_images(
+    height, sample, branch_of, samples, mu_start, steepest
+):  # pragma: no cover - compiled
     """Count the directions in which `height` appears: upright ones and inverted ones.
 
     An image is upright where a higher line of sight meets a greater height. Extremes of each
@@ -46,6 +68,8 @@ def count_images(height, sample, branch_of, samples):  # pragma: no cover - comp
                 upright += 1
         elif branch_of[i + 1] == branch_of[i]:
             eb, fb = sample[0, i + 1], sample[1, i + 1]
+            if is_step(ea, fa, eb, fb, mu_start, steepest):
+                continue
             if (fa - height) * (fb - height) < 0.0 or (fa == height and fb != height):
                 if (fb > fa) == (eb > ea):
                     upright += 1

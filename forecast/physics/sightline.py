@@ -256,9 +256,11 @@ def _trace_all(
                 continue
             floats[2, c, s] = elevation_of(
                 z[c], mu[c], count[c], layer, start, mu_start, distance[s], highest, sample,
-                branch_of, samples,
+                branch_of, samples, squeeze * distance[s],
             )  # fmt: skip
-            images[0, c, s], images[1, c, s] = count_images(highest, sample, branch_of, samples)
+            images[0, c, s], images[1, c, s] = count_images(
+                highest, sample, branch_of, samples, mu_start, squeeze * distance[s]
+            )
             if z_top == z_base:
                 clear = above_edge >= margin
             else:

@@ -17,6 +17,7 @@ from __future__ import annotations
 import numpy as np
 
 from forecast.physics.compiled import njit
+from forecast.physics.lit_intervals import is_step
 from forecast.physics.rays import advance
 
 __all__ = [
@@ -144,9 +145,7 @@ def _reach(
     lit, lits, low, high, fa, fb, energy_a, energy_b, mu_start, steepest
 ):  # pragma: no cover
     """Extend the lit heights low…high from a sample to the next, or begin anew past a step."""
-    between = abs(energy_b - energy_a) / (1.0 + mu_start)
-    angle = between / (np.sqrt(energy_a / (1.0 + mu_start)) + np.sqrt(energy_b / (1.0 + mu_start)))
-    if not abs(fb - fa) > steepest * angle:  # so that no angle is no step
+    if not is_step(energy_a, fa, energy_b, fb, mu_start, steepest):
         return min(low, fb), max(high, fb), lits
     if high > max(low, 0.0) and lits < MAX_LIT:
         lit[0, lits], lit[1, lits] = max(low, 0.0), high
@@ -327,7 +326,7 @@ def survey_heights(
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def elevation_of(
-    z, mu, count, layer, start, mu_start, distance, height, sample, branch_of, samples
+    z, mu, count, layer, start, mu_start, distance, height, sample, branch_of, samples, steepest
 ):  # pragma: no cover
     """Find the highest elevation (rad) at which `height` appears, NaN if no ray passes there."""
     best = -np.inf
@@ -346,6 +345,8 @@ def elevation_of(
         else:
             continue
         if max(ea, eb) <= best or (fa - height) * (fb - height) > 0.0:
+            continue
+        if is_step(ea, fa, eb, fb, mu_start, steepest):
             continue
         for _ in range(60):
             middle = 0.5 * (ea + eb)
