@@ -89,6 +89,7 @@ def make_outlook(
             told.chosen["longitude"].values.astype(float), told.site,
             data["apparent_elevation"][1],
             told.chosen["visibility"].values.astype(float) if "visibility" in told.chosen else None,
+            told.stations, around,
         )
     )  # fmt: skip
     data.update(_resolution(told.guess))

@@ -60,7 +60,11 @@ def view_sentence(outlook: xr.Dataset, row: int, item: int) -> str:
     if state == SIGHTLINE_STATES["shut"]:
         hidden = float(outlook["hidden_height"].values[row, item])
         lowest = f"all under {hidden:.0f} m is hidden there" if np.isfinite(hidden) else "no ray"
-        return f"Nothing shows of the target, which reaches {top:.0f} m: {lowest}."
+        return (
+            f"Nothing shows of the target, which reaches {top:.0f} m: {lowest}."
+            f"{_blocked(outlook, row, item)}"
+        )
+    blocked = _blocked(outlook, row, item)
     extent = float(outlook["visible_extent"].values[row, item])
     what = (
         f"{extent:.0f} of {top - base:.0f} m show"
@@ -85,8 +89,14 @@ def view_sentence(outlook: xr.Dataset, row: int, item: int) -> str:
     told = f" ({', '.join(words)})" if words else ""
     sentence = f"{', '.join(parts)}{told}."
     if state == SIGHTLINE_STATES["grazing"]:
-        return f"Barely: {sentence}"
-    return sentence[0].upper() + sentence[1:]
+        return f"Barely: {sentence}{blocked}"
+    return f"{sentence[0].upper()}{sentence[1:]}{blocked}"
+
+
+def _blocked(outlook: xr.Dataset, row: int, item: int) -> str:
+    """By which ground the lowest ray that might have passed is stopped."""
+    at = float(outlook["blocked_by"].values[row, item])
+    return "" if np.isnan(at) else f" Ground {at / 1e3:.1f} km from the observer is in the way."
 
 
 def duct_reason(outlook: xr.Dataset, row: int, ceiling: float) -> str:

@@ -20,13 +20,16 @@ far as a visibility counts them.
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any, NamedTuple
 
 import numpy as np
 
+from forecast.outlook.along import NO_STATIONS, Stations
 from forecast.outlook.line_air import LineAir, over_water
 from forecast.outlook.sightlines import line_airs
 from forecast.outlook.surface import STATE_NAMES
+from forecast.outlook.surroundings import NOTHING_AROUND, Surroundings
 from forecast.physics import contrast
 from forecast.physics.moisture import relative_humidity
 from forecast.physics.sun import (
@@ -115,6 +118,8 @@ def seeing_conditions(
     site: np.ndarray,
     apparent_elevation: np.ndarray,
     visibility: np.ndarray | None = None,
+    stations: Mapping[int, Stations] = NO_STATIONS,
+    around: Surroundings = NOTHING_AROUND,
 ) -> dict[str, Any]:
     """What Sun, haze and fog leave to be seen, for every row and sightline.
 
@@ -138,6 +143,8 @@ def seeing_conditions(
     visibility : ndarray, optional
         Visibility of the data, m, (row,). Less than 0 or NaN: not known. 9,990 to 10,000 m too,
         since stations report so for "10 km or more".
+    stations, around
+        As for `forecast.outlook.sightlines.line_airs`.
 
     Returns
     -------
@@ -159,7 +166,7 @@ def seeing_conditions(
     codes = {name: np.full(shape, -1, dtype=np.int8) for name in _CODES}
     reported = _reported(visibility, site.size)
     airs: dict[str, _Air] = {}
-    for i, line, own, paths in line_airs(lines, state, latitude, site):
+    for i, line, own, paths in line_airs(lines, state, latitude, site, stations, around):
         if line.wave != "optical":
             continue
         if line.site not in airs:

@@ -4,22 +4,26 @@ Every member's air is traced for a list of observer heights at once, and again f
 place with its ground and its distance to the target. The share of members in which the target is
 open is the probability of that height (`forecast.outlook.stand_choice`).
 
-The air is that of the sightline's own site all along the path; without a duct a higher eye never
+Heights over ground, or through air that changes along the way, are judged by fewer members; places
+of such sightlines are not judged, since their ways are others. Elsewhere the air is that of the
+sightline's own site all along the path; without a duct a higher eye never
 sees less. In a duct it may: rays from an eye just under or over the duct's top are split there, so
 that the far target falls into the gap, while a lower eye still sees it (found by the tests).
 """
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any, NamedTuple
 
 import numpy as np
 
-from forecast.outlook.surface import STATE_NAMES
-from forecast.physics.column_batch import analyse_columns
-from forecast.physics.earth import MEAN_EARTH_RADIUS, euler_radius
+from forecast.outlook.along import NO_STATIONS, Stations
+from forecast.outlook.sightlines import line_airs, wave_refractivity
+from forecast.outlook.surroundings import NOTHING_AROUND, Surroundings
+from forecast.physics.earth import euler_radius
 from forecast.physics.rays import Medium, build_medium
-from forecast.physics.refractive_index import optical_refractivity
 from forecast.physics.sightline import LARGEST_SQUEEZE, trace_sightlines
 from forecast.schema import SIGHTLINE_STATES
 
@@ -62,8 +66,8 @@ class StandShares(NamedTuple):
     """Members counted per row: shares (1), medians (m) and numbers of members.
 
     ``stand_open``, ``stand_extent``, ``stand_in_duct``: (row, sightline, stand); ``place_open``,
-    ``place_extent``: (row, sightline, place, stand); ``place_members``: (row, sightline), how many
-    members the places were judged by.
+    ``place_extent``: (row, sightline, place, stand); ``place_members``, ``stand_members``:
+    (row, sightline), how many members the places and the heights were judged by.
     """
 
     stand_open: np.ndarray
@@ -72,6 +76,7 @@ class StandShares(NamedTuple):
     place_open: np.ndarray
     place_extent: np.ndarray
     place_members: np.ndarray
+    stand_members: np.ndarray
 
 
 def stand_heights(lines: list[Sightline]) -> np.ndarray:
@@ -192,6 +197,8 @@ def stand_shares(
     site: np.ndarray,
     owner: np.ndarray,
     n_rows: int,
+    stations: Mapping[int, Stations] = NO_STATIONS,
+    around: Surroundings = NOTHING_AROUND,
 ) -> StandShares:
     """Count the members in which each height and place sees the target.
 
@@ -203,6 +210,8 @@ def stand_shares(
         Row that each column belongs to.
     n_rows : int
         How many rows.
+    stations, around
+        As for `forecast.outlook.sightlines.line_airs`.
 
     Returns
     -------
@@ -213,13 +222,21 @@ def stand_shares(
     heights, distances = stand_heights(lines), place_distances(lines)
     stand = np.full((3, n_rows, *heights.shape), np.nan)
     place = np.full((2, n_rows, *distances.shape, heights.shape[1]), np.nan)
-    members_used = np.zeros((n_rows, len(lines)))
-    shares = StandShares(stand[0], stand[1], stand[2], place[0], place[1], members_used)
+    members_used = np.zeros((2, n_rows, len(lines)))
+    shares = StandShares(*stand, *place, *members_used)
     rank = _rank(owner)
     for i, line in enumerate(lines):
         own = np.flatnonzero(site == line.site)
-        if own.size == 0:
+        if own.size == 0 or line.name in around.blind:
             continue
+        members = np.bincount(owner[own], minlength=n_rows)
+        if i in stations or line.name in around.ground:
+            few = own[rank[own] % np.maximum(1, members // _FEWEST_MEMBERS)[owner[own]] == 0]
+            views = _along(i, line, few, state, latitude, site, stations, around)
+            shares.stand_members[:, i] = np.bincount(owner[few], minlength=n_rows)
+            _count(views, owner[few], shares[:3], np.s_[i, : len(line.stand_heights)])
+            continue
+        shares.stand_members[:, i] = members
         # One line at a time: all at once would not fit where lines and places are many.
         views = trace_stands([line], {n: a[own] for n, a in state.items()}, latitude[own],
                              site[own])  # fmt: skip
@@ -229,14 +246,44 @@ def stand_shares(
             continue
         traced = len(line.places) * len(line.stand_heights)
         most = max(_FEWEST_MEMBERS, _PLACE_TRACES // traced)
-        members = np.bincount(owner[own], minlength=n_rows)
         few = own[rank[own] % np.maximum(1, -(-members // most))[owner[own]] == 0]
-        members_used[:, i] = np.bincount(owner[few], minlength=n_rows)
+        shares.place_members[:, i] = np.bincount(owner[few], minlength=n_rows)
         views = trace_places([line], {n: a[few] for n, a in state.items()}, latitude[few],
                              site[few])  # fmt: skip
         places = np.s_[i, : len(line.places), :width]
         _count(views, owner[few], shares[3:5], places)
     return shares
+
+
+def _along(
+    number: int,
+    line: Sightline,
+    few: np.ndarray,
+    state: dict[str, np.ndarray],
+    latitude: np.ndarray,
+    site: np.ndarray,
+    stations: Mapping[int, Stations],
+    around: Surroundings,
+) -> Views:
+    """Views from each height through air, or over ground, that changes along the way."""
+    mine = np.full(site.shape, "", dtype=site.dtype)
+    mine[few] = site[few]
+    own = {0: stations[number]} if number in stations else NO_STATIONS
+    views = _unseen((few.size, 1, len(line.stand_heights)))
+    floor = -np.inf
+    if line.name in around.ground:
+        floor = float(np.interp(0.0, *around.ground[line.name].T))
+    for _, _, _, air in line_airs([line], state, latitude, mine, own, around):
+        for k, height in enumerate(sorted(line.stand_heights)):
+            if height < max(floor, line.sea_level_offset):
+                continue
+            table = air.trace(replace(line, observer_height=height))
+            told = table.state[:, 0] >= 0
+            is_open = table.state[:, 0] == SIGHTLINE_STATES["open"]
+            views.is_open[:, 0, k] = np.where(told, is_open, np.nan)
+            views.extent[:, 0, k] = np.where(told, table.visible_extent[:, 0], np.nan)
+            views.in_duct[:, 0, k] = np.where(told, table.horizon_elevation[:, 0] > 0.0, np.nan)
+    return views
 
 
 def join_shares(parts: list[StandShares]) -> StandShares:
@@ -256,12 +303,8 @@ def _unseen(shape: tuple[int, ...]) -> Views:
 
 
 def _medium(line: Sightline, air: dict[str, np.ndarray], latitude: np.ndarray) -> Medium:
-    p, t, q = (air[name] for name in STATE_NAMES[1:])
-    if line.wave == "optical":
-        n = optical_refractivity(p, t, q, line.wavelength)
-    else:
-        n = analyse_columns(p, t, q, air["height"], MEAN_EARTH_RADIUS).refractivity
-    return build_medium(air["height"], n, euler_radius(latitude, line.azimuth), line.wave)
+    radius = euler_radius(latitude, line.azimuth)
+    return build_medium(air["height"], wave_refractivity(air, line), radius, line.wave)
 
 
 def _view(medium: Medium, line: Sightline, eye: np.ndarray, distance: np.ndarray) -> Views:

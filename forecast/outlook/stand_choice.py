@@ -76,7 +76,8 @@ def stand_statistics(
         "stand_in_duct": (dims, shares.stand_in_duct),
     }
     chance = shares.stand_open
-    lower = _add_interval(out, "stand", dims, chance, sure[:, None, None])
+    trials = np.minimum(sure[:, None], shares.stand_members)[:, :, None]
+    lower = _add_interval(out, "stand", dims, chance, trials)
     counts = eye >= known[:, None, None]
     best = best_choice(np.where(counts, chance, np.nan), lower, shares.stand_extent)
     out["best_stand_height"] = (dims[:2], _height_of(heights, best))

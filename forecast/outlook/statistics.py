@@ -87,7 +87,11 @@ def member_statistics(
         laid = lay_surface(batch, below, errors)
         traced = trace_paths(lines, laid.air, row_latitude, row_site, stations, around)
         if lines:
-            stands.append(stand_shares(lines, laid.air, row_latitude, row_site, owner, len(part)))
+            stands.append(
+                stand_shares(
+                    lines, laid.air, row_latitude, row_site, owner, len(part), stations, around
+                )
+            )
         is_open = traced["sightline_state"][1] == SIGHTLINE_STATES["open"]
         hidden = traced["hidden_height"][1]
         for k in range(len(part)):
@@ -96,7 +100,7 @@ def member_statistics(
             cover[done + k] = inside[mine].mean(axis=0)
             reasons[done + k] = np.bincount(laid.reason[mine], minlength=reasons.shape[1])
             for i, line in enumerate(lines):
-                if row_site[mine][0] == line.site:
+                if row_site[mine][0] == line.site and line.name not in around.blind:
                     open_hits[done + k, i] = is_open[mine, i].sum()
                     hidden_low[done + k, i], hidden_high[done + k, i] = np.quantile(
                         hidden[mine, i], (0.05, 0.95)

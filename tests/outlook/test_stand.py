@@ -344,7 +344,8 @@ def _shares(chance: np.ndarray, in_duct: np.ndarray | None = None) -> StandShare
     a = np.asarray(chance, dtype=float)[:, None, :]
     duct = np.zeros(a.shape) if in_duct is None else np.broadcast_to(in_duct, a.shape)
     none = np.zeros((a.shape[0], 1, 0, a.shape[2]))
-    return StandShares(a, 10.0 * a, duct, none, none, np.zeros((a.shape[0], 1)))
+    judged = np.full((a.shape[0], 1), 1000.0)
+    return StandShares(a, 10.0 * a, duct, none, none, 0.0 * judged, judged)
 
 
 def test_over_all_times_the_highest_mean_wins_and_unknown_times_do_not_count():

@@ -37,7 +37,8 @@ def _with_stands(outlook, chance=None, state=None, places=True):
     chance[:, 1, 2:] = np.nan
     at = np.repeat(chance[:, :, None, :], len(spots), axis=2) * 0.5
     at[:, 1] = np.nan
-    shares = StandShares(chance, 9.0 * chance, chance, at, at, np.full((rows, 2), 16.0))
+    judged = np.full((rows, 2), 16.0)
+    shares = StandShares(chance, 9.0 * chance, chance, at, at, judged, judged)
     out = outlook.copy()
     if state is not None:
         out["surface_layer_state"] = ("profile", np.full(rows, SURFACE_STATES[state]))
