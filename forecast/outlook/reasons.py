@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import xarray as xr
 
-from forecast.outlook.seeing import seeing_words
+from forecast.outlook.seeing_words import seeing_words
 from forecast.physics.appearance import class_words
 from forecast.physics.moisture import CELSIUS_OFFSET
 from forecast.schema import DUCT_KINDS, SIGHTLINE_STATES, SURFACE_STATES

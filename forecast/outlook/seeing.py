@@ -34,7 +34,6 @@ from forecast.physics import contrast
 from forecast.physics.moisture import relative_humidity
 from forecast.physics.sun import (
     CIVIL_TWILIGHT,
-    SUNRISE,
     direction_angle,
     sun_position,
     twilight_class,
@@ -42,8 +41,6 @@ from forecast.physics.sun import (
 from forecast.schema import TWILIGHT_CLASSES, VISUAL_RANGE_SOURCES, WEATHER_ON_PATH
 
 if TYPE_CHECKING:
-    import xarray as xr
-
     from forecast.settings import Sightline
 
 __all__ = [
@@ -51,9 +48,8 @@ __all__ = [
     "LAMP_THRESHOLDS",
     "NEAR_SATURATION",
     "SATURATION",
-    "SUN_WARNING",
+    "bounded",
     "seeing_conditions",
-    "seeing_words",
 ]
 
 #: Extinction of dry haze at 550 nm where no visibility is given: least, usual, most, m⁻¹.
@@ -73,9 +69,6 @@ LAMP_THRESHOLDS = {
     "night": 10.0**-7.5,
 }
 
-#: Angle (degrees) between target and Sun under which the words warn; ours, no source.
-SUN_WARNING = 10.0
-
 _STEPS = 33  # points at which a ray is followed
 _SKIN = 2.0  # m; see above
 _UNSEEN = 10.0  # m of a ray's way under the lowest level that still count as known
@@ -83,12 +76,6 @@ _VISIBILITY_ERROR = np.array([0.8, 1.0, 1.2])
 _LEAST_VISIBILITY = 10.0  # m; 0 is reported for less than some 50 m
 _HAZE_COLOUR = 1.3  # exponent by wavelength, as of visibilities from 6 km
 
-_LIGHT_WORDS = {code: name.replace("_", " ") for name, code in TWILIGHT_CLASSES.items()}
-_SOURCE_WORDS = {
-    VISUAL_RANGE_SOURCES["settings"]: "by the visibility of the settings",
-    VISUAL_RANGE_SOURCES["profile"]: "by the visibility of the data",
-    VISUAL_RANGE_SOURCES["humidity"]: "through haze guessed from humidity alone",
-}
 _BOTH = ("profile", "sightline")
 _NUMBERS = (
     "visual_range_limit",
@@ -162,7 +149,7 @@ def seeing_conditions(
     light = twilight_class(sun.altitude)
     azimuth = np.array([line.azimuth for line in lines], dtype=float)
     elevation = np.degrees(np.nan_to_num(apparent_elevation))  # of a hidden target: level
-    out = {name: np.full(shape, np.nan) for name in (*_NUMBERS, *_bounded(_RANGES))}
+    out = {name: np.full(shape, np.nan) for name in (*_NUMBERS, *bounded(_RANGES))}
     codes = {name: np.full(shape, -1, dtype=np.int8) for name in _CODES}
     reported = _reported(visibility, site.size)
     airs: dict[str, _Air] = {}
@@ -197,7 +184,7 @@ def seeing_conditions(
             found["lamp_range"] = contrast.lamp_range(lamp, mean, _lamp_threshold(light[own]))
         for name, ranges in found.items():
             ranges[0, fog] = 0.0  # humidity does not tell how thick fog is
-            for bound, values in zip(_bounded((name,)), ranges[[1, 0, 2]], strict=True):
+            for bound, values in zip(bounded((name,)), ranges[[1, 0, 2]], strict=True):
                 out[bound][own, i] = values
     return {
         "sun_altitude": ("profile", sun.altitude),
@@ -211,113 +198,8 @@ def seeing_conditions(
     }
 
 
-def seeing_words(outlook: xr.Dataset, row: int, item: int) -> str:
-    """Say what Sun, haze and fog leave to be seen; never more surely than it is known.
-
-    Parameters
-    ----------
-    outlook : xarray.Dataset
-        With the variables of `seeing_conditions`, ``azimuth``, ``distance``, ``sightline_wave``.
-    row, item : int
-        Position along ``profile`` and ``sightline``.
-
-    Returns
-    -------
-    str
-        One sentence, and a second one if the Sun stands near the target; empty for radio.
-    """
-    if str(outlook["sightline_wave"].values[item]) != "optical":
-        return ""
-    value = {
-        str(name): float(a.values[row, item] if a.ndim == 2 else a.values[row])
-        for name, a in outlook.data_vars.items()
-        if a.dims in (_BOTH, ("profile",)) and a.dtype.kind in "fiu"
-    }
-    value["azimuth"] = float(outlook["azimuth"].values[item])
-    value["distance"] = float(outlook["distance"].values[item])
-    said = [_sun_words(value), _range_words(value), _weather_words(value)]
-    words = "; ".join(said) + "."
-    up = value["sun_altitude"] >= SUNRISE
-    if up and value["sun_separation"] < SUN_WARNING:
-        words += (
-            f" The Sun stands {value['sun_separation']:.0f}° from the target: never point optics "
-            "near the Sun."
-        )
-    elif up and not np.isfinite(value["azimuth"]):
-        words += " Without an azimuth nothing warns of a Sun near the target."
-    return words
-
-
-def _sun_words(value: dict[str, float]) -> str:
-    altitude = value["sun_altitude"]
-    light = _LIGHT_WORDS.get(int(value["twilight_class"]))
-    if light is None:
-        return "Where the Sun stands is not known"
-    side = "above" if altitude >= 0.0 else "below"
-    where = f"Sun {abs(altitude):.0f}° {side} the horizon"
-    head = where if light == "day" else f"{light.capitalize()}, {where}"
-    if light in ("night", "astronomical twilight") or not np.isfinite(value["azimuth"]):
-        return head
-    turn = (value["sun_azimuth"] - value["azimuth"] + 180.0) % 360.0 - 180.0
-    if abs(turn) > 150.0:
-        return f"{head}, behind the observer"
-    hand = "right" if turn >= 0.0 else "left"
-    return f"{head}, {abs(turn):.0f}° {hand} of the target"
-
-
-def _range_words(value: dict[str, float]) -> str:
-    """How far one sees against how far the target is."""
-    source = _SOURCE_WORDS.get(int(value["visual_range_source"]))
-    if source is None:
-        return "how far haze lets one see is not known"
-    dark = value["sun_altitude"] < CIVIL_TWILIGHT
-    lamp = value["lamp_range"] > (0.0 if dark else value["target_range"])
-    if dark and not lamp:
-        return "too dark to tell an unlit target from the sky"
-    what, name = ("its lamp", "lamp_range") if lamp else ("this target", "target_range")
-    if not np.isfinite(value["sun_altitude"]):
-        what += " by day"
-    best, low, high = (value[bound] for bound in _bounded((name,)))
-    far = value["distance"]
-    if far > high:
-        verdict = "too far"
-    elif value["weather_on_path"] == WEATHER_ON_PATH["saturated_level"]:
-        verdict = "perhaps near enough, and only without fog"
-    else:
-        verdict = "near enough" if far <= low else "perhaps near enough"
-    words = (
-        f"{source}, {what} shows out to some {_about(best)} ({_about(low)} to {_about(high)}), "
-        f"and is {_about(far, 3)} away: {verdict}"
-    )
-    if not lamp and far > value["visual_range_limit"]:
-        words += f" (even clean air ends sight at {_about(value['visual_range_limit'])})"
-    return words
-
-
-def _weather_words(value: dict[str, float]) -> str:
-    humidity = f"{100.0 * value['path_relative_humidity']:.0f} %"
-    code = int(value["weather_on_path"])
-    if code == WEATHER_ON_PATH["saturated_level"]:
-        words = f"the ray crosses saturated air ({humidity}), fog or low cloud is likely"
-    elif code == WEATHER_ON_PATH["near_saturation"]:
-        words = f"the ray crosses air near saturation ({humidity}), fog or low cloud is possible"
-    elif code == WEATHER_ON_PATH["no_saturated_level"]:
-        words = f"no saturated air at the heights of the ray (at most {humidity})"
-    else:
-        words = "fog and low cloud are not known (no level near the heights of the ray)"
-    counted = (VISUAL_RANGE_SOURCES["settings"], VISUAL_RANGE_SOURCES["profile"])
-    known = value["visual_range_source"] in counted
-    return words if known else f"{words}, rain and snow are not known"
-
-
-def _about(length: float, digits: int = 2) -> str:
-    """A length, rounded: ranges are not known better than to two digits."""
-    if length >= 1e4:
-        return f"{float(f'{1e-3 * length:.{digits}g}'):.0f} km"
-    return f"{1e-3 * length:.1f} km" if length >= 1e3 else f"{float(f'{length:.2g}'):.0f} m"
-
-
-def _bounded(names: tuple[str, ...]) -> list[str]:
+def bounded(names: tuple[str, ...]) -> list[str]:
+    """Names of ranges and of their bounds."""
     return [name + end for name in names for end in ("", "_lower", "_upper")]
 
 

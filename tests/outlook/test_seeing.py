@@ -5,15 +5,14 @@ from __future__ import annotations
 import numpy as np
 import pytest
 import xarray as xr
+from forecast.outlook.seeing_words import SUN_WARNING, seeing_words
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from forecast.outlook.seeing import (
     LAMP_THRESHOLDS,
     NEAR_SATURATION,
-    SUN_WARNING,
     seeing_conditions,
-    seeing_words,
 )
 from forecast.outlook.sightlines import look_along, sightline_geometry
 from forecast.outlook.surface import STATE_NAMES
