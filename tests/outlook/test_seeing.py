@@ -5,7 +5,6 @@ from __future__ import annotations
 import numpy as np
 import pytest
 import xarray as xr
-from forecast.outlook.seeing_words import SUN_WARNING, seeing_words
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
@@ -14,6 +13,7 @@ from forecast.outlook.seeing import (
     NEAR_SATURATION,
     seeing_conditions,
 )
+from forecast.outlook.seeing_words import SUN_WARNING, seeing_words
 from forecast.outlook.sightlines import look_along, sightline_geometry
 from forecast.outlook.surface import STATE_NAMES
 from forecast.physics.contrast import CONTRAST_THRESHOLD, HAZE_SCALE_HEIGHT, lamp_range
