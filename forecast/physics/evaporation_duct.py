@@ -20,6 +20,7 @@ __all__ = ["EvaporationDuct", "evaporation_duct"]
 
 _SEARCH = (0.05, 200.0)  # m; heights between which the duct is looked for
 _STEP = 1.15  # ratio of neighbouring heights searched
+_GOLDEN = 0.6180339887498949
 _GAS_CONSTANT_DRY = 287.05287  # J kg⁻¹ K⁻¹, ICAO Doc 7488/3
 
 _state = njit(cache=True, nogil=True, inline="always")(refractivity_from_state)
@@ -108,24 +109,31 @@ def _find_duct(
             height[c] = 0.0
             strength[c] = 0.0
             continue
-        # The least M lies between the neighbours of the least sample: golden section.
+        # The least M lies between the neighbours of the least sample: golden section, one new
+        # sample a step, to 1e-4 of the height.
         a, b = before, here * _STEP
-        ratio = 0.6180339887498949
-        for _ in range(32):
-            x1 = b - ratio * (b - a)
-            x2 = a + ratio * (b - a)
-            m1 = _modified(
-                x1, ts[c], qs[c], length[c], z0t[c], surface_t[c], surface_q[c], code[c], p0[c],
-                radius,
-            )  # fmt: skip
-            m2 = _modified(
-                x2, ts[c], qs[c], length[c], z0t[c], surface_t[c], surface_q[c], code[c], p0[c],
-                radius,
-            )  # fmt: skip
+        x1, x2 = b - _GOLDEN * (b - a), a + _GOLDEN * (b - a)
+        m1 = _modified(
+            x1, ts[c], qs[c], length[c], z0t[c], surface_t[c], surface_q[c], code[c], p0[c], radius
+        )
+        m2 = _modified(
+            x2, ts[c], qs[c], length[c], z0t[c], surface_t[c], surface_q[c], code[c], p0[c], radius
+        )
+        for _ in range(17):
             if m1 < m2:
-                b = x2
+                b, x2, m2 = x2, x1, m1
+                x1 = new = b - _GOLDEN * (b - a)
             else:
-                a = x1
+                a, x1, m1 = x1, x2, m2
+                x2 = new = a + _GOLDEN * (b - a)
+            m = _modified(
+                new, ts[c], qs[c], length[c], z0t[c], surface_t[c], surface_q[c], code[c], p0[c],
+                radius,
+            )  # fmt: skip
+            if new == x1:
+                m1 = m
+            else:
+                m2 = m
         best = 0.5 * (a + b)
         height[c] = best
         least = _modified(

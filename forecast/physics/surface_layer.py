@@ -19,6 +19,7 @@ a function has no answer: the column is marked ``too_stable`` and its scales are
 
 from __future__ import annotations
 
+from functools import cache
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -34,12 +35,7 @@ from forecast.physics.stability import (
     unstable_table,
 )
 
-__all__ = [
-    "SurfaceLayer",
-    "solve_land",
-    "solve_sea",
-    "surface_profile",
-]
+__all__ = ["SurfaceLayer", "solve_land", "solve_sea", "surface_profile"]
 
 KARMAN = 0.4
 GRAVITY = 9.80665  # m/s²
@@ -210,6 +206,11 @@ def surface_profile(layer: SurfaceLayer, height: Any) -> tuple[np.ndarray, np.nd
     return temperature, humidity
 
 
+@cache
+def _table() -> np.ndarray:
+    return unstable_table()
+
+
 def _within(name: str, value: np.ndarray, low: float, high: float, unit: str) -> None:
     bad = value[np.isfinite(value) & ~((value >= low) & (value <= high))]
     if bad.size:
@@ -238,7 +239,7 @@ def _solve(
     iterations = np.empty(size, dtype=np.int8)
     code = STABLE_FUNCTIONS[stable_function]
     faults = _solve_all(
-        *flat, steps, code, LARGEST_ZETA[code], surface[1], surface[2], unstable_table(), scales,
+        *flat, steps, code, LARGEST_ZETA[code], surface[1], surface[2], _table(), scales,
         converged, too_stable, iterations,
     )  # fmt: skip
     if faults:
