@@ -32,7 +32,8 @@ class PathAir(NamedTuple):
     `forecast.physics.rays.Medium`; a case without air has ``count`` 0. ``radius`` (case,), m.
     ``edge``: distances at which rays are looked at, rising from 0 to the target's, m, (hop + 1,);
     ``segment``: which segment each hop runs through, (hop,); ``ground``: height of the ground at
-    each edge, m, (hop + 1,), −inf where it is water.
+    each edge, m, (hop + 1,), −inf where it is water. ``block``: edges between which rays well over
+    the ground are taken at one go, each stretch within one segment, (stretch + 1,).
     """
 
     z: np.ndarray
@@ -42,6 +43,7 @@ class PathAir(NamedTuple):
     edge: np.ndarray
     segment: np.ndarray
     ground: np.ndarray
+    block: np.ndarray
 
 
 def above_water(height: Any, offset: float) -> np.ndarray:
@@ -142,7 +144,10 @@ def build_path_air(
     )
     points = _ground_points(ground, distance)
     land = points[points[:, 1] > 0.0]
-    edge = np.unique(np.concatenate([bounds, land[:, 0]]))
+    blocks = np.unique(np.concatenate([bounds, np.linspace(0.0, distance, _SEGMENTS + 1)]))
+    if not land.size:
+        blocks = bounds
+    edge = np.unique(np.concatenate([blocks, land[:, 0]]))
     level = np.full(edge.size, -np.inf)
     if land.size:
         level = np.interp(edge, points[:, 0], points[:, 1])
@@ -152,7 +157,7 @@ def build_path_air(
     shape = (cases, pieces, -1)
     return PathAir(
         medium.z.reshape(shape), medium.mu.reshape(shape), medium.count.reshape(cases, pieces),
-        radius, edge, segment, level,
+        radius, edge, segment, level, np.searchsorted(edge, blocks),
     )  # fmt: skip
 
 
@@ -309,49 +314,69 @@ def _blend(z, n, station, middle, gradient, scale, out):  # pragma: no cover - c
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
+def _hop(z, mu, count, here, w, length):  # pragma: no cover - compiled
+    """Carry a ray over a length of one segment: Z and slope there, and how far it came."""
+    layer, start, mu_start = locate(z, mu, count, here)
+    slope2 = w * w
+    energy = max((1.0 + mu_start) * slope2 / (1.0 + slope2), _NEVER)
+    end, w, gone, _, _, _ = advance(
+        z, mu, count, layer, start, mu_start, energy, w > 0.0, length, False, False
+    )
+    return end, w, gone
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
 def follow(
-    z, mu, count, radius, edge, segment, ground, launch, elevation, distance, heights
+    z, mu, count, radius, edge, segment, ground, block, launch, elevation, distance, heights
 ):  # pragma: no cover - compiled
     """One ray hop by hop; fills `heights` at `distance`; returns where it was blocked, or NaN."""
     here = radius * np.log1p(launch / radius)
     w = np.tan(elevation)
     asked = 0
     hops = segment.size
-    last = -1
-    layer = 0
     while asked < distance.size and distance[asked] <= edge[0]:
         heights[asked] = launch
         asked += 1
-    for k in range(hops):
-        s = segment[k]
-        x = edge[k]
-        while x < edge[k + 1]:
-            stop = edge[k + 1]
-            if asked < distance.size and distance[asked] < stop:
-                stop = distance[asked]
-            layer, start, mu_start = locate(z[s], mu[s], count[s], here)
-            slope2 = w * w
-            energy = (1.0 + mu_start) * slope2 / (1.0 + slope2)
-            end, w, gone, _, _, _ = advance(
-                z[s], mu[s], count[s], layer, start, mu_start, max(energy, _NEVER), w > 0.0,
-                stop - x, False, False,
-            )  # fmt: skip
-            if gone < stop - x:
-                return x + gone
-            here = end
-            x = stop
-            if asked < distance.size and distance[asked] <= x:
-                heights[asked] = radius * np.expm1(here / radius)
-                asked += 1
-        last = k + 1
-        if last < hops and ground[last] > radius * np.expm1(here / radius):
-            return edge[last]
+    for b in range(block.size - 1):
+        first, last = block[b], block[b + 1]
+        s = segment[first]
+        length = edge[last] - edge[first]
+        free = asked >= distance.size or distance[asked] >= edge[last]
+        if free:
+            highest = -np.inf
+            for k in range(first + 1, last + 1):
+                if k < hops:
+                    highest = max(highest, ground[k])
+            end, slope, gone = _hop(z[s], mu[s], count[s], here, w, length)
+            # A ray cannot lie deeper between its ends than its steeper slope takes it half-way.
+            lowest = min(here, end) - 0.5 * length * max(abs(w), abs(slope))
+            if gone >= length and (highest < 0.0 or radius * np.expm1(lowest / radius) > highest):
+                here, w = end, slope
+                if asked < distance.size and distance[asked] <= edge[last]:
+                    heights[asked] = radius * np.expm1(here / radius)
+                    asked += 1
+                continue
+        for k in range(first, last):
+            x = edge[k]
+            while x < edge[k + 1]:
+                stop = edge[k + 1]
+                if asked < distance.size and distance[asked] < stop:
+                    stop = distance[asked]
+                here, w, gone = _hop(z[s], mu[s], count[s], here, w, stop - x)
+                if gone < stop - x:
+                    return x + gone
+                x = stop
+                if asked < distance.size and distance[asked] <= x:
+                    heights[asked] = radius * np.expm1(here / radius)
+                    asked += 1
+            if k + 1 < hops and ground[k + 1] > radius * np.expm1(here / radius):
+                return edge[k + 1]
     return np.nan
 
 
 @njit(cache=True, nogil=True, parallel=True, error_model="numpy")
 def _trace_all(
-    z, mu, count, radius, edge, segment, ground, launch, angle, distance, heights, blocked
+    z, mu, count, radius, edge, segment, ground, block, launch, angle, distance, heights, blocked
 ):  # pragma: no cover - compiled
     cases, rays = angle.shape
     for task in prange(cases * rays):
@@ -362,6 +387,6 @@ def _trace_all(
         if not abs(angle[c, r]) < 0.5 * np.pi:
             continue
         blocked[c, r] = follow(
-            z[c], mu[c], count[c], radius[c], edge, segment, ground, launch[c], angle[c, r],
-            distance, heights[c, r],
+            z[c], mu[c], count[c], radius[c], edge, segment, ground, block, launch[c],
+            angle[c, r], distance, heights[c, r],
         )  # fmt: skip

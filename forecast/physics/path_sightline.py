@@ -133,12 +133,12 @@ def trace_path_sightline(
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def _height(
-    z, mu, count, radius, edge, segment, ground, launch, angle, far, out
+    z, mu, count, radius, edge, segment, ground, block, launch, angle, far, out
 ):  # pragma: no cover - compiled
     """Height of a ray at the target, NaN if blocked; and where it was."""
     out[0] = np.nan
     blocked = follow(
-        z, mu, count, radius, edge, segment, ground, launch, angle, far, out
+        z, mu, count, radius, edge, segment, ground, block, launch, angle, far, out
     )  # fmt: skip
     return out[0], blocked
 
@@ -174,8 +174,8 @@ def _rough(coarse, i):  # pragma: no cover - compiled
 
 @njit(cache=True, nogil=True, parallel=True, error_model="numpy")
 def _see_all(
-    z, mu, count, radius, edge, segment, ground, launch, base, top, low, high, margin, steepest,
-    state, floats, images, visible,
+    z, mu, count, radius, edge, segment, ground, block, launch, base, top, low, high, margin,
+    steepest, state, floats, images, visible,
 ):  # pragma: no cover - compiled  # fmt: skip
     far = edge[-1:]
     for c in prange(radius.size):
@@ -191,8 +191,8 @@ def _see_all(
         coarse = np.empty(_RAYS)
         for i in range(_RAYS):
             coarse[i], _ = _height(
-                z[c], mu[c], count[c], radius[c], edge, segment, ground, launch, start + i * step,
-                far, out,
+                z[c], mu[c], count[c], radius[c], edge, segment, ground, block, launch,
+                start + i * step, far, out,
             )  # fmt: skip
         size = 0
         before = np.nan
@@ -207,8 +207,8 @@ def _see_all(
             for part in range(1, parts + 1):
                 theta = start + (i - 1 + part / parts) * step
                 h, blocked = _height(
-                    z[c], mu[c], count[c], radius[c], edge, segment, ground, launch, theta, far,
-                    out,
+                    z[c], mu[c], count[c], radius[c], edge, segment, ground, block, launch, theta,
+                    far, out,
                 )  # fmt: skip
                 if np.isnan(h):
                     horizon = theta
@@ -220,7 +220,7 @@ def _see_all(
                     for _ in range(_HALVINGS):
                         middle = 0.5 * (a + b)
                         hm, bm = _height(
-                            z[c], mu[c], count[c], radius[c], edge, segment, ground, launch,
+                            z[c], mu[c], count[c], radius[c], edge, segment, ground, block, launch,
                             middle, far, out,
                         )  # fmt: skip
                         if np.isnan(hm) == np.isnan(before):
@@ -277,7 +277,7 @@ def _see_all(
                 turns = (height[i] - height[i - 1]) * (height[i + 1] - height[i]) < 0.0
                 if turns and not steep:
                     turn = _turn(
-                        z[c], mu[c], count[c], radius[c], edge, segment, ground, launch,
+                        z[c], mu[c], count[c], radius[c], edge, segment, ground, block, launch,
                         angle[i - 1], angle[i + 1], height[i] > height[i - 1], far, out,
                     )  # fmt: skip
                     if not np.isnan(turn):
@@ -337,25 +337,29 @@ def _mark_images(angle, height, size, wanted, steepest, c, floats, images):  # p
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def _turn(
-    z, mu, count, radius, edge, segment, ground, launch, a, b, largest, far, out
+    z, mu, count, radius, edge, segment, ground, block, launch, a, b, largest, far, out
 ):  # pragma: no cover - compiled
     """Largest or smallest height between two elevations, by golden sections."""
     share = 0.6180339887498949
     left = b - share * (b - a)
     right = a + share * (b - a)
-    fl, _ = _height(z, mu, count, radius, edge, segment, ground, launch, left, far, out)
-    fr, _ = _height(z, mu, count, radius, edge, segment, ground, launch, right, far, out)
+    fl, _ = _height(z, mu, count, radius, edge, segment, ground, block, launch, left, far, out)
+    fr, _ = _height(z, mu, count, radius, edge, segment, ground, block, launch, right, far, out)
     for _ in range(30):
         if np.isnan(fl) or np.isnan(fr):
             return np.nan
         if (fl > fr) == largest:
             b, right, fr = right, left, fl
             left = b - share * (b - a)
-            fl, _ = _height(z, mu, count, radius, edge, segment, ground, launch, left, far, out)
+            fl, _ = _height(
+                z, mu, count, radius, edge, segment, ground, block, launch, left, far, out
+            )
         else:
             a, left, fl = left, right, fr
             right = a + share * (b - a)
-            fr, _ = _height(z, mu, count, radius, edge, segment, ground, launch, right, far, out)
+            fr, _ = _height(
+                z, mu, count, radius, edge, segment, ground, block, launch, right, far, out
+            )
         if abs(fl - fr) < 1e-3:
             break
     return max(fl, fr) if largest else min(fl, fr)
