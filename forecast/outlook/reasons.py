@@ -8,11 +8,31 @@ import xarray as xr
 from forecast.outlook.seeing_words import seeing_words
 from forecast.physics.appearance import class_words
 from forecast.physics.moisture import CELSIUS_OFFSET
-from forecast.schema import DUCT_KINDS, SIGHTLINE_STATES, SURFACE_STATES
+from forecast.schema import (
+    DUCT_KINDS,
+    SIGHTLINE_STATES,
+    SURFACE_REASONS,
+    SURFACE_SOURCES,
+    SURFACE_STATES,
+)
 
 __all__ = ["duct_reason", "limits", "sightline_reason", "view_sentence"]
 
 _KIND_WORDS = {code: name.replace("_", " ") for name, code in DUCT_KINDS.items()}
+_UNKNOWN_WORDS = {
+    SURFACE_REASONS["none"]: "no reason is recorded",
+    SURFACE_REASONS["no_surface_temperature"]: "no temperature of water or ground",
+    SURFACE_REASONS["no_wind"]: "no wind",
+    SURFACE_REASONS["no_level_near_surface"]: "no level between 8 and 60 m",
+    SURFACE_REASONS["too_stable"]: "air too stable for any published function",
+    SURFACE_REASONS["not_converged"]: "their equations did not settle",
+}
+_SOURCE_WORDS = {
+    SURFACE_SOURCES["none"]: "source not recorded",
+    SURFACE_SOURCES["settings"]: "temperature from the settings",
+    SURFACE_SOURCES["series"]: "temperature from the series",
+    SURFACE_SOURCES["profile"]: "temperature from the data",
+}
 _LOW_LAYER = 65.0  # m, the lowest layer for which Rec. ITU-R P.453 gives gradient statistics
 
 
@@ -41,7 +61,7 @@ def sightline_reason(outlook: xr.Dataset, row: int, item: int) -> str:
             parts.append(f"It appears in {images} images, {inverted} of them upside down.")
         parts.append(_warming(outlook, row))
         parts.append(seeing_words(outlook, row, item))
-    parts.append(_water(outlook, row))
+    parts.append(_surface(outlook, row))
     parts.append(_lowest_layer(outlook, row))
     # Only a duct that the path can enter explains anything.
     reach = max(top, float(outlook["observer_height"].values[item]))
@@ -120,21 +140,20 @@ def _warming(outlook: xr.Dataset, row: int) -> str:
     return f"Air warms by {warming:.1f} K in the lowest {depth:.0f} m (from {lowest:.1f} °C)."
 
 
-def _water(outlook: xr.Dataset, row: int) -> str:
-    """What is known of the air next to the water, for sites that lie by the sea."""
+def _surface(outlook: xr.Dataset, row: int) -> str:
+    """What is known of the lowest metres, where the site says what its paths run over."""
     state = int(outlook["surface_layer_state"].values[row])
     if state == SURFACE_STATES["unknown"]:
-        return (
-            "The lowest metres over the water are not known (no water temperature, no wind or no "
-            "level between 8 and 60 m): less sure."
-        )
+        why = _UNKNOWN_WORDS[int(outlook["surface_layer_reason"].values[row])]
+        return f"The lowest metres are not known ({why}): less sure."
     if state != SURFACE_STATES["modelled"]:
         return ""
     difference = float(outlook["air_sea_temperature_difference"].values[row])
     side = "colder" if difference >= 0.0 else "warmer"
+    source = _SOURCE_WORDS[int(outlook["surface_source"].values[row])]
     return (
-        f"The water is {abs(difference):.1f} K {side} than the air above; the metres between are "
-        "modelled."
+        f"The surface under the path is {abs(difference):.1f} K {side} than the air above it "
+        f"({source}); the metres between are modelled."
     )
 
 

@@ -10,6 +10,7 @@ import pytest
 from forecast.ingest.water_series import WaterSeries
 from forecast.outlook import make_outlook
 from forecast.outlook import surface as surface_module
+from forecast.outlook.reasons import sightline_reason
 from forecast.outlook.surroundings import Surroundings
 from forecast.physics.moisture import specific_humidity_from_relative_humidity
 from forecast.physics.surface_layer import solve_sea
@@ -231,3 +232,16 @@ def test_the_joined_air_is_what_refraction_sees():
     plain = told({"surface": "none"})
     assert (value(plain, "level_origin")[:16] == LEVEL_ORIGINS["measured"]).all()
     assert value(plain, "surface_layer_state") == SURFACE_STATES["none"]
+
+
+def test_the_reason_says_what_is_known_of_the_lowest_metres_and_from_where():
+    def words(**more):
+        return sightline_reason(told(**more), 0, 0)
+
+    sea = {"sea_surface_temperature": 283.15}
+    assert "K colder than the air above it (temperature from the settings)" in words(site=sea)
+    assert "(temperature from the series)" in words(series=buoy(284.0))
+    assert "not known (no temperature of water or ground): less sure" in words()
+    assert "not known (no wind): less sure" in words(site=sea, wind=None)
+    calm = {"sea_surface_temperature": 278.15}
+    assert "(air too stable for any published function)" in words(site=calm, wind=0.3)
