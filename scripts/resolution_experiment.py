@@ -26,7 +26,7 @@ from forecast.physics.curvature import modified_refractivity
 from forecast.physics.ducts import find_ducts
 from forecast.physics.earth import MEAN_EARTH_RADIUS
 from forecast.physics.moisture import specific_humidity_from_relative_humidity
-from forecast.physics.rays import Medium, build_medium
+from forecast.physics.rays import Medium, build_medium, trace_rays
 from forecast.physics.refractive_index import optical_refractivity
 from forecast.physics.sightline import LARGEST_SQUEEZE, standard_medium, trace_sightlines
 from forecast.physics.stability import STABLE_FUNCTIONS
@@ -51,6 +51,7 @@ _MATCHED = 20.0  # m: the surface layer of the fine profiles ends here
 _ASCENT = 5.0  # m/s
 _STEP = np.array([10.0, 26.0, 36.0, 48.0, 60.0, 75.0, 90.0, 110.0, 135.0, 160.0, 190.0, 220.0,
                   260.0, 300.0, 340.0, 390.0, 450.0])  # fmt: skip  # m, between model levels
+_ARCSECOND = np.radians(1.0 / 3600.0)
 _STRONG = 0.2  # M-units; weaker ducts are left out of the count
 
 
@@ -231,11 +232,26 @@ def with_surface(
 
 
 class Seen(NamedTuple):
-    """Hidden heights (case, eye), m; whether targets are open (case, eye, target); ducts."""
+    """Hidden heights (case, eye), m; clear heights of the lowest eye (case,), m; ducts.
+
+    ``is_open``: whether targets are open (case, eye, target).
+    """
 
     hidden: Array
+    clear: Array
     is_open: NDArray[np.bool_]
     ducts: list[Array]
+
+
+def clear_heights(medium: Medium, eye: float, distance: float) -> Array:
+    """Lowest heights (m) that show 10″ or more above the apparent horizon, (column,).
+
+    Unlike the hidden height it does not hang on pencils of rays that no lens tells apart.
+    """
+    horizon = trace_sightlines(medium, eye, 50.0, distance).horizon_elevation[:, :1]
+    up = np.r_[np.arange(10.0, 60.0, 1.0), np.arange(60.0, 900.0, 10.0)] * _ARCSECOND
+    rays = trace_rays(medium, eye, horizon + up, distance, reflect=False)
+    return np.where(np.isnan(rays.blocked_at), rays.height, np.inf).min(axis=1)
 
 
 def _look(medium: Medium, targets: Array) -> tuple[Array, NDArray[np.bool_]]:
@@ -256,17 +272,14 @@ def _targets() -> Array:
 def see(state: dict[str, Array]) -> Seen:
     """Look through columns."""
     n = optical_refractivity(*(state[k] for k in list(state)[1:]))
-    hidden, is_open = _look(
-        build_medium(state["height"], n, MEAN_EARTH_RADIUS, "optical"), _targets()
-    )
+    medium = build_medium(state["height"], n, MEAN_EARTH_RADIUS, "optical")
+    hidden, is_open = _look(medium, _targets())
     table = find_ducts(
         state["height"], modified_refractivity(n, state["height"], MEAN_EARTH_RADIUS)
     )
-    ducts = []
-    for c in range(n.shape[0]):
-        strong = table.strength[c] >= _STRONG
-        ducts.append(np.stack([table.base[c][strong], table.top[c][strong]], axis=1))
-    return Seen(hidden, is_open, ducts)
+    extents = np.stack([table.base, table.top], axis=-1)
+    ducts = [e[s >= _STRONG] for e, s in zip(extents, table.strength, strict=True)]
+    return Seen(hidden, clear_heights(medium, EYES[0], DISTANCE), is_open, ducts)
 
 
 def _overlap(some: Array, others: Array) -> int:
@@ -279,20 +292,20 @@ def _overlap(some: Array, others: Array) -> int:
 
 def compare(truth: Seen, found: Seen, unknown: int | None) -> list[str]:
     """Cells of one row: errors by eye, sightlines, ducts, cases without a surface layer."""
-    off = np.abs(found.hidden - truth.hidden)
-    cells = [f"{np.median(off[:, k]):.1f} ({np.quantile(off[:, k], 0.9):.0f})" for k in range(3)]
+    off = np.abs(np.c_[found.hidden - truth.hidden, found.clear - truth.clear])
+    cells = [f"{np.median(a):.1f} ({np.quantile(a, 0.9):.0f})" for a in off.T]
     # A hit: the fine air makes of a target what standard air does not.
     usual = np.array([False, True])
     hit, same = truth.is_open != usual, found.is_open == truth.is_open
     kept, lost = np.count_nonzero(hit & same), np.count_nonzero(hit & ~same)
     cells.append(f"{kept} / {lost} / {np.count_nonzero(~hit & ~same)}")
-    there = sum(len(d) for d in truth.ducts)
     pairs = list(zip(truth.ducts, found.ducts, strict=True))
-    held = sum(_overlap(a, b) for a, b in pairs)
-    invented = sum(len(b) - _overlap(b, a) for a, b in pairs)
-    cells.append(f"{held} / {there - held} / {invented}")
-    cells.append("" if unknown is None else str(unknown))
-    return cells
+    held, gone, invented = (
+        sum(_overlap(a, b) for a, b in pairs),
+        sum(len(a) - _overlap(a, b) for a, b in pairs),
+        sum(len(b) - _overlap(b, a) for a, b in pairs),
+    )
+    return [*cells, f"{held} / {gone} / {invented}", "" if unknown is None else str(unknown)]
 
 
 def rows_of(kind: str, count: int) -> list[list[str]]:
@@ -308,7 +321,9 @@ def rows_of(kind: str, count: int) -> list[list[str]]:
 
     standard = trace_sightlines(standard_medium("optical"), EYES, 50.0, DISTANCE).hidden_height
     usual = np.broadcast_to(np.array([False, True]), truth.is_open.shape)
-    nothing = Seen(np.broadcast_to(standard, truth.hidden.shape), usual, [np.empty((0, 2))] * count)
+    clear = np.full(count, clear_heights(standard_medium("optical"), EYES[0], DISTANCE)[0])
+    no_ducts = [np.empty((0, 2))] * count
+    nothing = Seen(np.broadcast_to(standard, truth.hidden.shape), clear, usual, no_ducts)
     rows = [["standard air instead", *compare(truth, nothing, None)]]
     fine_on_few = _stack([_at(c.air, heights) for c in cases])
     makers: list[tuple[str, Callable[[], tuple[dict[str, Array], int | None]]]] = [
@@ -336,7 +351,8 @@ def _markdown(head: list[str], rows: list[list[str]]) -> str:
 
 def resolution_table(count: int = CASES // len(KINDS), kinds: tuple[str, ...] = KINDS) -> str:
     """Return the table of what is lost and mended, so many cases of each kind."""
-    head = ["air", "seen as", *(f"off, eye {e:.0f} m" for e in EYES), "sightlines", "ducts", "none"]
+    eyes = [f"hidden, eye {e:.0f} m" for e in EYES]
+    head = ["air", "seen as", *eyes, "clear, eye 4 m", "sightlines", "ducts", "none"]
     return _markdown(head, [row for kind in kinds for row in rows_of(kind, count)])
 
 
@@ -349,7 +365,7 @@ _SWEEP_AIR = (
 
 
 def sweep_table(distance: float = 40e3) -> str:
-    """Return hidden heights (m) by eye height over water colder and warmer than the air."""
+    """Return clear heights and, in brackets, hidden heights (m) by eye height over water."""
     media = {"standard air": standard_medium("optical")}
     for name, colder, wind in _SWEEP_AIR:
         layer = solve_sea(wind, 287.15, 0.0075, 101300.0, 287.15 + 0.196 - colder, air_height=20.0)
@@ -361,14 +377,14 @@ def sweep_table(distance: float = 40e3) -> str:
         p = 101325.0 * np.exp(-9.80665 / 287.05287 / 288.0 * FINE)
         n = optical_refractivity(p, t, q)
         media[name] = build_medium(FINE, n, MEAN_EARTH_RADIUS, "optical")
-    columns = [
-        trace_sightlines(m, _SWEEP_EYES, 50.0, distance, largest_squeeze=LARGEST_SQUEEZE)
-        for m in media.values()
-    ]
-    rows = [
-        [f"{eye:g} m", *(f"{c.hidden_height[0, k]:.1f}" for c in columns)]
-        for k, eye in enumerate(_SWEEP_EYES)
-    ]
+    cells = []
+    for medium in media.values():
+        hidden = trace_sightlines(
+            medium, _SWEEP_EYES, 50.0, distance, largest_squeeze=LARGEST_SQUEEZE
+        ).hidden_height[0]
+        clear = [clear_heights(medium, eye, distance)[0] for eye in _SWEEP_EYES]
+        cells.append([f"{c:.0f} ({h:.0f})" for c, h in zip(clear, hidden, strict=True)])
+    rows = [[f"{eye:g} m", *row] for eye, *row in zip(_SWEEP_EYES, *cells, strict=True)]
     return _markdown(["eye", *media], rows)
 
 
