@@ -163,8 +163,7 @@ def as_model(air: Column, rng: np.random.Generator) -> Column:
     """Model levels at 10 m, 36 m, 72 m and so on, each the mean of its layer."""
     z = np.cumsum(_STEP) * rng.uniform(0.95, 1.05)
     edges = np.r_[0.0, 0.5 * (z[1:] + z[:-1]), z[-1] + 100.0]
-    even = _at(air, _EVEN)
-    layer = np.digitize(even.z, edges) - 1
+    even, layer = _at(air, _EVEN), np.digitize(_EVEN, edges) - 1
     t, q = (np.array([a[layer == k].mean() for k in range(z.size)]) for a in (even.t, even.q))
     return Column(z, np.interp(z, air.z, air.p), t, q)
 
@@ -271,7 +270,8 @@ def _targets() -> Array:
 
 def see(state: dict[str, Array]) -> Seen:
     """Look through columns."""
-    n = optical_refractivity(*(state[k] for k in list(state)[1:]))
+    _, p, t, q = state.values()
+    n = optical_refractivity(p, t, q)
     medium = build_medium(state["height"], n, MEAN_EARTH_RADIUS, "optical")
     hidden, is_open = _look(medium, _targets())
     table = find_ducts(
@@ -393,7 +393,7 @@ def main(arguments: list[str] | None = None) -> int:
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     parser.add_argument("--cases", type=int, default=CASES, help="fine profiles in all")
     count = max(1, parser.parse_args(arguments).cases // len(KINDS))
-    sys.stdout.write(f"{resolution_table(count)}\n\n{sweep_table()}\n")
+    print(resolution_table(count), sweep_table(), sep="\n\n")
     return 0
 
 
