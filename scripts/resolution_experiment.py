@@ -312,8 +312,7 @@ def rows_of(kind: str, count: int) -> list[list[str]]:
     """Rows of the table for one kind of air."""
     rng = np.random.default_rng([SEED, KINDS.index(kind)])
     cases = [fine_case(kind, rng) for _ in range(count)]
-    errors = rng.standard_normal((2, count))
-    exact = np.zeros_like(errors)
+    errors, exact = rng.standard_normal((2, count)), np.zeros((2, count))
     sonde = [as_sonde(c.air, rng) for c in cases]
     model = [as_model(c.air, rng) for c in cases]
     heights = np.r_[SURFACE_HEIGHTS[SURFACE_HEIGHTS < _MATCHED], FINE[FINE >= _MATCHED]]
