@@ -73,7 +73,7 @@ def make_outlook(
     told = speaking_profiles(profiles, settings, around)
     radius = euler_radius(told.latitude)
     data = _best_guess(told.guess, radius, settings.chart_top)
-    geometry = sightline_geometry(lines, told.latitude, told.site)
+    geometry = sightline_geometry(lines, told.latitude, told.site, around)
     data.update(geometry)
     data.update(
         look_along(lines, told.air, told.latitude, told.site, geometry, told.stations, around)

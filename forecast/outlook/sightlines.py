@@ -19,7 +19,7 @@ from forecast.physics.column_batch import analyse_columns
 from forecast.physics.earth import MEAN_EARTH_RADIUS, euler_radius
 from forecast.physics.rays import build_medium
 from forecast.physics.refractive_index import optical_refractivity
-from forecast.physics.sightline import SightlineTable, standard_medium
+from forecast.physics.sightline import SightlineTable, standard_levels, standard_medium
 
 if TYPE_CHECKING:
     from forecast.settings import Sightline
@@ -28,6 +28,7 @@ __all__ = [
     "arrival_change",
     "line_airs",
     "look_along",
+    "plain_air",
     "sightline_geometry",
     "trace_paths",
     "wave_refractivity",
@@ -39,7 +40,10 @@ _BOUNDS = ("visible_bottom", "visible_top")
 
 
 def sightline_geometry(
-    lines: list[Sightline], latitude: np.ndarray, site: np.ndarray
+    lines: list[Sightline],
+    latitude: np.ndarray,
+    site: np.ndarray,
+    around: Surroundings = NOTHING_AROUND,
 ) -> dict[str, Any]:
     """Geometry of the sightlines, and what straight rays and standard air would show."""
     geometry: dict[str, Any] = {
@@ -58,8 +62,10 @@ def sightline_geometry(
         for i, line in enumerate(lines):
             here = latitude[site == line.site]
             radius = float(euler_radius(np.mean(here) if here.size else 45.0, line.azimuth))
-            air = standard_medium(line.wave if label == "standard" else "straight", radius)
-            table = SiteAir(air).trace(line)
+            if line.name in around.blind:
+                continue
+            wave = line.wave if label == "standard" else "straight"
+            table = plain_air(line, wave, radius, around).trace(line)
             hidden[i] = table.hidden_height[0, 0]
             elevation[i] = table.apparent_elevation[0, 0]
         geometry[f"hidden_height_{label}"] = ("sightline", hidden)
@@ -118,6 +124,20 @@ def line_airs(
             np.where(missing, np.nan, a[column]) for a in (state["height"], refractivity[key])
         )
         yield i, line, own, PathAirs(height, n, there.distance, radius, line, ground)
+
+
+def plain_air(
+    line: Sightline, wave: str, radius: float, around: Surroundings = NOTHING_AROUND
+) -> LineAir:
+    """Standard air (``radio``, ``optical``) or none (``straight``) over the ground of a sightline.
+
+    One column; ``radius`` in m.
+    """
+    ground = around.ground.get(line.name)
+    if ground is None:
+        return SiteAir(standard_medium(wave, radius))
+    z, n = standard_levels(wave)
+    return PathAirs(z[:, None], n[:, None], np.zeros(1), np.array([radius]), line, ground)
 
 
 def trace_paths(

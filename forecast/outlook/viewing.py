@@ -9,15 +9,14 @@ import xarray as xr
 
 from forecast.errors import InputError
 from forecast.outlook.along import Stations
-from forecast.outlook.line_air import LineAir, SiteAir, over_water
+from forecast.outlook.line_air import LineAir, over_water
 from forecast.outlook.reasons import sightline_reason, view_sentence
-from forecast.outlook.sightlines import line_airs, wave_refractivity
+from forecast.outlook.sightlines import line_airs, plain_air, wave_refractivity
 from forecast.outlook.speaking import Speaking
 from forecast.outlook.surroundings import NOTHING_AROUND, Surroundings
 from forecast.outlook.view import AIRS, SightlineView
 from forecast.physics.curvature import modified_refractivity
 from forecast.physics.ducts import find_ducts
-from forecast.physics.sightline import standard_medium
 from forecast.physics.transfer_curve import ARC_SECOND, straight_elevation, view_elevations
 from forecast.schema import SIGHTLINE_STATES
 
@@ -125,8 +124,8 @@ def view_sightline(
     radius = float(air.radius[0])
     airs: dict[str, LineAir] = {
         "air": air,
-        "standard": SiteAir(standard_medium(line.wave, radius)),
-        "straight": SiteAir(standard_medium("straight", radius)),
+        "standard": plain_air(line, line.wave, radius, around),
+        "straight": plain_air(line, "straight", radius, around),
     }
     observer, top, distance, base = over_water(line)
     tables = {name: airs[name].trace(line) for name in AIRS}

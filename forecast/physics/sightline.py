@@ -27,6 +27,7 @@ __all__ = [
     "GRAZING_MARGIN",
     "LARGEST_SQUEEZE",
     "SightlineTable",
+    "standard_levels",
     "standard_medium",
     "trace_sightlines",
 ]
@@ -173,9 +174,30 @@ def standard_medium(wave: str = "radio", earth_radius: float = MEAN_EARTH_RADIUS
     ValueError
         If `wave` is unknown.
     """
+    z, n = standard_levels(wave)
+    return build_medium(z, n, earth_radius, "optical" if wave == "optical" else "radio")
+
+
+def standard_levels(wave: str) -> tuple[np.ndarray, np.ndarray]:
+    """Heights (m) and N of `standard_medium`, each (1, level).
+
+    Parameters
+    ----------
+    wave : {"radio", "optical", "straight"}
+        Which standard.
+
+    Returns
+    -------
+    tuple of ndarray
+
+    Raises
+    ------
+    ValueError
+        If `wave` is unknown.
+    """
     z = np.concatenate([np.arange(0.0, 500.0, 10.0), np.geomspace(500.0, 20e3, 150)])[None, :]
     if wave == "straight":
-        return build_medium(z, np.zeros_like(z), earth_radius, "radio")
+        return z, np.zeros_like(z)
     if wave == "radio":
         # Linear as far as N stays positive, then the extension's exponential decay.
         keep = z < 6000.0
@@ -187,8 +209,8 @@ def standard_medium(wave: str = "radio", earth_radius: float = MEAN_EARTH_RADIUS
         # p/T in a constant lapse: exponent g M / (R L) - 1 with g M / R = 0.0341632 K/m.
         n = 277.84 * (1.0 - lapse * z / t0) ** (0.0341632 / lapse - 1.0)
     else:
-        raise ValueError(f"standard_medium: wave {wave!r}; choose radio, optical or straight")
-    return build_medium(z, n, earth_radius, wave)
+        raise ValueError(f"standard_levels: wave {wave!r}; choose radio, optical or straight")
+    return z, n
 
 
 @njit(cache=True, nogil=True, parallel=True, error_model="numpy")
