@@ -306,6 +306,12 @@ _ROWS = [
         "1",
         SIGHT,
     ),
+    Variable(
+        "clear_height",
+        "lowest height at the target's distance that shows 10 arc seconds above the horizon",
+        "m",
+        SIGHT,
+    ),
     Variable("apparent_height", "angle that all images of the target fill", "rad", SIGHT),
     Variable(
         "appearance",

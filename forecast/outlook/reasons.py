@@ -100,6 +100,9 @@ def view_sentence(outlook: xr.Dataset, row: int, item: int) -> str:
     stretch = float(outlook["magnification"].values[row, item])
     if np.isfinite(stretch):
         parts.append(f"{stretch:.2f} times as high as in straight rays")
+    clear = float(outlook["clear_height"].values[row, item])
+    if np.isfinite(clear) and clear >= 0.5:
+        parts.append(f"clear of the horizon (10″) from {clear:.0f} m up")
     change = 1e6 * float(outlook["arrival_change"].values[row, item])
     if np.isfinite(change) and abs(change) >= 1.0:
         parts.append(

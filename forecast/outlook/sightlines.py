@@ -170,7 +170,7 @@ def look_along(
     """
     found = _Table(site.size, len(lines))
     shape = (site.size, len(lines))
-    names = ("lift", "magnification", "apparent_height")
+    names = ("lift", "magnification", "apparent_height", "clear_height")
     looks = {name: np.full(shape, np.nan) for name in names}
     classes = np.zeros(shape, dtype=np.int16)
     blocked = np.full(shape, np.nan)

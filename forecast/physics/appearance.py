@@ -24,6 +24,7 @@ __all__ = ["Appearance", "appearance", "class_words"]
 
 _SMALLEST_IMAGE = 5.0 * ARC_SECOND  # thinner folds are not told; ours, the eye resolves some 60″
 _SMALLEST_FOLD, _FOLD_SHARE = 1.0, 0.02  # m, and share of the target: folds under both are not told
+_CLEAR = 10.0 * ARC_SECOND  # above the horizon; ours
 _SMALLEST_LIFT = 30.0 * ARC_SECOND  # half of what the eye resolves; ours
 _SMALLEST_STRETCH = 0.1  # share by which a target must be stretched or squeezed; ours
 #: Ray curvature by Earth's curvature in standard air, to which "raised" refers: 6.5 K/km.
@@ -38,13 +39,16 @@ class Appearance(NamedTuple):
     nothing were in the way), rad. ``magnification``: apparent height of the largest image, upright
     if there is one, by the height of the same part in straight rays; NaN for a point.
     ``apparent_height``: angle that all images of the target fill, rad; NaN for a point.
-    ``classes``: bits of `forecast.schema.APPEARANCES`.
+    ``clear_height``: lowest height at the target's distance that shows at least 10″ above the
+    horizon, m: unlike the lowest of all it does not hang on pencils of rays along the horizon, and
+    it is told of hidden targets too. ``classes``: bits of `forecast.schema.APPEARANCES`.
     """
 
     arrival_elevation: np.ndarray
     lift: np.ndarray
     magnification: np.ndarray
     apparent_height: np.ndarray
+    clear_height: np.ndarray
     classes: np.ndarray
 
 
@@ -77,7 +81,7 @@ def appearance(
     Returns
     -------
     Appearance
-        NaN and no class where nothing is seen.
+        NaN and no class where nothing is seen, but for the clear height.
 
     Notes
     -----
@@ -93,8 +97,14 @@ def appearance(
     visible = np.isfinite(seen) & np.isfinite(horizon)
     radius = np.broadcast_to(np.nan_to_num(np.asarray(radius, dtype=float), nan=1.0), seen.shape)
     low = np.minimum(horizon, straight_elevation(observer_height, base, distance, radius))
-    angle = view_elevations(np.where(visible, low, 0.0), np.where(visible, seen, 0.0))
+    known = np.isfinite(horizon)
+    # A hidden target has nothing to look for above the horizon but what is clear of it.
+    high = np.where(visible, seen, np.where(known, horizon, 0.0))
+    angle = view_elevations(np.where(known, low, 0.0), high)
     height = transfer(angle)
+    clear = np.where(angle >= horizon[:, None] + _CLEAR, height, np.inf)
+    clear_height = np.nanmin(clear, axis=1, initial=np.inf)
+    clear_height[~(known & np.isfinite(clear_height))] = np.nan
     # A point has images too: heights near it stand for it.
     slack = max(0.0, 0.5 * (2.0 * _SMALLEST_FOLD - (top - base)))
     columns = seen.size
@@ -135,6 +145,7 @@ def appearance(
         np.where(visible, lift, np.nan),
         magnification,
         np.where(visible & (top > base), upright[:, 5] + inverted[:, 5], np.nan),
+        clear_height,
         classes,
     )
 

@@ -89,6 +89,19 @@ def test_cold_water_lifts_and_squeezes_and_shows_what_standard_air_hides():
     assert np.isnan(lamp.magnification[0])  # a point has no height to stretch
 
 
+def test_the_clear_height_stands_ten_seconds_over_the_horizon():
+    # In straight rays: the height at 10″ above the dip, by plane trigonometry of the sphere; told
+    # of a hidden target too.
+    medium = standard_medium("straight", A)
+    for top in (20.0, 400.0):
+        found, table = looks(medium, 9.0, 0.0, top, 50e3)
+        angle = table.horizon_elevation[0, 0] + 10.0 * ARC_SECOND
+        assert straight_elevation(9.0, found.clear_height[0], 50e3, A) == pytest.approx(
+            angle, abs=1.5 * ARC_SECOND
+        )
+        assert found.clear_height[0] > table.hidden_height[0, 0]
+
+
 def test_nothing_seen_has_no_looks():
     found, _ = looks(air(STANDARD), 4.0, 0.0, 20.0, 60e3)
     assert np.isnan(found.arrival_elevation[0])
