@@ -26,8 +26,9 @@ from forecast.inputs import (
 if TYPE_CHECKING:
     import xarray as xr
 
+    from forecast.ingest.terrain import Terrain
     from forecast.outlook.surroundings import Surroundings
-    from forecast.settings import Settings
+    from forecast.settings import Settings, Sightline
 
 __all__ = ["Plan", "RunRecord", "read_profiles", "read_surroundings"]
 
@@ -61,9 +62,9 @@ class RunRecord:
 
     def refuse(self, site: str, path: Path, error: InputError) -> None:
         """Note a file that is set aside."""
-        reason = printable(error.reason, 500)
+        reason = f"{error.reason}; {error.remedy}" if error.remedy else error.reason
         self.set_aside.append(
-            {"site": printable(site), "file": printable(path.name), "reason": reason}
+            {"site": printable(site), "file": printable(path.name), "reason": printable(reason)}
         )
 
     @contextmanager
@@ -147,11 +148,27 @@ def read_surroundings(settings: Settings, record: RunRecord) -> Surroundings:
                 ridge = read_terrain(
                     line.terrain, observer=line.observer, target=line.target, distance=line.distance
                 )
+                _refuse_buried(line, ridge)
                 ground[line.name] = np.stack([ridge.distance, ridge.height], axis=-1)
             except InputError as error:
                 record.refuse(line.site, line.terrain, error)
                 blind.add(line.name)
     return Surroundings(water, ground, frozenset(blind))
+
+
+def _refuse_buried(line: Sightline, ridge: Terrain) -> None:
+    """Heights that lie under the ground are a mistake of one or the other."""
+    for what, height, at in (
+        ("the observer", line.observer_height, 0),
+        ("the target's top", line.target_height, -1),
+    ):
+        if height < ridge.height[at]:
+            raise InputError(
+                f"puts the ground at {ridge.height[at]:g} m under {what} of sightline "
+                f"{line.name!r}, which is at {height:g} m",
+                source=ridge.source,
+                remedy="heights in the settings are above mean sea level; check both",
+            )
 
 
 def _settle(plan: Plan, record: RunRecord, parts: list[xr.Dataset], strays: list[Stray]) -> None:

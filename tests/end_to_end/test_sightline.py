@@ -134,6 +134,10 @@ def test_terrain_sites_along_and_a_buoy_go_through_the_whole_job(tmp_path, capsy
     [
         ({"ness": NESS.replace("40.5,0\n", "")}, "ness.csv: reaches from 0 to 15.5 km"),
         ({"ness": NESS.replace("15,95", "15,")}, "ness.csv: has no height at 15.00 km"),
+        (
+            {"ness": NESS.replace("0,4\n", "0,14\n", 1)},
+            "ness.csv: puts the ground at 14 m under the",
+        ),
         ({"buoy": BUOY.replace("_c\n", "_k\n")}, "buoy.csv"),
     ],
 )
