@@ -45,7 +45,8 @@ __all__ = [
 ]
 
 _BLOCK = 100_000  # sightlines traced at once; bounds memory to some 25 MB
-_PLACE_TRACES = 4000  # sightlines of a row and line that all its places may take together
+_STAND_MEMBERS = 32  # of those there are; a sweep of heights needs no finer odds
+_PLACE_TRACES = 600  # sightlines of a row and line that all its places may take together
 _FEWEST_MEMBERS = 16  # but a place is never judged by fewer members than this
 
 
@@ -216,8 +217,9 @@ def stand_shares(
     Returns
     -------
     StandShares
-        Shares of the members that could be judged; NaN where none could. Many places are judged
-        by evenly chosen members only, never fewer than 16, so that the work stays bounded.
+        Shares of the members that could be judged; NaN where none could. Heights are judged by some
+        32 evenly chosen members, many places by fewer, never under 16: the work stays bounded, and
+        the intervals are as wide as that number makes them.
     """
     heights, distances = stand_heights(lines), place_distances(lines)
     stand = np.full((3, n_rows, *heights.shape), np.nan)
@@ -236,12 +238,13 @@ def stand_shares(
             shares.stand_members[:, i] = np.bincount(owner[few], minlength=n_rows)
             _count(views, owner[few], shares[:3], np.s_[i, : len(line.stand_heights)])
             continue
-        shares.stand_members[:, i] = members
+        few = own[rank[own] % np.maximum(1, members // _STAND_MEMBERS)[owner[own]] == 0]
+        shares.stand_members[:, i] = np.bincount(owner[few], minlength=n_rows)
         # One line at a time: all at once would not fit where lines and places are many.
-        views = trace_stands([line], {n: a[own] for n, a in state.items()}, latitude[own],
-                             site[own])  # fmt: skip
+        views = trace_stands([line], {n: a[few] for n, a in state.items()}, latitude[few],
+                             site[few])  # fmt: skip
         width = views.is_open.shape[-1]
-        _count(views, owner[own], shares[:3], np.s_[i, :width])
+        _count(views, owner[few], shares[:3], np.s_[i, :width])
         if not line.places:
             continue
         traced = len(line.places) * len(line.stand_heights)
