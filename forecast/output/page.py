@@ -138,6 +138,8 @@ def _minute(time: np.datetime64) -> str:
 def _window(rank: int, w: Window, zones: dict[str, ZoneInfo]) -> dict[str, Any]:
     zone = zones.get(w.site, ZoneInfo("UTC"))
     lower, upper = 100.0 * w.lower, 100.0 * w.upper
+    # A card shows the first sentence; the rest unfolds.
+    reason, _, more = w.reason.partition(". ")
     return {
         "rank": rank,
         "kind": w.kind,
@@ -159,7 +161,8 @@ def _window(rank: int, w: Window, zones: dict[str, ZoneInfo]) -> dict[str, Any]:
         "bar_lower": f"{lower:.1f}",
         "bar_width": f"{max(upper - lower, 0.0):.1f}",
         "valid_times": w.valid_times,
-        "reason": w.reason,
+        "reason": reason + "." if more else reason,
+        "more": more,
         "ahead": w.ahead,
     }
 

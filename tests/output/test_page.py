@@ -190,3 +190,14 @@ def test_control_characters_are_spelled_out(page):
     text = page()
     assert not re.search(r"[\0-\x08\x0b-\x1f\x7f\u202e]", text)
     assert r"\u202eturn" in text
+
+
+def test_a_card_shows_one_sentence_and_unfolds_the_rest(page, case):
+    text = page()
+    tags = [tag for tag, _ in Tags(text).tags]
+    assert tags.count("details") == tags.count("summary") > 0
+    # Nothing of a reason is lost by the split.
+    for reason in (window.reason for window in case[1][:3]):
+        head, _, rest = reason.partition(". ")
+        assert head.split("(")[0].strip() in text
+        assert rest.rsplit(";", 1)[-1].strip() in text
