@@ -197,7 +197,6 @@ def test_a_card_shows_one_sentence_and_unfolds_the_rest(page, case):
     tags = [tag for tag, _ in Tags(text).tags]
     assert tags.count("details") == tags.count("summary") > 0
     # Nothing of a reason is lost by the split.
-    for reason in (window.reason for window in case[1][:3]):
-        head, _, rest = reason.partition(". ")
-        assert head.split("(")[0].strip() in text
-        assert rest.rsplit(";", 1)[-1].strip() in text
+    head, _, rest = case[1][0].reason.partition(". ")  # the first window has the first card
+    assert head.split("(")[0].strip() in text
+    assert rest.rsplit(";", 1)[-1].strip() in text
