@@ -5,8 +5,7 @@ exact inside (`forecast.physics.rays`); at a boundary height and direction go on
 stations N is taken as linear in range at equal heights above the surface, and as that of the
 nearest station beyond the first and last one. With the default number of segments, halving them
 moves the height of a ray at the target by less than 2 % of what the change of the air along the
-way does (tested). Ground is a line of heights above the water; rays are held against it at its
-points and every `_GROUND_STEP` between, where a ray of Earth's own curvature sags by 2 cm.
+way does (tested). Ground is a line of heights above the water (`forecast.physics.path_rays`).
 """
 
 from __future__ import annotations
@@ -16,13 +15,14 @@ from typing import Any, NamedTuple
 import numpy as np
 
 from forecast.physics.compiled import njit, prange
-from forecast.physics.rays import EXTENSIONS, advance, build_medium, locate
+from forecast.physics.path_rays import trace_all
+from forecast.physics.rays import EXTENSIONS, build_medium
 
 __all__ = ["PathAir", "above_water", "build_path_air", "path_heights", "trace_path"]
 
 _SEGMENTS = 24  # at least so many where the air changes
-_GROUND_STEP = 1000.0  # m
-_NEVER = 1e-30
+_OWN_SLOPE = 1000.0  # m before the target: ground that rises to it from there is its own
+_CLIFF = 1e-3  # m over which a cliff is taken to rise
 
 
 class PathAir(NamedTuple):
@@ -32,8 +32,9 @@ class PathAir(NamedTuple):
     `forecast.physics.rays.Medium`; a case without air has ``count`` 0. ``radius`` (case,), m.
     ``edge``: distances at which rays are looked at, rising from 0 to the target's, m, (hop + 1,);
     ``segment``: which segment each hop runs through, (hop,); ``ground``: height of the ground at
-    each edge, m, (hop + 1,), −inf where it is water. ``block``: edges between which rays well over
-    the ground are taken at one go, each stretch within one segment, (stretch + 1,).
+    each edge, m, (hop + 1,), straight between, −inf where none is to block rays. ``block``: edges
+    between which rays well over the ground are taken at one go, each stretch within one segment,
+    (stretch + 1,); ``crest``: the highest ground of each, m, −inf where all is water, (stretch,).
     """
 
     z: np.ndarray
@@ -44,6 +45,7 @@ class PathAir(NamedTuple):
     segment: np.ndarray
     ground: np.ndarray
     block: np.ndarray
+    crest: np.ndarray
 
 
 def above_water(height: Any, offset: float) -> np.ndarray:
@@ -98,7 +100,9 @@ def build_path_air(
     wave : {"radio", "optical"}
         How profiles are continued outside their levels, `forecast.physics.rays.EXTENSIONS`.
     ground : array_like, optional
-        (point, 2): distance from the observer, not falling, and height above the water, m.
+        (point, 2): distance from the observer, not falling, and height above the water, m; two
+        heights at one distance are a cliff. Ground that rises to the target without a break
+        within the last kilometre is the target's own and blocks nothing.
     segments : int, optional
         How many, where there are several stations.
 
@@ -142,42 +146,51 @@ def build_path_air(
         np.repeat(radius, pieces),
         wave,
     )
-    points = _ground_points(ground, distance)
-    land = points[points[:, 1] > 0.0]
-    blocks = np.unique(np.concatenate([bounds, np.linspace(0.0, distance, _SEGMENTS + 1)]))
-    if not land.size:
-        blocks = bounds
-    edge = np.unique(np.concatenate([blocks, land[:, 0]]))
-    level = np.full(edge.size, -np.inf)
-    if land.size:
-        level = np.interp(edge, points[:, 0], points[:, 1])
-        level[level <= 0.0] = -np.inf
+    edge, level, block = _edges(bounds, ground, distance)
     hop = 0.5 * (edge[1:] + edge[:-1])
     segment = np.clip(np.searchsorted(bounds, hop) - 1, 0, pieces - 1)
+    crest = np.maximum(np.maximum.reduceat(level, block[:-1]), level[block[1:]])
+    crest[crest <= 0.0] = -np.inf
     shape = (cases, pieces, -1)
     return PathAir(
         medium.z.reshape(shape), medium.mu.reshape(shape), medium.count.reshape(cases, pieces),
-        radius, edge, segment, level, np.searchsorted(edge, blocks),
+        radius, edge, segment, level, block, crest,
     )  # fmt: skip
 
 
-def _ground_points(ground: Any, distance: float) -> np.ndarray:
-    """The ground's points within the path, with more between them."""
+def _edges(
+    bounds: np.ndarray, ground: Any, distance: float
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Edges at which rays are looked at, the ground there, and where stretches begin and end."""
+    water = np.full(bounds.size, -np.inf), np.arange(bounds.size)
     if ground is None:
-        return np.zeros((0, 2))
+        return bounds, *water
     points = np.asarray(ground, dtype=float)
     if points.ndim != 2 or points.shape[1] != 2 or not np.all(np.isfinite(points)):
         raise ValueError("build_path_air: ground must be (point, 2) of finite numbers")
-    if not np.all(np.diff(points[:, 0]) >= 0.0):
+    at, height = points.T
+    if not np.all(np.diff(at) >= 0.0):
         raise ValueError("build_path_air: distances of the ground must not fall")
-    if points[0, 0] > 1.0 or points[-1, 0] < distance - 1.0:
-        raise ValueError(
-            f"build_path_air: ground reaches from {points[0, 0]:g} to {points[-1, 0]:g} m; "
-            f"expected 0 to {distance:g} m"
-        )
-    more = np.arange(0.0, distance, _GROUND_STEP)
-    at = np.unique(np.clip(np.concatenate([points[:, 0], more]), 0.0, distance))
-    return np.stack([at, np.interp(at, points[:, 0], points[:, 1])], axis=-1)
+    if not (at.size and at[0] <= 1.0 and at[-1] >= distance - 1.0):
+        reach = f"from {at[0]:g} to {at[-1]:g} m" if at.size else "nowhere"
+        raise ValueError(f"build_path_air: ground reaches {reach}; expected 0 to {distance:g} m")
+    if np.all(height <= 0.0):
+        return bounds, *water
+    same = np.diff(at, prepend=-np.inf) == 0.0
+    at = np.maximum.accumulate(at + _CLIFF * same)
+    # Land and the points next to it, between which the shore lies; open water needs none.
+    near = height > 0.0
+    near[1:] |= height[:-1] > 0.0
+    near[:-1] |= height[1:] > 0.0
+    inside = at[near & (at > 0.0) & (at < distance)]
+    own = max(distance - _OWN_SLOPE, 0.0)
+    blocks = np.unique(np.concatenate([bounds, np.linspace(0.0, distance, _SEGMENTS + 1)]))
+    edge = np.unique(np.concatenate([blocks, inside, [own]]))
+    level = np.interp(edge, at, height)
+    falls = np.flatnonzero(np.diff(level) < 0.0)
+    first = max(int(np.searchsorted(edge, own)), int(falls[-1]) + 1 if falls.size else 0)
+    level[first + 1 :] = -np.inf
+    return edge, level, np.searchsorted(edge, blocks)
 
 
 def trace_path(air: PathAir, launch_height: Any, elevation: Any) -> tuple[np.ndarray, np.ndarray]:
@@ -196,8 +209,7 @@ def trace_path(air: PathAir, launch_height: Any, elevation: Any) -> tuple[np.nda
     -------
     height, blocked_at : ndarray
         m, (case, ray): height at the target's distance, NaN if the ray met water or ground
-        before; and where it did, NaN if it did not. The ground under the observer and under the
-        target does not block.
+        before; and where it did, m from the observer, NaN if it did not.
     """
     heights, blocked = _run(air, launch_height, elevation, air.edge[-1:])
     return heights[..., 0], blocked
@@ -230,7 +242,7 @@ def _run(
     launch = np.array(np.broadcast_to(np.asarray(launch_height, dtype=float), (cases,)))
     heights = np.full((*angle.shape, distance.size), np.nan)
     blocked = np.full(angle.shape, np.nan)
-    _trace_all(*air, launch, angle, distance, heights, blocked)
+    trace_all(*air, launch, angle, distance, heights, blocked)
     return heights, blocked
 
 
@@ -311,82 +323,3 @@ def _blend(z, n, station, middle, gradient, scale, out):  # pragma: no cover - c
                 out[0, c, m, k] = at
                 out[1, c, m, k] = one + share * (other - one)
                 k += 1
-
-
-@njit(cache=True, nogil=True, error_model="numpy")
-def _hop(z, mu, count, here, w, length):  # pragma: no cover - compiled
-    """Carry a ray over a length of one segment: Z and slope there, and how far it came."""
-    layer, start, mu_start = locate(z, mu, count, here)
-    slope2 = w * w
-    energy = max((1.0 + mu_start) * slope2 / (1.0 + slope2), _NEVER)
-    end, w, gone, _, _, _ = advance(
-        z, mu, count, layer, start, mu_start, energy, w > 0.0, length, False, False
-    )
-    return end, w, gone
-
-
-@njit(cache=True, nogil=True, error_model="numpy")
-def follow(
-    z, mu, count, radius, edge, segment, ground, block, launch, elevation, distance, heights
-):  # pragma: no cover - compiled
-    """One ray hop by hop; fills `heights` at `distance`; returns where it was blocked, or NaN."""
-    here = radius * np.log1p(launch / radius)
-    w = np.tan(elevation)
-    asked = 0
-    hops = segment.size
-    while asked < distance.size and distance[asked] <= edge[0]:
-        heights[asked] = launch
-        asked += 1
-    for b in range(block.size - 1):
-        first, last = block[b], block[b + 1]
-        s = segment[first]
-        length = edge[last] - edge[first]
-        free = asked >= distance.size or distance[asked] >= edge[last]
-        if free:
-            highest = -np.inf
-            for k in range(first + 1, last + 1):
-                if k < hops:
-                    highest = max(highest, ground[k])
-            end, slope, gone = _hop(z[s], mu[s], count[s], here, w, length)
-            # A ray cannot lie deeper between its ends than its steeper slope takes it half-way.
-            lowest = min(here, end) - 0.5 * length * max(abs(w), abs(slope))
-            if gone >= length and (highest < 0.0 or radius * np.expm1(lowest / radius) > highest):
-                here, w = end, slope
-                if asked < distance.size and distance[asked] <= edge[last]:
-                    heights[asked] = radius * np.expm1(here / radius)
-                    asked += 1
-                continue
-        for k in range(first, last):
-            x = edge[k]
-            while x < edge[k + 1]:
-                stop = edge[k + 1]
-                if asked < distance.size and distance[asked] < stop:
-                    stop = distance[asked]
-                here, w, gone = _hop(z[s], mu[s], count[s], here, w, stop - x)
-                if gone < stop - x:
-                    return x + gone
-                x = stop
-                if asked < distance.size and distance[asked] <= x:
-                    heights[asked] = radius * np.expm1(here / radius)
-                    asked += 1
-            if k + 1 < hops and ground[k + 1] > radius * np.expm1(here / radius):
-                return edge[k + 1]
-    return np.nan
-
-
-@njit(cache=True, nogil=True, parallel=True, error_model="numpy")
-def _trace_all(
-    z, mu, count, radius, edge, segment, ground, block, launch, angle, distance, heights, blocked
-):  # pragma: no cover - compiled
-    cases, rays = angle.shape
-    for task in prange(cases * rays):
-        c = task // rays
-        r = task % rays
-        if count[c].min() < 2 or not 0.0 <= launch[c] < np.inf:
-            continue
-        if not abs(angle[c, r]) < 0.5 * np.pi:
-            continue
-        blocked[c, r] = follow(
-            z[c], mu[c], count[c], radius[c], edge, segment, ground, block, launch[c],
-            angle[c, r], distance, heights[c, r],
-        )  # fmt: skip

@@ -1,10 +1,12 @@
 """What an observer sees of a far target through air and over ground that change along the way.
 
 Where `forecast.physics.sightline` knows every direction at which something happens, here a fan is
-cast and refined: where a ray that arrives has a neighbour that does not, the boundary is halved
-down, and where the height at the target turns, the turn is. Folds thinner than the fan's step (some
-5″) can be missed. Heights that run faster with elevation than `LARGEST_SQUEEZE` allows do not
-count, as there.
+cast and refined. Between two rays that turn in the same layers equally often (`path_rays.follow`)
+the height at the target is a smooth function of elevation: such a pair is halved until the ray
+between passes within `_MISFIT` of their mean. A pair that does not turn alike is halved on, down to
+the angle within which, at the most that `LARGEST_SQUEEZE` allows, heights run by no more than
+`_SEAM`; heights that run faster do not count, as there. Where a ray that arrives has a neighbour
+that does not, the boundary between them is halved down.
 """
 
 from __future__ import annotations
@@ -15,7 +17,8 @@ import numpy as np
 
 from forecast.physics.compiled import njit, prange
 from forecast.physics.lit_intervals import merge_intervals
-from forecast.physics.path_air import PathAir, follow
+from forecast.physics.path_air import PathAir
+from forecast.physics.path_rays import follow, meets_surface
 from forecast.physics.rays import locate
 from forecast.physics.sightline import GRAZING_MARGIN, LARGEST_SQUEEZE
 from forecast.physics.transfer_curve import straight_elevation
@@ -23,13 +26,16 @@ from forecast.schema import SIGHTLINE_STATES
 
 __all__ = ["PathTable", "trace_path_sightline"]
 
-_RAYS = 512  # of the fan
-_FINER = 8  # steps within one where the height at the target is rough
-_SMOOTH, _SMOOTH_SHARE = 1.0, 0.05  # m and share of a step: second differences under these are
-_HALVINGS = 24  # of a step: from seconds of arc to under a millionth of it
+_RAYS = 256  # of the fan, before it is refined
+_MISFIT, _MISFIT_SHARE = 0.02, 0.01  # m and share of a step
+_SEAM = 0.05  # m
+_FINEST = 1e-9  # rad, where nothing is too squeezed to count
+_HALVINGS = 24  # of a boundary between arriving and blocked
 _MARGIN = 5e-4  # rad beyond the directions that can matter
+_STEEPEST_LOOK = 0.5  # rad, down and up
+_HIGH = 2.0, 100.0  # times the target's top and m: heights over both need no refining
 _INTERVALS = 12
-_MOST = 6 * _RAYS
+_MOST = 16384  # rays of one case
 _SHUT = SIGHTLINE_STATES["shut"]
 _GRAZING = SIGHTLINE_STATES["grazing"]
 _OPEN = SIGHTLINE_STATES["open"]
@@ -38,7 +44,8 @@ _OPEN = SIGHTLINE_STATES["open"]
 class PathTable(NamedTuple):
     """Result of `trace_path_sightline`: the fields of `SightlineTable`, arrays (case, 1), and more.
 
-    ``horizon_elevation`` is that of the highest ray that meets water or ground before the target.
+    ``horizon_elevation`` is that of the highest ray that meets water or ground on the way, or water
+    behind the target if the last segment's air went on.
     ``blocked_by``, ``blocked_by_height``: distance and height, m, of the ground that stops the
     ray just under the lowest visible one; NaN where that is the water or nothing, (case,).
     """
@@ -97,10 +104,10 @@ def trace_path_sightline(
     cases = air.radius.size
     distance = float(air.edge[-1])
     radius = float(np.nanmean(air.radius))
-    land = np.flatnonzero(np.isfinite(air.ground[1:])) + 1
+    land = np.flatnonzero(air.ground[1:] > 0.0) + 1
     crests = (air.ground[land] - observer_height) / air.edge[land]
-    # From the base in straight rays to the top in rays as curved as the Earth; what air that
-    # bends more does is found in the kernel.
+    # From the base in straight rays to the top in rays as curved as the Earth; the kernel widens
+    # this for air that bends more.
     base = float(straight_elevation(observer_height, target_base_height, distance, radius))
     low = min(base, 0.0) - _MARGIN
     high = max([(target_height - observer_height) / distance, 0.0, *crests]) + _MARGIN
@@ -132,15 +139,11 @@ def trace_path_sightline(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _height(
-    z, mu, count, radius, edge, segment, ground, block, launch, angle, far, out
-):  # pragma: no cover - compiled
-    """Height of a ray at the target, NaN if blocked; and where it was."""
+def _look(air, launch, angle, far, out, track):  # pragma: no cover - compiled
+    """Height at the target, NaN if blocked; where it was blocked; and the mark of its turns."""
     out[0] = np.nan
-    blocked = follow(
-        z, mu, count, radius, edge, segment, ground, block, launch, angle, far, out
-    )  # fmt: skip
-    return out[0], blocked
+    blocked, mark = follow(air, launch, angle, far, out, track)
+    return out[0], blocked, mark
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -158,136 +161,185 @@ def _critical(z, mu, count, radius, launch):  # pragma: no cover - compiled
     return below, above
 
 
+@njit(cache=True, nogil=True, error_model="numpy")
+def _cast(air, launch, low, high, top, finest, far, rays, marks):  # pragma: no cover - compiled
+    """Cast the fan and refine it; returns how many rays there are.
+
+    Fills rows of `rays`: elevation, height at the target, where blocked, whether it ever meets
+    water or ground.
+    """
+    z, mu, count = air[:3]
+    out, track = np.empty(1), np.empty(2)
+    # Rays still to be looked at, the next one last: elevation, height, blocked, meets.
+    waiting = np.empty((4, 80))
+    waiting_marks = np.empty(80, dtype=np.int64)
+    size = 0
+    high_enough = _HIGH[0] * top + _HIGH[1]
+    for k in range(_RAYS):
+        angle = low + (high - low) * k / (_RAYS - 1)
+        stack = 1
+        waiting[0, 0] = angle
+        waiting[1, 0], waiting[2, 0], waiting_marks[0] = _look(air, launch, angle, far, out, track)
+        waiting[3, 0] = 1.0
+        if not np.isnan(waiting[1, 0]):
+            s = count.size - 1
+            waiting[3, 0] = meets_surface(z[s], mu[s], count[s], track[0], track[1])
+        while stack > 0:
+            top_of = stack - 1
+            b, hb = waiting[0, top_of], waiting[1, top_of]
+            if k > 0 and stack < 79 and size < _MOST - 2 * (_RAYS - k) - 80:
+                a, ha = rays[0, size - 1], rays[1, size - 1]
+                alike = marks[size - 1] == waiting_marks[top_of]
+                arrive = not (np.isnan(ha) or np.isnan(hb))
+                matters = b - a > finest
+                if np.isnan(ha) and np.isnan(hb):
+                    matters = matters and not alike
+                elif arrive:
+                    matters = matters and min(ha, hb) < high_enough
+                if matters:
+                    middle = 0.5 * (a + b)
+                    h, blocked, mark = _look(air, launch, middle, far, out, track)
+                    bend = abs(h - 0.5 * (ha + hb))
+                    straight = bend < _MISFIT + _MISFIT_SHARE * abs(hb - ha)
+                    if not (arrive and alike and straight and mark == marks[size - 1]):
+                        meets = 1.0
+                        if not np.isnan(h):
+                            s = count.size - 1
+                            meets = meets_surface(z[s], mu[s], count[s], track[0], track[1])
+                        waiting[0, stack], waiting[1, stack] = middle, h
+                        waiting[2, stack], waiting[3, stack] = blocked, meets
+                        waiting_marks[stack] = mark
+                        stack += 1
+                        continue
+            rays[:, size] = waiting[:, top_of]
+            marks[size] = waiting_marks[top_of]
+            size += 1
+            stack -= 1
+    return size
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _boundary(air, launch, a, b, far):  # pragma: no cover - compiled
+    """Halve down between a blocked ray at `a` and one that arrives at `b`.
+
+    Returns the elevation of the last that arrives, its height, and where the other was blocked.
+    """
+    out, track = np.empty(1), np.empty(2)
+    kept, at = np.nan, np.nan
+    for _ in range(_HALVINGS):
+        middle = 0.5 * (a + b)
+        h, blocked, _ = _look(air, launch, middle, far, out, track)
+        if np.isnan(h):
+            a, at = middle, blocked
+        else:
+            b, kept = middle, h
+    return b, kept, at
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _horizon(air, launch, rays, size, far):  # pragma: no cover - compiled
+    """Elevation of the highest ray that ever meets water or ground."""
+    z, mu, count = air[:3]
+    last = -1
+    for i in range(size):
+        if rays[3, i] > 0.0:
+            last = i
+    if last < 0 or last == size - 1:
+        return rays[0, last] if last >= 0 else np.nan
+    out, track = np.empty(1), np.empty(2)
+    a, b = rays[0, last], rays[0, last + 1]
+    s = count.size - 1
+    for _ in range(_HALVINGS):
+        middle = 0.5 * (a + b)
+        h, _, _ = _look(air, launch, middle, far, out, track)
+        if np.isnan(h) or meets_surface(z[s], mu[s], count[s], track[0], track[1]):
+            a = middle
+        else:
+            b = middle
+    return a
+
+
 @njit(cache=True, nogil=True)
-def _rough(coarse, i):  # pragma: no cover - compiled
-    """Whether the fan's step before ray i may hide a fold, or ends in a blocked ray."""
-    if np.isnan(coarse[i]) != np.isnan(coarse[i - 1]):
-        return True
-    for k in range(max(i - 1, 1), min(i + 1, coarse.size - 1)):
-        one, two = coarse[k] - coarse[k - 1], coarse[k + 1] - coarse[k]
-        if abs(two - one) > _SMOOTH + _SMOOTH_SHARE * (abs(one) + abs(two)):
-            return True
-        if np.isnan(two - one) and not np.isnan(coarse[k]):
-            return True
-    return False
+def _is_steep(rays, i, steepest):  # pragma: no cover - compiled
+    """Whether the heights of rays i − 1 and i run too fast with elevation to count."""
+    gap = abs(rays[1, i] - rays[1, i - 1])
+    return gap > steepest * (rays[0, i] - rays[0, i - 1]) and gap > 0.01 * _SEAM
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _with_boundaries(air, launch, raw, size, far, rays):  # pragma: no cover - compiled
+    """Copy the fan with the boundaries of what is blocked put in.
+
+    Returns how many rays there are, and what blocks the ray just under the lowest that arrives.
+    """
+    n = 0
+    lowest, stopped = np.inf, np.nan
+    for i in range(size):
+        arrives = not np.isnan(raw[1, i])
+        if i > 0 and arrives == np.isnan(raw[1, i - 1]):
+            blocked = i - 1 if arrives else i
+            edge, kept, at = _boundary(
+                air, launch, raw[0, blocked], raw[0, 2 * i - 1 - blocked], far
+            )
+            if not np.isnan(kept):
+                rays[0, n], rays[1, n] = edge, kept
+                n += 1
+                if arrives and kept < lowest:
+                    lowest = kept
+                    stopped = at if not np.isnan(at) else raw[2, blocked]
+        rays[0, n], rays[1, n] = raw[0, i], raw[1, i]
+        n += 1
+    return n, stopped
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _lit_heights(rays, size, steepest, lit):  # pragma: no cover - compiled
+    """Intervals of height that rays light up between neighbours; returns how many."""
+    lits = 0
+    low, high = np.inf, -np.inf
+    for i in range(size):
+        arrives = not np.isnan(rays[1, i])
+        if not arrives or (i > 0 and _is_steep(rays, i, steepest)):
+            if high > low:
+                lit[0, lits], lit[1, lits] = max(low, 0.0), high
+                lits += 1
+            low, high = np.inf, -np.inf
+        if arrives:
+            low, high = min(low, rays[1, i]), max(high, rays[1, i])
+    # The fan's last ray is only the first of those that leave upwards.
+    if size > 0 and not np.isnan(rays[1, size - 1]):
+        lit[0, lits], lit[1, lits] = max(low, 0.0), np.inf
+        lits += 1
+    return merge_intervals(lit, lits)
 
 
 @njit(cache=True, nogil=True, parallel=True, error_model="numpy")
 def _see_all(
-    z, mu, count, radius, edge, segment, ground, block, launch, base, top, low, high, margin,
+    z, mu, count, radius, edge, segment, ground, block, crest, launch, base, top, low, high, margin,
     steepest, state, floats, images, visible,
 ):  # pragma: no cover - compiled  # fmt: skip
     far = edge[-1:]
+    finest = max(_SEAM / steepest, _FINEST)
     for c in prange(radius.size):
         if count[c].min() < 2:
             continue
-        out = np.empty(1)
-        angle = np.empty(_MOST)
-        height = np.empty(_MOST)
-        lit = np.empty((2, _MOST))
+        air = (z[c], mu[c], count[c], radius[c], edge, segment, ground, block, crest)
+        out, track = np.empty(1), np.empty(2)
+        raw = np.empty((4, _MOST))
+        marks = np.empty(_MOST, dtype=np.int64)
+        rays = np.empty((2, 2 * _MOST))
+        lit = np.empty((2, 2 * _MOST))
         below, above = _critical(z[c], mu[c], count[c], radius[c], launch)
-        start = min(low, -1.1 * np.sqrt(below) - _MARGIN)
-        step = (max(high, 1.1 * np.sqrt(above) + _MARGIN) - start) / (_RAYS - 1)
-        coarse = np.empty(_RAYS)
-        for i in range(_RAYS):
-            coarse[i], _ = _height(
-                z[c], mu[c], count[c], radius[c], edge, segment, ground, block, launch,
-                start + i * step, far, out,
-            )  # fmt: skip
-        size = 0
-        before = np.nan
-        horizon = np.nan
-        stopped = np.nan
-        first = np.nan
-        last = start
-        for i in range(_RAYS):
-            parts = 1
-            if i > 0 and _rough(coarse, i):
-                parts = _FINER
-            for part in range(1, parts + 1):
-                theta = start + (i - 1 + part / parts) * step
-                h, blocked = _height(
-                    z[c], mu[c], count[c], radius[c], edge, segment, ground, block, launch, theta,
-                    far, out,
-                )  # fmt: skip
-                if np.isnan(h):
-                    horizon = theta
-                if i > 0 and np.isnan(h) != np.isnan(before):
-                    # The boundary between blocked and arriving: keep both its sides.
-                    a, b = last, theta
-                    at = stopped if np.isnan(before) else blocked
-                    kept = np.nan
-                    for _ in range(_HALVINGS):
-                        middle = 0.5 * (a + b)
-                        hm, bm = _height(
-                            z[c], mu[c], count[c], radius[c], edge, segment, ground, block, launch,
-                            middle, far, out,
-                        )  # fmt: skip
-                        if np.isnan(hm) == np.isnan(before):
-                            a = middle
-                        else:
-                            b = middle
-                        if np.isnan(hm):
-                            at = bm
-                        else:
-                            kept = hm
-                    if not np.isnan(kept) and size < _MOST - 2:
-                        if np.isnan(before):
-                            # Blocked below, arriving above: a new stretch begins.
-                            angle[size], height[size] = a, np.nan
-                            angle[size + 1], height[size + 1] = b, kept
-                            horizon = a
-                            if np.isnan(first) or kept < first:
-                                first = kept
-                                floats[4, c] = at
-                        else:
-                            angle[size], height[size] = a, kept
-                            angle[size + 1], height[size + 1] = b, np.nan
-                        size += 2
-                if size < _MOST:
-                    angle[size], height[size] = theta, h
-                    size += 1
-                before = h
-                last = theta
-                if np.isnan(h):
-                    stopped = blocked
-        # Where the height turns between rays, the turn itself belongs to what is lit.
-        lits = 0
-        run_low = np.inf
-        run_high = -np.inf
-        for i in range(size):
-            if np.isnan(height[i]):
-                if run_high > run_low and lits < _MOST:
-                    lit[0, lits], lit[1, lits] = max(run_low, 0.0), run_high
-                    lits += 1
-                run_low, run_high = np.inf, -np.inf
-                continue
-            steep = False
-            if i > 0 and not np.isnan(height[i - 1]):
-                gap = abs(height[i] - height[i - 1])
-                steep = gap > steepest * (angle[i] - angle[i - 1]) and gap > 0.1
-            if steep:
-                if run_high > run_low and lits < _MOST:
-                    lit[0, lits], lit[1, lits] = max(run_low, 0.0), run_high
-                    lits += 1
-                run_low, run_high = np.inf, -np.inf
-            run_low = min(run_low, height[i])
-            run_high = max(run_high, height[i])
-            if 0 < i < size - 1 and not np.isnan(height[i - 1]) and not np.isnan(height[i + 1]):
-                turns = (height[i] - height[i - 1]) * (height[i + 1] - height[i]) < 0.0
-                if turns and not steep:
-                    turn = _turn(
-                        z[c], mu[c], count[c], radius[c], edge, segment, ground, block, launch,
-                        angle[i - 1], angle[i + 1], height[i] > height[i - 1], far, out,
-                    )  # fmt: skip
-                    if not np.isnan(turn):
-                        run_low = min(run_low, turn)
-                        run_high = max(run_high, turn)
-        # The fan's last ray is only the first of those that leave upwards.
-        if size > 0 and not np.isnan(height[size - 1]) and lits < _MOST:
-            lit[0, lits], lit[1, lits] = max(run_low, 0.0), np.inf
-            lits += 1
-        lits = merge_intervals(lit, lits)
+        first = min(low, -1.1 * np.sqrt(below) - _MARGIN)
+        while first > -_STEEPEST_LOOK and _look(air, launch, first, far, out, track)[0] > base:
+            first *= 1.5
+        last = max(high, 1.1 * np.sqrt(above) + _MARGIN)
+        while last < _STEEPEST_LOOK and not _look(air, launch, last, far, out, track)[0] > top:
+            last *= 1.5
+        size = _cast(air, launch, first, last, top, finest, far, raw, marks)
+        floats[3, c] = _horizon(air, launch, raw, size, far)
+        size, floats[4, c] = _with_boundaries(air, launch, raw, size, far, rays)
+        lits = _lit_heights(rays, size, steepest, lit)
         extent = 0.0
         highest = np.nan
         above_edge = 0.0
@@ -303,11 +355,10 @@ def _see_all(
         for i in range(min(lits, _INTERVALS)):
             visible[0, c, i], visible[1, c, i] = lit[0, i], lit[1, i]
         floats[1, c] = extent
-        floats[3, c] = horizon
         if np.isnan(highest):
             state[c] = _SHUT
             continue
-        _mark_images(angle, height, size, highest, steepest, c, floats, images)
+        floats[2, c] = _mark_images(air, launch, far, rays, size, highest, steepest, images[:, c])
         if top == base:
             clear = above_edge >= margin
         else:
@@ -316,50 +367,29 @@ def _see_all(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _mark_images(angle, height, size, wanted, steepest, c, floats, images):  # pragma: no cover
-    """Count the directions in which a height appears; the highest is where it is seen."""
-    for i in range(size - 1):
-        a, b = height[i], height[i + 1]
-        if np.isnan(a) or np.isnan(b) or a == b or (a - wanted) * (b - wanted) > 0.0:
+def _mark_images(air, launch, far, rays, size, wanted, steepest, images):  # pragma: no cover
+    """Count the directions in which a height appears; returns the highest, in which it is seen."""
+    found = -1
+    nearest, seen = np.inf, np.nan
+    for i in range(1, size):
+        a, b = rays[1, i - 1], rays[1, i]
+        if not np.isnan(b) and abs(b - wanted) <= nearest:
+            nearest, seen = abs(b - wanted), rays[0, i]
+        if np.isnan(a) or np.isnan(b) or _is_steep(rays, i, steepest):
             continue
-        if b == wanted and i + 2 < size and not np.isnan(height[i + 2]):
-            continue  # the next pair begins with it
-        step = angle[i + 1] - angle[i]
-        if abs(b - a) > steepest * step and abs(b - a) > 0.1:
-            continue
-        images[0 if b > a else 1, c] += 1
-        floats[2, c] = angle[i] + step * (wanted - a) / (b - a)
-    if np.isnan(floats[2, c]):
-        for i in range(size):
-            if not np.isnan(height[i]) and abs(height[i] - wanted) < 0.2:
-                floats[2, c] = angle[i]
-
-
-@njit(cache=True, nogil=True, error_model="numpy")
-def _turn(
-    z, mu, count, radius, edge, segment, ground, block, launch, a, b, largest, far, out
-):  # pragma: no cover - compiled
-    """Largest or smallest height between two elevations, by golden sections."""
-    share = 0.6180339887498949
-    left = b - share * (b - a)
-    right = a + share * (b - a)
-    fl, _ = _height(z, mu, count, radius, edge, segment, ground, block, launch, left, far, out)
-    fr, _ = _height(z, mu, count, radius, edge, segment, ground, block, launch, right, far, out)
-    for _ in range(30):
-        if np.isnan(fl) or np.isnan(fr):
-            return np.nan
-        if (fl > fr) == largest:
-            b, right, fr = right, left, fl
-            left = b - share * (b - a)
-            fl, _ = _height(
-                z, mu, count, radius, edge, segment, ground, block, launch, left, far, out
-            )
+        if (a - wanted) * (b - wanted) < 0.0 or (a == wanted and b != wanted):
+            images[0 if b > a else 1] += 1
+            found = i
+    if found < 0:
+        return seen
+    out, track = np.empty(1), np.empty(2)
+    low, high = rays[0, found - 1], rays[0, found]
+    rising = rays[1, found] > rays[1, found - 1]
+    for _ in range(_HALVINGS):
+        middle = 0.5 * (low + high)
+        h, _, _ = _look(air, launch, middle, far, out, track)
+        if (h < wanted) == rising:
+            low = middle
         else:
-            a, left, fl = left, right, fr
-            right = a + share * (b - a)
-            fr, _ = _height(
-                z, mu, count, radius, edge, segment, ground, block, launch, right, far, out
-            )
-        if abs(fl - fr) < 1e-3:
-            break
-    return max(fl, fr) if largest else min(fl, fr)
+            high = middle
+    return 0.5 * (low + high)
