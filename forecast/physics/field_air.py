@@ -1,0 +1,111 @@
+"""What the air does to a wave along one range step: index on the grid, and the phase it adds.
+
+Heights are conformal, ``Z = a ln(1 + z/a)``, and the index is ``m = n (1 + z/a)``: in them waves
+over a sphere are waves over a plane, exactly so but for the spreading around the sphere (as for
+rays, `forecast.physics.rays`).
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from forecast.physics.compiled import njit
+from forecast.physics.rays import Medium
+
+__all__ = ["apply_screen", "average_index"]
+
+
+def average_index(medium: Medium, step: float, points: int) -> np.ndarray:
+    """Modified index minus 1 on a grid of conformal heights, each the mean over its cell.
+
+    A mean keeps what a layer thinner than a step does to the wave; a sample would miss it or
+    take it for a whole step.
+
+    Parameters
+    ----------
+    medium : Medium
+        Air, (column,).
+    step : float
+        Height step, m.
+    points : int
+        Heights from the surface on, ``n step``.
+
+    Returns
+    -------
+    ndarray
+        Shape (column, points).
+    """
+    radius = medium.radius[:, None]
+    height = radius * np.expm1(medium.z / radius)
+    excess = medium.mu / (1.0 + np.sqrt(1.0 + medium.mu))
+    refractivity = (excess - height / radius) / (1.0 + height / radius)
+    # N is linear in height between levels however far apart they are; μ(Z) only where near.
+    edges = radius * np.expm1(step * (np.arange(points) + 0.5) / radius)
+    out = np.empty((medium.z.shape[0], points))
+    _average(height, refractivity, medium.count, edges, out)
+    above = np.expm1(step * np.arange(points) / radius)
+    return out + (1.0 + out) * above
+
+
+@njit(cache=True, nogil=True)
+def _average(z, value, count, edges, out):  # pragma: no cover - compiled
+    for c in range(out.shape[0]):
+        node = 0
+        low = 0.0
+        for n in range(out.shape[1]):
+            high = edges[c, n]
+            total = 0.0
+            here = low
+            while here < high:
+                while node < count[c] - 2 and z[c, node + 1] <= here:
+                    node += 1
+                slope = (value[c, node + 1] - value[c, node]) / (z[c, node + 1] - z[c, node])
+                end = high
+                if node < count[c] - 2:
+                    end = min(high, z[c, node + 1])
+                middle = 0.5 * (here + end)
+                total += (end - here) * (value[c, node] + slope * (middle - z[c, node]))
+                here = end
+            out[c, n] = total / (high - low)
+            low = high
+
+
+@njit(cache=True, nogil=True, fastmath=False)
+def apply_screen(
+    field: Any, index: Any, profile: int, share: float, first: float, phase: float, tilt: float,
+    loss: Any,
+) -> None:  # fmt: skip # pragma: no cover - compiled
+    """Multiply a field by the phase and the loss of one range step, in place.
+
+    Parameters
+    ----------
+    field : ndarray of complex
+        Shape (case, height).
+    index : ndarray
+        Modified index against the reference, shape (case, profile, height).
+    profile : int
+        The profile just behind; ``share`` (0…1) of the way to the next.
+    share : float
+        As above.
+    first : float
+        Height of the field's first value in steps of the index's grid.
+    phase : float
+        Phase per unit of index, rad.
+    tilt : float
+        Phase per step of height, rad, where the ground changes its slope.
+    loss : ndarray
+        Factor at each height.
+    """
+    start = int(first)
+    part = first - start
+    after = min(profile + 1, index.shape[1] - 1)
+    for c in range(field.shape[0]):
+        for n in range(field.shape[1]):
+            i = start + n
+            j = min(i + 1, index.shape[2] - 1)
+            here = (1.0 - part) * index[c, profile, i] + part * index[c, profile, j]
+            ahead = (1.0 - part) * index[c, after, i] + part * index[c, after, j]
+            angle = phase * ((1.0 - share) * here + share * ahead) + tilt * (n + 1)
+            field[c, n] *= loss[n] * (np.cos(angle) + 1j * np.sin(angle))
