@@ -30,6 +30,7 @@ _RAYS = 256  # of the fan, before it is refined
 _MISFIT, _MISFIT_SHARE = 0.02, 0.01  # m and share of a step
 _SEAM = 0.05  # m
 _FINEST = 1e-9  # rad, where nothing is too squeezed to count
+_SHARP = 1e-8  # rad, to which a turn is found
 _HALVINGS = 24  # of a boundary between arriving and blocked
 _MARGIN = 5e-4  # rad beyond the directions that can matter
 _STEEPEST_LOOK = 0.5  # rad, down and up
@@ -147,6 +148,14 @@ def _look(air, launch, angle, far, out, track):  # pragma: no cover - compiled
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
+def _meets(air, height, track):  # pragma: no cover - compiled
+    """Whether a ray just looked at ever meets water or ground."""
+    z, mu, count = air[:3]
+    s = count.size - 1
+    return np.isnan(height) or meets_surface(z[s], mu[s], count[s], track[0], track[1])
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
 def _critical(z, mu, count, radius, launch):  # pragma: no cover - compiled
     """Largest energies that the air under and over the eye can take from a ray, of any segment."""
     below = 0.0
@@ -168,7 +177,6 @@ def _cast(air, launch, low, high, top, finest, far, rays, marks):  # pragma: no 
     Fills rows of `rays`: elevation, height at the target, where blocked, whether it ever meets
     water or ground.
     """
-    z, mu, count = air[:3]
     out, track = np.empty(1), np.empty(2)
     # Rays still to be looked at, the next one last: elevation, height, blocked, meets.
     waiting = np.empty((4, 80))
@@ -180,10 +188,7 @@ def _cast(air, launch, low, high, top, finest, far, rays, marks):  # pragma: no 
         stack = 1
         waiting[0, 0] = angle
         waiting[1, 0], waiting[2, 0], waiting_marks[0] = _look(air, launch, angle, far, out, track)
-        waiting[3, 0] = 1.0
-        if not np.isnan(waiting[1, 0]):
-            s = count.size - 1
-            waiting[3, 0] = meets_surface(z[s], mu[s], count[s], track[0], track[1])
+        waiting[3, 0] = _meets(air, waiting[1, 0], track)
         while stack > 0:
             top_of = stack - 1
             b, hb = waiting[0, top_of], waiting[1, top_of]
@@ -202,12 +207,8 @@ def _cast(air, launch, low, high, top, finest, far, rays, marks):  # pragma: no 
                     bend = abs(h - 0.5 * (ha + hb))
                     straight = bend < _MISFIT + _MISFIT_SHARE * abs(hb - ha)
                     if not (arrive and alike and straight and mark == marks[size - 1]):
-                        meets = 1.0
-                        if not np.isnan(h):
-                            s = count.size - 1
-                            meets = meets_surface(z[s], mu[s], count[s], track[0], track[1])
                         waiting[0, stack], waiting[1, stack] = middle, h
-                        waiting[2, stack], waiting[3, stack] = blocked, meets
+                        waiting[2, stack], waiting[3, stack] = blocked, _meets(air, h, track)
                         waiting_marks[stack] = mark
                         stack += 1
                         continue
@@ -239,7 +240,6 @@ def _boundary(air, launch, a, b, far):  # pragma: no cover - compiled
 @njit(cache=True, nogil=True, error_model="numpy")
 def _horizon(air, launch, rays, size, far):  # pragma: no cover - compiled
     """Elevation of the highest ray that ever meets water or ground."""
-    z, mu, count = air[:3]
     last = -1
     for i in range(size):
         if rays[3, i] > 0.0:
@@ -248,11 +248,10 @@ def _horizon(air, launch, rays, size, far):  # pragma: no cover - compiled
         return rays[0, last] if last >= 0 else np.nan
     out, track = np.empty(1), np.empty(2)
     a, b = rays[0, last], rays[0, last + 1]
-    s = count.size - 1
     for _ in range(_HALVINGS):
         middle = 0.5 * (a + b)
         h, _, _ = _look(air, launch, middle, far, out, track)
-        if np.isnan(h) or meets_surface(z[s], mu[s], count[s], track[0], track[1]):
+        if _meets(air, h, track):
             a = middle
         else:
             b = middle
@@ -369,10 +368,12 @@ def _see_all(
 @njit(cache=True, nogil=True, error_model="numpy")
 def _mark_images(air, launch, far, rays, size, wanted, steepest, images):  # pragma: no cover
     """Count the directions in which a height appears; returns the highest, in which it is seen."""
-    found = -1
+    found, turn = -1, -1
     nearest, seen = np.inf, np.nan
     for i in range(1, size):
         a, b = rays[1, i - 1], rays[1, i]
+        if b == wanted and i + 1 < size and a < b and rays[1, i + 1] < b:
+            turn = i
         if not np.isnan(b) and abs(b - wanted) <= nearest:
             nearest, seen = abs(b - wanted), rays[0, i]
         if np.isnan(a) or np.isnan(b) or _is_steep(rays, i, steepest):
@@ -380,9 +381,20 @@ def _mark_images(air, launch, far, rays, size, wanted, steepest, images):  # pra
         if (a - wanted) * (b - wanted) < 0.0 or (a == wanted and b != wanted):
             images[0 if b > a else 1] += 1
             found = i
+    out, track = np.empty(1), np.empty(2)
+    if turn > 0:
+        # Its own fold ends there: the turn lies between the rays on both sides.
+        low, high = rays[0, turn - 1], rays[0, turn + 1]
+        while high - low > _SHARP:
+            one, two = low + 0.382 * (high - low), low + 0.618 * (high - low)
+            h = _look(air, launch, one, far, out, track)[0]
+            if h > _look(air, launch, two, far, out, track)[0]:
+                high = two
+            else:
+                low = one
+        return 0.5 * (low + high)
     if found < 0:
         return seen
-    out, track = np.empty(1), np.empty(2)
     low, high = rays[0, found - 1], rays[0, found]
     rising = rays[1, found] > rays[1, found - 1]
     for _ in range(_HALVINGS):
