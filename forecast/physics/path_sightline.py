@@ -162,11 +162,8 @@ def _critical(z, mu, count, radius, launch):  # pragma: no cover - compiled
     above = 0.0
     for s in range(count.size):
         layer, _, start = locate(z[s], mu[s], count[s], radius * np.log1p(launch / radius))
-        for i in range(count[s]):
-            if i <= layer:
-                below = max(below, start - mu[s, i])
-            else:
-                above = max(above, start - mu[s, i])
+        below = max(below, start - np.min(mu[s, : layer + 1]))
+        above = max(above, start - np.min(mu[s, layer + 1 : count[s]]))
     return below, above
 
 
@@ -184,9 +181,8 @@ def _cast(air, launch, low, high, top, finest, far, rays, marks):  # pragma: no 
     size = 0
     high_enough = _HIGH[0] * top + _HIGH[1]
     for k in range(_RAYS):
-        angle = low + (high - low) * k / (_RAYS - 1)
+        angle = waiting[0, 0] = low + (high - low) * k / (_RAYS - 1)
         stack = 1
-        waiting[0, 0] = angle
         waiting[1, 0], waiting[2, 0], waiting_marks[0] = _look(air, launch, angle, far, out, track)
         waiting[3, 0] = _meets(air, waiting[1, 0], track)
         while stack > 0:
@@ -358,11 +354,8 @@ def _see_all(
             state[c] = _SHUT
             continue
         floats[2, c] = _mark_images(air, launch, far, rays, size, highest, steepest, images[:, c])
-        if top == base:
-            clear = above_edge >= margin
-        else:
-            clear = extent >= min(margin, 0.999 * (top - base))
-        state[c] = _OPEN if clear else _GRAZING
+        shown, whole = (above_edge, margin) if top == base else (extent, 0.999 * (top - base))
+        state[c] = _OPEN if shown >= min(margin, whole) else _GRAZING
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
