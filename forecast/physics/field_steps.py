@@ -9,9 +9,12 @@ those at which halving both steps changes the field by less than `STEP_ERROR` wh
 
 from __future__ import annotations
 
-from typing import Any, NamedTuple
+from typing import NamedTuple
 
 import numpy as np
+
+from forecast.physics.field_air import average_index
+from forecast.physics.rays import Medium
 
 __all__ = [
     "FREQUENCIES",
@@ -35,11 +38,13 @@ STEP_ERROR = 0.1
 STANDARD_INDEX_GRADIENT = 1.18e-7
 
 _CLEAR_HEIGHTS = 60.0  # scale heights free of absorption at least
-_ABSORBING_HEIGHTS = 120.0  # scale heights of the absorber: 50 leave −100 dB of reflections
-_ANGLE_MARGIN = 2.0  # Nyquist angle over the steepest angle wanted
-_SCALE_ANGLES = 10.0
+_ABSORBING_HEIGHTS = 100.0  # scale heights of the absorber: with 50, −100 dB come back
+_ANGLE_MARGIN = 3.25  # Nyquist angle over the steepest angle wanted
+_SCALE_ANGLES = 8.0
 _RANGE_SHARE = 1.0 / 60.0  # range step over the scale range
-_DUCT_PHASE = 1.5  # k θ² Δx of a ray at the critical angle of the strongest duct, rad
+_DUCT_PHASE = 1.0  # k θ² Δx of a ray at the critical angle of the strongest duct, rad
+_GRATING = 0.75  # of the Nyquist angle; waves above are filtered out
+_MOST_GRATING = 40.0  # scale angles: the grating is weak beyond
 _MOST_POINTS = 2**20
 
 
@@ -47,8 +52,9 @@ class FieldSteps(NamedTuple):
     """Grid of a field; all lengths in m.
 
     ``height_step`` is λ / (2 sin θ) with θ the steepest angle that the grid can hold; the field is
-    launched evenly up to ``max_angle`` (rad) and fades out above it. ``points`` heights reach to
-    the top; waves are absorbed above ``clear_height``; without ``absorber`` the top is a mirror.
+    launched evenly up to ``max_angle`` (rad) and fades out towards half of θ. ``points`` heights
+    reach to the top; waves are absorbed above ``clear_height``; without ``absorber`` the top is a
+    mirror.
     """
 
     range_step: float
@@ -94,26 +100,31 @@ def field_scales(frequency: float, gradient: float = STANDARD_INDEX_GRADIENT) ->
     return height, 2.0 * k * height**2, 1.0 / (k * height)
 
 
-def duct_scales(height: Any, index: Any) -> tuple[float, float]:
+def duct_scales(medium: Medium, frequency: float) -> tuple[float, float]:
     """Height up to which rays can be turned back, m, and the steepest critical angle, rad.
 
     Parameters
     ----------
-    height, index : ndarray
-        Height (m) and modified index minus 1, shape (profile, node), rising.
+    medium : Medium
+        Air.
+    frequency : float
+        Hz; what is thinner than a quarter of the scale height is not felt by the wave.
 
     Returns
     -------
     tuple of float
-        Highest node at which the index is less than somewhere below, and ``√(2 Δm)`` of the
-        greatest such fall; zeros without a duct.
+        Top of the highest trapping layer, and ``√(2 Δm)`` of the greatest fall of the modified
+        index from somewhere below; zeros without a trapping layer.
     """
-    fall = np.maximum.accumulate(index, axis=-1) - index
     # Less than a hundredth of an M-unit turns back nothing that a grid could tell.
-    turned = fall > 1e-8
-    if not np.any(turned):
+    falls = np.diff(np.nan_to_num(medium.mu, nan=np.inf)) < -2e-8
+    if not np.any(falls):
         return 0.0, 0.0
-    return float(np.max(np.where(turned, height, 0.0))), float(np.sqrt(2.0 * np.max(fall)))
+    top = float(np.max(np.where(falls, medium.z[:, 1:], 0.0)))
+    cell = max(0.25 * field_scales(frequency)[0], top / 20000.0)
+    index = average_index(medium, cell, int(top / cell) + 3)
+    fall = np.maximum.accumulate(index, axis=-1) - index
+    return top, float(np.sqrt(2.0 * np.max(fall)))
 
 
 def find_needs(
@@ -153,7 +164,9 @@ def find_needs(
     absorber = max(_ABSORBING_HEIGHTS * scale, 0.5 * clear)
     top = clear + absorber
     near = float(ranges.min())
-    steep = np.arctan2(antenna_height + float(receiver_heights.max()) + 2.0 * relief, near)
+    # Straight, by the ground, or by the highest trapping layer.
+    climb = antenna_height + float(receiver_heights.max()) + 2.0 * max(relief, duct_top)
+    steep = np.arctan2(climb, near)
     angle = max(
         float(steep) + 2.0 * min(np.sqrt(wavelength / near), 0.1),
         _SCALE_ANGLES * scale_angle,
@@ -163,9 +176,12 @@ def find_needs(
     )
     angle = min(angle, 0.5)
     step = scale_range * _RANGE_SHARE
+    nyquist = min(np.sin(min(_ANGLE_MARGIN * angle, 0.5 * np.pi)), 0.95)
     if duct_angle > 0.0:
         step = min(step, _DUCT_PHASE * wavelength / (2.0 * np.pi * duct_angle**2))
-    nyquist = min(np.sin(min(_ANGLE_MARGIN * angle, 0.5 * np.pi)), 0.95)
+        # Steps are a grating, which leads waves out of a duct at √(2λ/Δx): beyond those kept.
+        grating = min(_GRATING * nyquist, _MOST_GRATING * scale_angle)
+        step = min(step, 2.0 * wavelength / grating**2)
     return Needs(step, wavelength / (2.0 * nyquist), clear, absorber, angle)
 
 
@@ -231,7 +247,7 @@ def check_steps(steps: FieldSteps, needs: Needs, highest: float) -> None:
         raise ValueError(
             f"propagate: range step {steps.range_step:.4g} m too coarse; at most {most:.4g} m"
         )
-    most = min(_ANGLE_MARGIN, 1.6) * needs.height_step
+    most = 1.6 * needs.height_step
     if not 0.0 < steps.height_step <= most * (1.0 + 1e-9):
         raise ValueError(
             f"propagate: height step {steps.height_step:.4g} m too coarse; at most {most:.4g} m"

@@ -131,7 +131,7 @@ def propagate(
     receivers = np.atleast_1d(np.asarray(receiver_heights, dtype=float))
     _check(frequency, antenna_height, ranges, receivers, earth_radius, beam)
     medium, cases, stations = _read_air(height, modified, profile_ranges, earth_radius)
-    ducts = duct_scales(np.nan_to_num(medium.z), 0.5 * np.nan_to_num(medium.mu, nan=1.0))
+    ducts = duct_scales(medium, frequency)
     needs = find_needs(frequency, antenna_height, receivers, ranges, *ducts)
     steps = choose_steps(needs, ranges[-1]) if steps is None else steps
     check_steps(steps, needs, max(antenna_height, float(receivers.max())))
@@ -238,9 +238,9 @@ class _Path:
         self.fade = np.ones(points)
         self.loss = np.ones(points)
         if steps.absorber:
-            # Waves near the Nyquist angle would come down again as others: let them die out.
-            edge = np.clip((q / nyquist - 0.9) / 0.1, 0.0, 1.0)
-            self.fade = np.exp(-0.5 * edge**2)
+            # Near the Nyquist angle the product with the index folds back: no such waves. The
+            # filter is smooth, as a sharp one would spread strong fields into shadows.
+            self.fade = np.exp(-3e4 * (q / nyquist) ** 32)
             height = steps.height_step * np.arange(1, points + 1)
             depth = steps.top - steps.clear_height
             s = np.clip((height - steps.clear_height) / depth, 0.0, 1.0)
@@ -268,10 +268,13 @@ class _Path:
 
     def _pattern(self, sine: np.ndarray) -> np.ndarray:
         """Amplitude of the plane waves at sines of elevation (signed), faded above max_angle."""
+        from scipy.special import erfc
+
         steep = np.sin(self.steps.max_angle)
         nyquist = np.pi / self.steps.height_step / self.k
-        out = np.clip((np.abs(sine) - steep) / max(0.95 * nyquist - steep, 1e-12), 0.0, 1.0)
-        out = np.cos(0.5 * np.pi * out) ** 2 * np.maximum(1.0 - sine**2, 1e-3) ** -0.25
+        out = np.clip((np.abs(sine) - steep) / max(0.5 * nyquist - steep, 1e-12), 0.0, 1.0)
+        # As smooth as can be: a corner here shines into the deep shadow from far above the source.
+        out = 0.5 * erfc(8.0 * out - 4.0) * np.maximum(1.0 - sine**2, 1e-3) ** -0.25
         off = sine - np.sin(self.beam.tilt)
         half = np.sin(0.5 * self.beam.width)
         if self.beam.kind == "gaussian":

@@ -15,6 +15,7 @@ from tests.physics.field_references import (
     residue_series,
     two_ray_flat,
 )
+from tests.physics.mode_references import Air, spectral_field
 
 FLAT = 1e15  # m: an Earth without curvature
 LEVELS = np.array([0.0, 100e3])
@@ -161,3 +162,91 @@ class TestBadInput:
         low = field(3e9, 25.0, 20.0, 50e3).steps
         with pytest.raises(ValueError, match=r"above the domain.* m needed"):
             field(3e9, 5000.0, 20.0, 50e3, steps=low)
+
+
+class TestDucts:
+    """Bilinear M: falls by ``strength`` over ``depth``, then rises by 0.118 per m."""
+
+    @staticmethod
+    def air(depth, strength):
+        height = np.array([0.0, depth, 100e3])
+        return height, np.array([strength, 0.0, 0.118 * (100e3 - depth)])
+
+    @pytest.mark.parametrize(
+        ("depth", "strength", "frequency", "expected"),
+        [
+            (20.0, 5.0, 2.666325917e9, 0.1684532176),
+            (20.0, 5.0, 3.332907396e9, 0.05848235748),
+            (20.0, 5.0, 1.999744438e9, 0.3865410034),
+            (50.0, 15.0, 0.6157615943e9, 0.1046114849),
+            (50.0, 15.0, 0.7697019929e9, 0.03330458432),
+            (200.0, 30.0, 0.1088522997e9, 0.05345233626),
+            (200.0, 30.0, 0.1360653746e9, 0.02216992517),
+        ],
+    )
+    def test_the_first_mode_loses_what_theory_says(self, depth, strength, frequency, expected):
+        """dB/km of the exact first mode, computed with mpmath's Airy functions and Muller's root.
+
+        From far away only that mode is left, if the next ones lose much more.
+        """
+        height, modified = self.air(depth, strength)
+        ranges = np.array([250e3, 350e3])
+        result = field(frequency, 0.6 * depth, 0.6 * depth, ranges, modified, height)
+        one, other = result.propagation_factor[0, :, 0] - 10.0 * np.log10(ranges)
+        assert (one - other) / 100.0 == pytest.approx(expected, rel=0.05)
+
+    @pytest.mark.parametrize(
+        ("depth", "strength", "frequency"),
+        [
+            (20.0, 5.0, 3e9),
+            (20.0, 5.0, 10e9),
+            (50.0, 15.0, 1e9),
+            (50.0, 15.0, 3e9),
+            (200.0, 30.0, 0.3e9),
+            (200.0, 30.0, 1e9),
+            (20.0, 40.0, 3e9),
+        ],
+    )
+    def test_field_at_100_km(self, depth, strength, frequency):
+        height, modified = self.air(depth, strength)
+        receivers = depth * np.array([0.2, 0.5, 0.8])
+        expected = spectral_field(
+            frequency,
+            Air(height[:2], modified[:2], 0.118),
+            0.6 * depth,
+            receivers,
+            100e3,
+        )
+        result = field(frequency, 0.6 * depth, receivers, 100e3, modified, height)
+        np.testing.assert_allclose(result.propagation_factor[0, 0], expected, atol=0.5)
+
+
+def evaporation_duct(depth):
+    """Logarithmic M with its least value at ``depth`` (Paulus–Jeske form, neutral air)."""
+    height = np.r_[0.0, np.geomspace(0.1, 60.0, 40), 100.0, 1000.0, 20e3]
+    return height, 330.0 + 0.125 * (height - depth * np.log1p(height / 1.5e-4))
+
+
+class TestSteps:
+    @pytest.mark.parametrize("frequency", [0.1e9, 1e9, 3e9, 10e9])
+    @pytest.mark.parametrize("air", ["standard", "surface duct", "evaporation duct"])
+    def test_halving_both_changes_little(self, frequency, air):
+        """Less than 0.1 dB wherever the field is above −80 dB re free space."""
+        height, modified = {
+            "standard": (LEVELS, STANDARD),
+            "surface duct": TestDucts.air(60.0, 12.0),
+            "evaporation duct": evaporation_duct(14.0),
+        }[air]
+        ranges = np.array([20e3, 50e3, 80e3])
+        receivers = np.array([4.0, 30.0, 100.0])
+        coarse = field(frequency, 20.0, receivers, ranges, modified, height)
+        steps = coarse.steps
+        finer = steps._replace(
+            range_step=0.5 * steps.range_step,
+            height_step=0.5 * steps.height_step,
+            points=2 * steps.points + 1,
+        )
+        fine = field(frequency, 20.0, receivers, ranges, modified, height, steps=finer)
+        heard = fine.propagation_factor > -80.0
+        apart = np.abs(coarse.propagation_factor - fine.propagation_factor)
+        assert apart[heard].max() < 0.1
