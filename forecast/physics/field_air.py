@@ -86,10 +86,10 @@ def _average(z, value, count, edges, out):  # pragma: no cover - compiled
             low = high
 
 
-@njit(cache=True, nogil=True, fastmath=False)
+@njit(cache=True, nogil=True)
 def apply_screen(
     field: Any, index: Any, profile: int, share: float, first: float, phase: float, tilt: float,
-    loss: Any,
+    start: float, loss: Any,
 ) -> None:  # fmt: skip # pragma: no cover - compiled
     """Multiply a field by the phase and the loss of one range step, in place.
 
@@ -100,26 +100,26 @@ def apply_screen(
     index : ndarray
         Modified index against the reference, shape (case, profile, height).
     profile : int
-        The profile just behind; ``share`` (0…1) of the way to the next.
+        The profile just behind.
     share : float
-        As above.
+        Share of the way to the next, 0…1.
     first : float
         Height of the field's first value in steps of the index's grid.
     phase : float
         Phase per unit of index, rad.
-    tilt : float
-        Phase per step of height, rad, where the ground changes its slope.
+    tilt, start : float
+        Phase per step of height, and at the first, rad, where the ground changes its slope.
     loss : ndarray
         Factor at each height.
     """
-    start = int(first)
-    part = first - start
+    base = int(first)
+    part = first - base
     after = min(profile + 1, index.shape[1] - 1)
     for c in range(field.shape[0]):
         for n in range(field.shape[1]):
-            i = start + n
+            i = base + n
             j = min(i + 1, index.shape[2] - 1)
             here = (1.0 - part) * index[c, profile, i] + part * index[c, profile, j]
             ahead = (1.0 - part) * index[c, after, i] + part * index[c, after, j]
-            angle = phase * ((1.0 - share) * here + share * ahead) + tilt * (n + 1)
-            field[c, n] *= loss[n] * (np.cos(angle) + 1j * np.sin(angle))
+            angle = phase * ((1.0 - share) * here + share * ahead) + start + tilt * n
+            field[c, n] *= loss[n] * complex(np.cos(angle), np.sin(angle))

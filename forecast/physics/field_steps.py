@@ -40,6 +40,7 @@ STANDARD_INDEX_GRADIENT = 1.18e-7
 _CLEAR_HEIGHTS = 60.0  # scale heights free of absorption at least
 _ABSORBING_HEIGHTS = 100.0  # scale heights of the absorber: with 50, −100 dB come back
 _ANGLE_MARGIN = 3.25  # Nyquist angle over the steepest angle wanted
+_IMPEDANCE_MARGIN = 4.0
 _SCALE_ANGLES = 8.0
 _RANGE_SHARE = 1.0 / 60.0  # range step over the scale range
 _DUCT_PHASE = 1.0  # k θ² Δx of a ray at the critical angle of the strongest duct, rad
@@ -117,7 +118,8 @@ def duct_scales(medium: Medium, frequency: float) -> tuple[float, float]:
         index from somewhere below; zeros without a trapping layer.
     """
     # Less than a hundredth of an M-unit turns back nothing that a grid could tell.
-    falls = np.diff(np.nan_to_num(medium.mu, nan=np.inf)) < -2e-8
+    valid = np.arange(medium.mu.shape[1] - 1) < medium.count[:, None] - 1
+    falls = valid & (np.diff(np.nan_to_num(medium.mu)) < -2e-8)
     if not np.any(falls):
         return 0.0, 0.0
     top = float(np.max(np.where(falls, medium.z[:, 1:], 0.0)))
@@ -134,8 +136,10 @@ def find_needs(
     ranges: np.ndarray,
     duct_top: float,
     duct_angle: float,
-    relief: float = 0.0,
     slope: float = 0.0,
+    spacing: float = np.inf,
+    impedance: bool = False,
+    edges: bool = False,
 ) -> Needs:
     """Steps at which the limits of the module are met.
 
@@ -144,12 +148,15 @@ def find_needs(
     frequency : float
         Hz.
     antenna_height, receiver_heights, ranges : float, ndarray, ndarray
-        m.
+        m; heights above the lowest ground.
     duct_top, duct_angle : float
         Of `duct_scales`.
-    relief, slope : float
-        Terrain: depth of the lowest ground below the datum of heights, m, and greatest change of
-        slope, m per m.
+    slope, spacing : float
+        Of terrain: greatest change of slope, m per m, and distance between its points, m.
+    impedance : bool
+        Whether the surface is one, whose image of a wave is good to a third of Nyquist's angle.
+    edges : bool
+        Whether screens stand in the way, whose tops are known to a part of a height step only.
 
     Returns
     -------
@@ -157,7 +164,7 @@ def find_needs(
     """
     wavelength = LIGHT_SPEED / frequency
     scale, scale_range, scale_angle = field_scales(frequency)
-    highest = max(antenna_height, float(receiver_heights.max()), duct_top) + relief
+    highest = max(antenna_height, float(receiver_heights.max()), duct_top)
     # The first Fresnel zone of the longest path must stay clear as well.
     clear = max(highest + 0.5 * _CLEAR_HEIGHTS * scale, _CLEAR_HEIGHTS * scale)
     clear = max(clear, highest + np.sqrt(wavelength * ranges.max()))
@@ -165,23 +172,26 @@ def find_needs(
     top = clear + absorber
     near = float(ranges.min())
     # Straight, by the ground, or by the highest trapping layer.
-    climb = antenna_height + float(receiver_heights.max()) + 2.0 * max(relief, duct_top)
+    climb = antenna_height + float(receiver_heights.max()) + 2.0 * duct_top
     steep = np.arctan2(climb, near)
     angle = max(
         float(steep) + 2.0 * min(np.sqrt(wavelength / near), 0.1),
         _SCALE_ANGLES * scale_angle,
         0.5 * np.sqrt(2.0 * STANDARD_INDEX_GRADIENT * top) + duct_angle,
         2.0 * duct_angle,
-        duct_angle + 1.5 * slope + 3.0 * scale_angle,
+        duct_angle + 2.0 * slope + 4.0 * scale_angle,
     )
     angle = min(angle, 0.5)
-    step = scale_range * _RANGE_SHARE
-    nyquist = min(np.sin(min(_ANGLE_MARGIN * angle, 0.5 * np.pi)), 0.95)
+    step = min(scale_range * _RANGE_SHARE, spacing)
+    margin = _IMPEDANCE_MARGIN if impedance else _ANGLE_MARGIN
+    nyquist = min(np.sin(min(margin * angle, 0.5 * np.pi)), 0.95)
     if duct_angle > 0.0:
         step = min(step, _DUCT_PHASE * wavelength / (2.0 * np.pi * duct_angle**2))
         # Steps are a grating, which leads waves out of a duct at √(2λ/Δx): beyond those kept.
         grating = min(_GRATING * nyquist, _MOST_GRATING * scale_angle)
         step = min(step, 2.0 * wavelength / grating**2)
+    if edges:
+        nyquist = min(2.0 * nyquist, 0.95)
     return Needs(step, wavelength / (2.0 * nyquist), clear, absorber, angle)
 
 

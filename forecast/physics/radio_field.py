@@ -15,14 +15,13 @@ is that of a point source at every angle.
 from __future__ import annotations
 
 import os
-from concurrent.futures import ThreadPoolExecutor
-from itertools import pairwise
 from typing import Any, NamedTuple
 
 import numpy as np
 
+from forecast.physics.curvature import reference_refractivity
 from forecast.physics.earth import MEAN_EARTH_RADIUS
-from forecast.physics.field_air import apply_screen, average_index
+from forecast.physics.field_march import Beam, March, Source
 from forecast.physics.field_steps import (
     FREQUENCIES,
     LIGHT_SPEED,
@@ -32,26 +31,18 @@ from forecast.physics.field_steps import (
     duct_scales,
     find_needs,
 )
+from forecast.physics.field_surface import (
+    Surface,
+    effective_impedance,
+    grazing_angles,
+    sea_permittivity,
+)
+from forecast.physics.field_terrain import Terrain, check_terrain, follow_ground, ground_scales
 from forecast.physics.rays import Medium, build_medium
 
-__all__ = ["Beam", "FieldSteps", "RadioField", "propagate"]
+__all__ = ["Beam", "FieldSteps", "RadioField", "Surface", "Terrain", "propagate"]
 
-_TAPS = 12  # points of the interpolation between heights
-_BLOCK_BYTES = 600e3  # of one block's field: two of them fit a core's own cache
-_SINC_HALF = 1.3915574  # sin(x)/x = √½
-_LOG_FLOOR = 1e-30
-
-
-class Beam(NamedTuple):
-    """Antenna pattern in the vertical: ``kind`` omni, gaussian or sinc (uniform aperture).
-
-    ``width`` is the full width between half-power points and ``tilt`` the elevation of the axis,
-    rad. The field is measured against that on the axis in free space.
-    """
-
-    kind: str = "omni"
-    width: float = np.pi
-    tilt: float = 0.0
+_FLOOR = 1e-15  # −300 dB, far below what the arithmetic can tell
 
 
 class RadioField(NamedTuple):
@@ -81,10 +72,14 @@ def propagate(
     *,
     distance: Any,
     receiver_heights: Any,
+    polarisation: str = "horizontal",
+    surface: Surface | None = None,
     beam: Beam | None = None,
+    terrain: Terrain | None = None,
     profile_ranges: Any = None,
     earth_radius: float = MEAN_EARTH_RADIUS,
     steps: FieldSteps | None = None,
+    reference: bool = False,
     threads: int | None = None,
 ) -> RadioField:
     """Propagation factor and path loss through a batch of profiles.
@@ -106,14 +101,23 @@ def propagate(
         Ranges at which the field is wanted, along the surface, m, rising; the last is the end.
     receiver_heights : array_like
         m.
+    polarisation : {"horizontal", "vertical"}
+        Horizontally polarised waves meet a smooth surface as a mirror, whatever it is made of:
+        true to ``2 sin ψ / √(ε − 1)`` of the image at a grazing angle ψ.
+    surface : Surface, optional
+        Default: smooth sea water of 15 °C and 35 g/kg.
     beam : Beam, optional
         Default: even in all directions.
+    terrain : Terrain, optional
+        Ground and knife edges; heights of all antennas count from its datum, that of M.
     profile_ranges : array_like, optional
         Ranges of the profiles, m, rising; M is linear in range between them and constant outside.
     earth_radius : float
         m.
     steps : FieldSteps, optional
         Default: chosen from the error limits of `forecast.physics.field_steps`.
+    reference : bool
+        Compute the ITU mean reference atmosphere along, for ``excess``.
     threads : int, optional
         Threads over blocks of cases; default all.
 
@@ -130,19 +134,52 @@ def propagate(
     ranges = np.atleast_1d(np.asarray(distance, dtype=float))
     receivers = np.atleast_1d(np.asarray(receiver_heights, dtype=float))
     _check(frequency, antenna_height, ranges, receivers, earth_radius, beam)
-    medium, cases, stations = _read_air(height, modified, profile_ranges, earth_radius)
-    ducts = duct_scales(medium, frequency)
-    needs = find_needs(frequency, antenna_height, receivers, ranges, *ducts)
-    steps = choose_steps(needs, ranges[-1]) if steps is None else steps
-    check_steps(steps, needs, max(antenna_height, float(receivers.max())))
-    path = _Path(
-        medium, cases, stations, frequency, antenna_height, ranges, receivers, beam or Beam(),
-        earth_radius, steps,
+    if polarisation not in ("horizontal", "vertical"):
+        raise ValueError(f"propagate: polarisation {polarisation!r}; horizontal or vertical")
+    if surface is not None and not (
+        np.isfinite(surface.permittivity) and abs(surface.permittivity) > 1.0
+        and complex(surface.permittivity).imag >= 0.0 and 0.0 <= surface.roughness < 100.0
+    ):  # fmt: skip
+        raise ValueError(f"propagate: {surface}; losses are positive imaginary, roughness in m")
+    surface = surface or Surface(complex(sea_permittivity(frequency)))
+    air = _read_air(height, modified, profile_ranges, earth_radius, reference)
+    lowest, slope, spacing, edges = 0.0, 0.0, np.inf, False
+    if terrain is not None:
+        check_terrain(terrain, ranges[-1], antenna_height)
+        lowest, slope, spacing, edges = ground_scales(terrain)
+    mirror = polarisation == "horizontal" and surface.roughness == 0.0
+    duct_top, duct_angle = duct_scales(air.medium, frequency)
+    needs = find_needs(
+        frequency, antenna_height - lowest, receivers - lowest, ranges, duct_top, duct_angle,
+        slope, spacing, not mirror, edges,
     )  # fmt: skip
-    factor, energy = path.run(threads or os.cpu_count() or 1)
-    slant = path.slant
+    steps = choose_steps(needs, ranges[-1]) if steps is None else steps
+    check_steps(steps, needs, max(antenna_height, float(receivers.max())) - lowest)
+    count = round(ranges[-1] / steps.range_step) or 1
+    relief = follow_ground(terrain, count, ranges[-1] / count)
+    impedances = None
+    if not mirror:
+        nodes = ranges[-1] / count * np.arange(count + 1)
+        grazing = grazing_angles(frequency, antenna_height - relief.ground[0], nodes, duct_angle)
+        impedances = effective_impedance(surface, frequency, polarisation, grazing)
+    source = Source(frequency, antenna_height, beam or Beam())
+    march = March(air.medium, air.stations, source, ranges, receivers, steps, relief, impedances)
+    value, energy = march.run(threads or os.cpu_count() or 1)
+    turn = 4.0 * (earth_radius + antenna_height) * (earth_radius + receivers)
+    arc = np.sin(0.5 * ranges[:, None] / earth_radius) ** 2
+    slant = np.sqrt((receivers - antenna_height) ** 2 + turn * arc)
+    ground = np.interp(ranges, ranges[-1] / count * np.arange(count + 1), relief.true_ground)
+    climb = antenna_height + receivers - 2.0 * lowest
+    dark = np.arctan2(climb, ranges[:, None]) > steps.max_angle * (1.0 + 1e-9)
+    dark |= receivers < ground[:, None]
+    factor = np.abs(value) * slant / np.sqrt(ranges[:, None])
+    factor = np.where(dark, np.nan, 20.0 * np.log10(np.maximum(factor, _FLOOR)))
+    excess = None
+    if reference:
+        excess = factor[:-1] - factor[-1]
+        factor, energy = factor[:-1], energy[:-1]
     free = 20.0 * np.log10(4.0 * np.pi * frequency / LIGHT_SPEED * slant)
-    return RadioField(ranges, receivers, factor, free - factor, None, energy, steps)
+    return RadioField(ranges, receivers, factor, free - factor, excess, energy, steps)
 
 
 def _check(
@@ -169,10 +206,16 @@ def _check(
             raise ValueError(f"propagate: beam width {beam.width}, tilt {beam.tilt} rad")
 
 
+class _Air(NamedTuple):
+    """Columns (case × profile), the reference atmosphere as a last case if asked for."""
+
+    medium: Medium
+    stations: np.ndarray
+
+
 def _read_air(
-    height: Any, modified: Any, profile_ranges: Any, radius: float
-) -> tuple[Medium, int, np.ndarray]:
-    """Air as one batch of columns (case × profile), number of cases, ranges of the profiles."""
+    height: Any, modified: Any, profile_ranges: Any, radius: float, reference: bool
+) -> _Air:
     m = np.asarray(modified, dtype=float)
     stations = np.zeros(1)
     if profile_ranges is None:
@@ -201,154 +244,17 @@ def _read_air(
         raise ValueError("propagate: M implies a refractivity beyond 100000 N-units")
     flat = z.reshape(-1, m.shape[2])
     refractivity = m.reshape(flat.shape) - 1e6 * flat / radius
+    if reference:
+        # Straight between 60 levels it would lie a tenth of a dB off at −60 dB.
+        levels = np.geomspace(1.0, 60e3, 600) - 1.0
+        z_all = np.full((flat.shape[0] + stations.size, max(flat.shape[1], levels.size)), np.nan)
+        n_all = z_all.copy()
+        z_all[: flat.shape[0], : flat.shape[1]] = flat
+        n_all[: flat.shape[0], : flat.shape[1]] = refractivity
+        z_all[flat.shape[0] :, : levels.size] = levels
+        n_all[flat.shape[0] :, : levels.size] = reference_refractivity(levels)
+        flat, refractivity = z_all, n_all
     medium = build_medium(flat, refractivity, radius)
     if np.any(medium.count == 0):
         raise ValueError("propagate: a profile has fewer than two levels of rising height")
-    return medium, m.shape[0], stations
-
-
-class _Path:
-    """One path's grid and the marching of blocks of cases over it."""
-
-    def __init__(
-        self, medium: Medium, cases: int, stations: np.ndarray, frequency: float, antenna: float,
-        ranges: np.ndarray, receivers: np.ndarray, beam: Beam, radius: float, steps: FieldSteps,
-    ) -> None:  # fmt: skip
-        self.steps, self.stations, self.ranges, self.beam = steps, stations, ranges, beam
-        self.count = round(ranges[-1] / steps.range_step) or 1
-        self.step = ranges[-1] / self.count
-        points = steps.points
-        index = average_index(medium, steps.height_step, points + 2)
-        self.source = radius * np.log1p(antenna / radius)
-        here = round(self.source / steps.height_step)
-        reference = float(np.mean(index[:, min(here, points)]))
-        self.k = 2.0 * np.pi * frequency / LIGHT_SPEED * (1.0 + reference)
-        index = (index - reference) / (1.0 + reference)
-        self.index = index.reshape(cases, stations.size, points + 2)
-        self.receivers = radius * np.log1p(receivers / radius)
-        turn = 4.0 * (radius + antenna) * (radius + receivers)
-        arc = np.sin(0.5 * ranges[:, None] / radius) ** 2
-        self.slant = np.sqrt((receivers - antenna) ** 2 + turn * arc)
-        steep = np.arctan2(receivers + antenna, ranges[:, None]) > steps.max_angle * (1.0 + 1e-9)
-        self.hidden = steep
-        q = np.pi / steps.top / self.k * np.arange(1, points + 1)
-        self.sine = q
-        nyquist = np.pi / steps.height_step / self.k
-        self.root = np.sqrt(np.maximum(1.0 - q**2, 0.0)) - 1.0
-        self.fade = np.ones(points)
-        self.loss = np.ones(points)
-        if steps.absorber:
-            # Near the Nyquist angle the product with the index folds back: no such waves. The
-            # filter is smooth, as a sharp one would spread strong fields into shadows.
-            self.fade = np.exp(-3e4 * (q / nyquist) ** 32)
-            height = steps.height_step * np.arange(1, points + 1)
-            depth = steps.top - steps.clear_height
-            s = np.clip((height - steps.clear_height) / depth, 0.0, 1.0)
-            # 240 dB for the steepest wave, up and down again.
-            rate = 28.0 * nyquist / depth
-            self.loss = np.exp(-rate * self.step * s**2 * (3.0 - 2.0 * s))
-
-    def run(self, threads: int) -> tuple[np.ndarray, np.ndarray]:
-        """Propagation factor (case, range, height), dB, and energy (case, range)."""
-        cases = self.index.shape[0]
-        most = max(1, int(_BLOCK_BYTES / (16 * self.steps.points)))
-        blocks = max(-(-cases // most), min(threads, cases))
-        edges = np.linspace(0, cases, blocks + 1).round().astype(int)
-        parts = [slice(a, b) for a, b in pairwise(edges)]
-        if threads == 1 or blocks == 1:
-            done = [self._march(self.index[part]) for part in parts]
-        else:
-            with ThreadPoolExecutor(min(threads, blocks)) as pool:
-                done = list(pool.map(lambda part: self._march(self.index[part]), parts))
-        value = np.concatenate([d[0] for d in done])
-        energy = np.concatenate([d[1] for d in done])
-        scale = np.sqrt(2.0 * np.pi / self.k) * self.slant / np.sqrt(self.ranges[:, None])
-        factor = 20.0 * np.log10(np.maximum(np.abs(value) * scale, _LOG_FLOOR))
-        return np.where(self.hidden, np.nan, factor), energy
-
-    def _pattern(self, sine: np.ndarray) -> np.ndarray:
-        """Amplitude of the plane waves at sines of elevation (signed), faded above max_angle."""
-        from scipy.special import erfc
-
-        steep = np.sin(self.steps.max_angle)
-        nyquist = np.pi / self.steps.height_step / self.k
-        out = np.clip((np.abs(sine) - steep) / max(0.5 * nyquist - steep, 1e-12), 0.0, 1.0)
-        # As smooth as can be: a corner here shines into the deep shadow from far above the source.
-        out = 0.5 * erfc(8.0 * out - 4.0) * np.maximum(1.0 - sine**2, 1e-3) ** -0.25
-        off = sine - np.sin(self.beam.tilt)
-        half = np.sin(0.5 * self.beam.width)
-        if self.beam.kind == "gaussian":
-            out *= np.exp(-0.5 * np.log(2.0) * (off / half) ** 2)
-        elif self.beam.kind == "sinc":
-            out *= np.sinc(_SINC_HALF / np.pi * off / half)
-        return out
-
-    def _launch(self) -> np.ndarray:
-        """Amplitudes of sin(p z) of the source and its negative image, (height,)."""
-        turn = np.exp(1j * self.k * self.sine * self.source)
-        down, up = self._pattern(-self.sine), self._pattern(self.sine)
-        return -1j / self.steps.top * (down * turn - up / turn)
-
-    def _march(self, index: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """Complex field at receivers (case, range, height), and energy (case, range)."""
-        from scipy.fft import dst
-
-        cases, points = index.shape[0], self.steps.points
-        norm = np.sqrt(0.5 * (points + 1))  # sum of sines to the orthonormal transform
-        launch = norm * self._launch()
-        field = np.repeat(dst(launch, type=1, norm="ortho")[None], cases, axis=0)
-        start = float(np.sum(np.abs(launch) ** 2))
-        advance = np.exp(1j * self.k * self.step * self.root) * self.fade
-        out = np.empty((cases, self.ranges.size, self.receivers.size), dtype=complex)
-        energy = np.empty((cases, self.ranges.size))
-        taps, weights = self._taps(self.receivers)
-        stop = np.ceil(self.ranges / self.step - 1e-9).astype(int) - 1  # step that holds a range
-        still = self._screen(index, 1.0) if self.stations.size == 1 else None
-        field *= self._screen(index, 0.5, 0.0)
-        done = 0
-        for j in range(self.count):
-            wave = dst(field, type=1, norm="ortho", overwrite_x=True)
-            while done < self.ranges.size and stop[done] == j:
-                part = self.ranges[done] - j * self.step
-                there = wave * np.exp(1j * self.k * part * self.root)
-                energy[:, done] = np.sum(np.abs(there) ** 2, axis=1) / start
-                there = dst(there, type=1, norm="ortho", overwrite_x=True)
-                out[:, done] = np.sum(there[:, taps] * weights, axis=-1)
-                done += 1
-            if j + 1 == self.count:
-                break
-            wave *= advance
-            field = dst(wave, type=1, norm="ortho", overwrite_x=True)
-            if still is None:
-                profile, share = self._station((j + 1) * self.step)
-                apply_screen(field, index, profile, share, 1.0, self.k * self.step, 0.0, self.loss)
-            else:
-                field *= still
-        return out, energy
-
-    def _station(self, x: float) -> tuple[int, float]:
-        """Profile just behind a range and the share of the way to the next."""
-        at = float(np.interp(x, self.stations, np.arange(self.stations.size)))
-        profile = int(at)
-        return profile, at - profile
-
-    def _screen(self, index: np.ndarray, share: float, x: float = 0.0) -> np.ndarray:
-        """Factor of a share of one range step at range x, (case, height)."""
-        out = np.ones((index.shape[0], self.steps.points), dtype=complex)
-        profile, weight = self._station(x)
-        phase = share * self.k * self.step
-        apply_screen(out, index, profile, weight, 1.0, phase, 0.0, self.loss**share)
-        return out
-
-    def _taps(self, heights: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """Grid points around heights and Lagrange's weights, the field being odd in height."""
-        at = heights / self.steps.height_step
-        near = np.floor(at).astype(int)[:, None] - (_TAPS // 2 - 1) + np.arange(_TAPS)
-        node = np.arange(_TAPS)
-        apart = (node[:, None] - node).astype(float) + np.eye(_TAPS)
-        gap = (at[:, None] - near)[:, None, :] + np.zeros((_TAPS, 1))
-        gap[:, node, node] = 1.0
-        weights = np.prod(gap, axis=-1) / np.prod(apart, axis=1)
-        weights = weights * np.sign(near)
-        inside = np.abs(near) <= self.steps.points
-        return np.clip(np.abs(near) - 1, 0, self.steps.points - 1), weights * inside
+    return _Air(medium, stations)
